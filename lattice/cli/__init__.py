@@ -1,0 +1,1 @@
+"""Command line: the only place that names MPI.COMM_WORLD."""

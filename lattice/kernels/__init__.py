@@ -1,0 +1,1 @@
+"""Kernels: generated loops over one padded block, free of MPI."""

@@ -1,0 +1,1 @@
+"""Laws: formulas in subscript notation, read into equations and derived by SymPy."""

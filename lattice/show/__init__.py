@@ -1,0 +1,1 @@
+"""Show: pictures and printed summaries of states."""

@@ -1,0 +1,1 @@
+"""Solve: the Newton driver on PETSc SNES and its preconditioners."""

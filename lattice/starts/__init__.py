@@ -1,0 +1,1 @@
+"""Starts: the fields a solve may begin from."""

@@ -1,0 +1,1 @@
+"""Store: state files and run folders on disk."""

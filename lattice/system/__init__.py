@@ -1,0 +1,1 @@
+"""System: unknown scalars, conditions, residual and Jacobian of the bordered problem."""
