@@ -1,0 +1,1 @@
+"""Tests of the package, on one rank and on several."""
