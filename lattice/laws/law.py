@@ -11,6 +11,14 @@ from dataclasses import dataclass, field
 import sympy
 
 
+def symbol(name: str) -> sympy.Symbol:
+    """Return the real symbol that stands for a component, a parameter or a coordinate."""
+    return sympy.Symbol(name, real=True)
+
+
+X, Y = symbol("x"), symbol("y")
+
+
 class Deriv(sympy.Function):  # type: ignore[misc]
     """The spatial derivative `Deriv(inner, a, b)` = d^(a+b) inner / dx^a dy^b, kept unevaluated."""
 
@@ -73,6 +81,9 @@ class Symmetries:
         time a constant may be added to them.
     reflections : tuple of Reflection
         Every combination (other than the identity) that leaves the equations unchanged.
+    galilean : bool
+        True where adding a constant V to one component is undone by a frame that moves in x with a
+        velocity proportional to V.
     """
 
     homogeneous: dict[str, bool]
@@ -80,6 +91,7 @@ class Symmetries:
     shiftable: tuple[str, ...]
     gauge: tuple[str, ...]
     reflections: tuple[Reflection, ...]
+    galilean: bool = False
 
 
 @dataclass(frozen=True)
@@ -113,6 +125,7 @@ class Law:
     source: str = ""
     scaling: str = ""
     notes: str = ""
+    best_for: str = ""
     _cache: dict[str, object] = field(default_factory=dict, repr=False, compare=False)
 
     @property
