@@ -1,1 +1,1 @@
-"""Job: the user's TOML job file, validated, and the plan a run follows."""
+"""Job: the user's TOML job file, validated and resolved."""

@@ -1,0 +1,121 @@
+"""Reads a job file into a `Job`, or refuses it with every reason at once."""
+
+from __future__ import annotations
+
+import os
+import tomllib
+from collections.abc import Sequence
+from pathlib import Path
+from typing import Any
+
+from pydantic import ValidationError
+
+from lattice.errors import FormulaError, InputError
+from lattice.job.checks import judge, judge_law_section
+from lattice.job.overrides import lay_over
+from lattice.job.problems import Findings, JobErrors, Problem
+from lattice.job.resolve import fill_from_state, fill_in, find_files
+from lattice.job.schema import Job
+from lattice.job.wording import problem_from
+
+
+def load_job(path: str | os.PathLike[str], overrides: Sequence[str] = ()) -> Job:
+    """Read, check and resolve a job file. Not collective: call it on one rank.
+
+    Parameters
+    ----------
+    path : str or path
+        The TOML file.
+    overrides : sequence of str
+        Each `section.key=value`, laid over the file.
+
+    Returns
+    -------
+    Job
+        With every default filled in, see `Job`.
+
+    Raises
+    ------
+    JobErrors
+        An InputError with all that is wrong, one problem per line.
+    """
+    job, _ = load_job_with_cautions(path, overrides)
+    return job
+
+
+def load_job_with_cautions(
+    path: str | os.PathLike[str], overrides: Sequence[str] = ()
+) -> tuple[Job, tuple[str, ...]]:
+    """Return the job of `load_job` and what the user should be warned of, one text each."""
+    file = Path(path)
+    tables, overridden = lay_over(_read_toml(file), overrides)
+    try:
+        return _resolve(tables, file)
+    except _Refused as refused:
+        raise JobErrors(refused.problems, str(path), overridden) from None
+
+
+class _Refused(Exception):
+    def __init__(self, problems: Sequence[Problem]) -> None:
+        self.problems = tuple(problems)
+
+
+def _resolve(tables: dict[str, Any], file: Path) -> tuple[Job, tuple[str, ...]]:
+    job = _validated(tables)
+    findings = Findings()
+    judge_law_section(job, findings)
+    job = find_files(job, file.parent, findings)
+    _raise_any(findings)
+    law = _law(job)
+    findings = judge(job, law)
+    _raise_any(findings)
+    job = fill_from_state(job, law, findings)
+    _raise_any(findings)
+    return fill_in(job, law, file), tuple(findings.cautions)
+
+
+def _validated(tables: dict[str, Any]) -> Job:
+    try:
+        return Job.model_validate(_frozen(tables))
+    except ValidationError as error:
+        raise _Refused([problem_from(details) for details in error.errors(include_url=False)]) from None
+
+
+def _law(job: Job) -> Any:
+    key = "law.name" if job.law.name is not None else "law.equations"
+    try:
+        return job.make_law()
+    except FormulaError as error:
+        raise _Refused([Problem(key, str(error))]) from None
+    except InputError as error:
+        raise _Refused([Problem(error.key or key, error.message)]) from None
+
+
+def _raise_any(findings: Findings) -> None:
+    if findings.problems:
+        raise _Refused(findings.problems)
+
+
+def _read_toml(path: Path) -> dict[str, Any]:
+    try:
+        text = path.read_bytes().decode("utf-8")
+        return tomllib.loads(text)
+    except FileNotFoundError:
+        raise InputError("no such job file; check the path", file=str(path)) from None
+    except IsADirectoryError:
+        raise InputError("is a folder, a job file is wanted", file=str(path)) from None
+    except OSError as error:
+        raise InputError(f"cannot be read: {error.strerror}", file=str(path)) from None
+    except UnicodeDecodeError:
+        raise InputError("must be text in UTF-8; save it so", file=str(path)) from None
+    except tomllib.TOMLDecodeError as error:
+        raise InputError(f"is not valid TOML: {error}", file=str(path)) from None
+
+
+def _frozen(value: Any) -> Any:
+    """Return TOML's lists as tuples, which frozen models hold."""
+    if isinstance(value, list):
+        return tuple(_frozen(item) for item in value)
+    if isinstance(value, dict):
+        return {key: _frozen(item) for key, item in value.items()}
+    return value

@@ -1,0 +1,294 @@
+"""The job file's sections and keys: types, ranges, defaults and what each key means.
+
+The models hold a job whose values are sound one by one. What depends on the law or on several
+keys together is judged in `lattice.job.checks` and `lattice.job.unknowns`.
+"""
+
+from __future__ import annotations
+
+from functools import lru_cache
+from typing import TYPE_CHECKING, Annotated, Any, Literal
+
+from pydantic import BaseModel, ConfigDict, Discriminator, Field, Tag
+from pydantic.config import JsonDict
+
+from lattice.geometry.lattice import Lattice
+from lattice.job.choices import PRECONDITIONERS
+
+if TYPE_CHECKING:
+    from lattice.laws.law import Law, Parameter
+
+Positive = Annotated[float, Field(gt=0)]
+Count = Annotated[int, Field(ge=1)]
+Name = Annotated[str, Field(min_length=1)]
+
+
+def _key(description: str, default: Any = ..., *, shown: str = "", **bounds: Any) -> Any:
+    """Describe one key; `shown` is what the reference prints instead of the default."""
+    extra: JsonDict = {"shown": shown} if shown else {}
+    return Field(default, description=description, json_schema_extra=extra, **bounds)
+
+
+class Section(BaseModel):
+    """A table of the job file: unknown keys refused, types as written, frozen."""
+
+    model_config = ConfigDict(extra="forbid", strict=True, frozen=True, allow_inf_nan=False)
+
+
+class OwnParameter(Section):
+    """A parameter of the user's own law, written as a table."""
+
+    default: float = _key("its value")
+    unit: str = _key("its unit", "dimensionless")
+    meaning: str = _key("what it stands for", "")
+
+
+def _number_or_table(value: Any) -> str:
+    return "table" if isinstance(value, (dict, OwnParameter)) else "number"
+
+
+ParameterValue = Annotated[
+    Annotated[float, Tag("number")] | Annotated[OwnParameter, Tag("table")],
+    Discriminator(_number_or_table),
+]
+
+
+class LawSection(Section):
+    """The law: a shipped one by name, or equations of the user's own."""
+
+    name: Name | None = _key(
+        "a shipped law, listed by `lattice laws`; give this or `equations`", None, shown="none"
+    )
+    equations: tuple[Name, ...] | None = _key(
+        "the user's own law, one equation per component in subscript notation",
+        None,
+        shown="none",
+        min_length=1,
+    )
+    components: tuple[Name, ...] | None = _key(
+        "names of the own law's components, in the order of the equations",
+        None,
+        shown='["u"]',
+        min_length=1,
+    )
+    dimensions: Literal[1, 2] | None = _key("space dimensions of the own law", None, shown="1")
+    parameters: dict[str, ParameterValue] = _key(
+        "values of the law's parameters by name; for an own law a number or a table with"
+        " `default`, `unit` and `meaning`",
+        {},
+        shown="the law's own",
+    )
+
+    def parameter_values(self) -> dict[str, float]:
+        """Return the number given for every parameter named in the job."""
+        return {
+            name: value.default if isinstance(value, OwnParameter) else float(value)
+            for name, value in self.parameters.items()
+        }
+
+
+class BoxSection(Section):
+    """The periodic box and the velocity of the frame in which the state repeats."""
+
+    period: Positive | None = _key(
+        "period in time; first guess where it is free; absent for `lattice.nt = 1`",
+        None,
+        shown="from a stored start",
+    )
+    length_x: Positive | None = _key("length in x", None, shown="from a stored start")
+    length_y: Positive | None = _key(
+        "length in y, for a law in two dimensions", None, shown="from a stored start"
+    )
+    drift_x: float | None = _key(
+        "velocity in x of the frame in which the state repeats", None, shown="0, or from a stored start"
+    )
+    drift_y: float | None = _key("the same in y", None, shown="0, or from a stored start")
+
+
+class LatticeSection(Section):
+    """Nodes and orders of the space-time lattice."""
+
+    nt: Count = _key("time levels in one period; 1 for a steady or travelling state")
+    nx: Count = _key("nodes in x")
+    ny: Count | None = _key("nodes in y, for a law in two dimensions", None, shown="none")
+    order_t: Literal[2, 4, 6] = _key("order of the differences in time", 4)
+    order_x: Literal[2, 4, 6, 8] = _key("order of the differences in x", 4)
+    order_y: Literal[2, 4, 6, 8] | None = _key("order of the differences in y", None, shown="`order_x`")
+
+
+class PatchesSection(Section):
+    """Size and overlap of the blocks of the `patches` preconditioner."""
+
+    nt: Count | None = _key("levels of one patch without overlap", None, shown="one patch per rank")
+    nx: Count | None = _key("columns of one patch", None, shown="one patch per rank")
+    ny: Count | None = _key("rows of one patch", None, shown="one patch per rank")
+    overlap: int = _key("nodes by which a patch reaches into its neighbours", 4, ge=0)
+
+
+class SolveSection(Section):
+    """What is free, how the equations are solved, when to stop."""
+
+    free: tuple[Name, ...] | None = _key(
+        "scalars to solve for: `period`, `length_x`, `length_y`, `drift_x`, `drift_y`,"
+        " `source_<component>` or a parameter of the law",
+        None,
+        shown="`period` where `nt > 1`, and the drift along every axis the law does not single out",
+    )
+    mean: dict[str, float] = _key(
+        "given mean of a component whose mean the law leaves open", {}, shown="0 for each"
+    )
+    preconditioner: Name = _key(
+        "; ".join(f"`{name}`: {text}" for name, text in PRECONDITIONERS.items()), "direct"
+    )
+    residual_rms: Positive = _key("stop when the root mean square residual is at most this", 1e-10)
+    newton_steps: int = _key("largest number of Newton steps", 40, ge=0)
+    linear_rtol: float | None = _key(
+        "relative tolerance of the linear solves",
+        None,
+        shown="chosen step by step (Eisenstat and Walker)",
+        gt=0,
+        lt=1,
+    )
+    linear_iterations: Count = _key("largest number of iterations of one linear solve", 500)
+    line_search: bool = _key("shorten a step that does not lower the residual", True)
+    patches: PatchesSection = _key("the `patches` preconditioner's blocks", PatchesSection())
+
+
+class MarchStart(Section):
+    """Start from a march of the law in time, from noise."""
+
+    kind: Literal["march"]
+    seed: int = _key("seed of the noise", 0, ge=0)
+    amplitude: Positive = _key("root mean square of the noise", 0.1)
+    mean: dict[str, float] = _key(
+        "value of each component the noise is added to", {}, shown="`solve.mean`, else 0"
+    )
+    spin_up: float = _key("time marched before the window is cut", 100.0, ge=0)
+    dt: Positive | None = _key("time step of the march", None, shown="chosen from the law and lattice")
+    blend: float = _key(
+        "fraction of the period over which the window's end is blended into its start", 0.3, ge=0, lt=1
+    )
+    shape: tuple[Count, ...] | None = _key(
+        "nodes of the marcher, `[nx]` or `[ny, nx]`",
+        None,
+        shown="from the lattice",
+        min_length=1,
+        max_length=2,
+    )
+
+
+class StateStart(Section):
+    """Start from a stored state; values the job's box leaves out come from it too."""
+
+    kind: Literal["state"]
+    file: Name = _key("the state file, relative to the job file or the current folder")
+
+
+class Wave(Section):
+    """One cosine, `amplitude * cos(2*pi*(kx*x/Lx + ky*y/Ly - kt*t/T) + phase)`."""
+
+    component: Name | None = _key("the component", None, shown="the law's only one")
+    amplitude: float = _key("its amplitude")
+    kt: int = _key("periods in time", 0)
+    kx: int = _key("wavelengths in x", 0)
+    ky: int = _key("wavelengths in y", 0)
+    phase: float = _key("phase in radians", 0.0)
+
+
+class WavesStart(Section):
+    """Start from a sum of cosines."""
+
+    kind: Literal["waves"]
+    modes: tuple[Wave, ...] = _key("the waves, one table each", min_length=1)
+    mean: dict[str, float] = _key(
+        "value of each component the waves are added to", {}, shown="`solve.mean`, else 0"
+    )
+
+
+class ArrayStart(Section):
+    """Start from an array of the user's, shape (nt, ny, nx, components)."""
+
+    kind: Literal["array"]
+    file: Name = _key("a .npy or .h5 file, relative to the job file or the current folder")
+    dataset: Name | None = _key("name of the dataset in an HDF5 file", None, shown="`u`")
+
+
+Start = Annotated[MarchStart | StateStart | WavesStart | ArrayStart, Field(discriminator="kind")]
+START_MODELS: dict[str, type[Section]] = {
+    "march": MarchStart,
+    "state": StateStart,
+    "waves": WavesStart,
+    "array": ArrayStart,
+}
+
+
+class OutputSection(Section):
+    """Where the run keeps its files."""
+
+    folder: Name | None = _key("the run's folder", None, shown="`runs/<name of the job file>`")
+    picture: bool = _key("draw `field.png` at the end", True)
+
+
+class Job(Section):
+    """A whole job.
+
+    `lattice.job.reader.load_job` returns it resolved: lengths and period are numbers,
+    `solve.free`, `lattice.order_y`, the means and the output folder are filled in, paths absolute.
+    """
+
+    law: LawSection = _key("the law")
+    box: BoxSection = _key("the periodic box", BoxSection())
+    lattice: LatticeSection = _key("the lattice")
+    solve: SolveSection = _key("the solve", SolveSection())
+    start: Start = _key("the start")
+    output: OutputSection = _key("the output", OutputSection())
+
+    def make_law(self) -> Law:
+        """Read the law; the same object every time for the same section."""
+        return _law_of(self.law.model_dump_json())
+
+    def make_lattice(self) -> Lattice:
+        """Return the lattice as the rest of the program knows it."""
+        section = self.lattice
+        return Lattice(
+            nt=section.nt,
+            ny=section.ny or 1,
+            nx=section.nx,
+            dimensions=2 if section.ny else 1,
+            order_t=section.order_t,
+            order_x=section.order_x,
+            order_y=section.order_y or section.order_x,
+        )
+
+    def make_values(self) -> dict[str, float]:
+        """Return all scalars of the problem: box, drifts, sources (0) and the law's parameters."""
+        from lattice.job.unknowns import first_values
+
+        return first_values(self, self.make_law())
+
+
+@lru_cache(maxsize=8)
+def _law_of(section_json: str) -> Law:
+    from lattice.laws.catalogue import load_law, read_law
+
+    section = LawSection.model_validate_json(section_json)
+    if section.name is not None:
+        return load_law(section.name)
+    return read_law(
+        "own",
+        section.equations or (),
+        section.components or ("u",),
+        _own_parameters(section),
+        section.dimensions or 1,
+    )
+
+
+def _own_parameters(section: LawSection) -> dict[str, float | Parameter]:
+    from lattice.laws.law import Parameter
+
+    return {
+        name: Parameter(name, value.default, value.unit, value.meaning)
+        if isinstance(value, OwnParameter)
+        else float(value)
+        for name, value in section.parameters.items()
+    }

@@ -1,0 +1,171 @@
+"""Which scalars of a job are free, and whether the set can be solved for.
+
+Where a state sits in time and along a homogeneous axis is arbitrary: each such freedom gives one
+condition (a phase), and each phase fixes one free scalar. A mean that the law leaves open is given by
+the job and fixes a uniform source, which is always free and need not be named.
+"""
+
+from __future__ import annotations
+
+from typing import TYPE_CHECKING
+
+from lattice.job.problems import Findings, did_you_mean, listed
+
+if TYPE_CHECKING:
+    from lattice.job.schema import Job
+    from lattice.laws.law import Law
+
+
+def axes(law: Law) -> str:
+    """Return the names of the law's space axes, "x" or "xy"."""
+    return "xy"[: law.dimensions]
+
+
+def homogeneous_axes(law: Law) -> list[str]:
+    """Return the axes along which the law is the same everywhere."""
+    return [axis for axis in axes(law) if law.symmetries.homogeneous[axis]]
+
+
+def open_means(law: Law) -> tuple[str, ...]:
+    """Return the components whose mean the law leaves open: conserved, or free to shift."""
+    either = {*law.symmetries.conserved, *law.symmetries.shiftable}
+    return tuple(component for component in law.components if component in either)
+
+
+def scalar_names(law: Law) -> list[str]:
+    """Return every scalar of the problem by name."""
+    return [
+        "period",
+        *(f"length_{axis}" for axis in axes(law)),
+        *(f"drift_{axis}" for axis in axes(law)),
+        *(f"source_{component}" for component in open_means(law)),
+        *law.defaults,
+    ]
+
+
+def default_free(law: Law, nt: int) -> tuple[str, ...]:
+    """Return what is free where the job does not say."""
+    drifts = tuple(f"drift_{axis}" for axis in homogeneous_axes(law))
+    return ("period", *drifts) if nt > 1 else drifts
+
+
+def first_values(job: Job, law: Law) -> dict[str, float]:
+    """Return the value of every scalar a resolved job begins with; sources are 0.
+
+    `period` is 1 for `nt = 1`, where it has no meaning; lengths and drifts in y exist in two
+    dimensions only.
+    """
+    values = {"period": 1.0 if job.lattice.nt == 1 else _given(job, "period")}
+    for axis in axes(law):
+        values[f"length_{axis}"] = _given(job, f"length_{axis}")
+    for axis in axes(law):
+        values[f"drift_{axis}"] = float(getattr(job.box, f"drift_{axis}") or 0.0)
+    values.update({f"source_{component}": 0.0 for component in open_means(law)})
+    return {**values, **law.defaults, **job.law.parameter_values()}
+
+
+def _given(job: Job, name: str) -> float:
+    value = getattr(job.box, name)
+    assert value is not None, f"box.{name} is absent from a job that should have been resolved"
+    return float(value)
+
+
+def judge_free(job: Job, law: Law, findings: Findings) -> None:
+    """Refuse a set of free scalars that no solution fits, with the reason."""
+    free = job.solve.free
+    if free is None:
+        return
+    for place, name in enumerate(free):
+        if name in free[:place]:
+            findings.refuse("solve.free", f"must name each scalar once, got '{name}' twice; remove one")
+        else:
+            _judge_name(name, job, law, findings)
+    if not findings.problems:
+        _judge_count(free, job, law, findings)
+
+
+def _judge_name(name: str, job: Job, law: Law, findings: Findings) -> None:
+    reason = _period_reason(name, job) or _drift_reason(name, law) or _source_reason(name, law)
+    known = scalar_names(law)
+    if reason:
+        findings.refuse("solve.free", reason)
+    elif name not in known:
+        findings.refuse(
+            "solve.free",
+            f"must name scalars of this law, got '{name}'{did_you_mean(name, known)};"
+            f" known are {listed(known)}",
+        )
+
+
+def _period_reason(name: str, job: Job) -> str:
+    if name == "period" and job.lattice.nt == 1:
+        return (
+            "must not name period for lattice.nt = 1: a steady or travelling state has none;"
+            " remove it or raise lattice.nt"
+        )
+    return ""
+
+
+def _drift_reason(name: str, law: Law) -> str:
+    kind, _, axis = name.partition("_")
+    if kind not in ("drift", "length") or axis not in ("x", "y"):
+        return ""
+    if axis not in axes(law):
+        return f"must not name {name}: the law has one space dimension; remove it"
+    if kind == "drift" and axis not in homogeneous_axes(law):
+        return (
+            f"must not name {name}: the law depends on {axis}, so no state can drift along {axis}; remove it"
+        )
+    return ""
+
+
+def _source_reason(name: str, law: Law) -> str:
+    if not name.startswith("source_"):
+        return ""
+    component = name.removeprefix("source_")
+    if component not in law.components:
+        known = listed(f"source_{c}" for c in open_means(law))
+        return f"must name a component after source_, got '{name}'; known are {known}"
+    if component not in open_means(law):
+        return (
+            f"must not name {name}: the law fixes the mean of {component}, so no source is needed; remove it"
+        )
+    return ""
+
+
+def _judge_count(free: tuple[str, ...], job: Job, law: Law, findings: Findings) -> None:
+    """Compare the free scalars with the phases that can fix them."""
+    periodic = job.lattice.nt > 1
+    drifts = [name for name in free if name.startswith("drift_")]
+    others = [name for name in free if not name.startswith(("drift_", "source_"))]
+    if periodic and not others:
+        lengths = listed(f"length_{axis}" for axis in axes(law))
+        findings.refuse(
+            "solve.free",
+            f"holds period and {lengths} fixed, but a generic state exists only for special periods;"
+            f" add period (or one of {lengths}, or a parameter)",
+        )
+        return
+    phases = int(periodic) + len(homogeneous_axes(law))
+    if len(drifts) + len(others) > phases:
+        findings.refuse(
+            "solve.free",
+            f"must name at most {phases} scalar(s) besides sources here, got {listed(drifts + others)}:"
+            f" {_phase_text(periodic, law)} can fix no more; hold one of them",
+        )
+        return
+    held = [f"drift_{axis}" for axis in homogeneous_axes(law) if f"drift_{axis}" not in free]
+    if held and len(drifts) + len(others) < phases:
+        findings.warn(
+            f"{listed(held)} is held although the law is the same all along that axis: right for a wave"
+            " followed in the resting frame or a state kept in place by a reflection; otherwise add it to"
+            " solve.free"
+        )
+
+
+def _phase_text(periodic: bool, law: Law) -> str:
+    phases = [
+        *(["the phase in time"] if periodic else []),
+        *(f"the phase in {a}" for a in homogeneous_axes(law)),
+    ]
+    return " and ".join(phases) or "a steady state pinned by its law"
