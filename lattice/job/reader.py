@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import os
+import re
 import tomllib
 from collections.abc import Sequence
 from pathlib import Path
@@ -88,7 +89,15 @@ def _law(job: Job) -> Any:
     except FormulaError as error:
         raise _Refused([Problem(key, str(error))]) from None
     except InputError as error:
-        raise _Refused([Problem(error.key or key, error.message)]) from None
+        raise _Refused([_law_problem(error, key)]) from None
+
+
+def _law_problem(error: InputError, key: str) -> Problem:
+    """Return a law's own complaint, with the key it names moved to where keys stand."""
+    named = re.match(r"(law\.\S+) (.*)", error.message, re.DOTALL)
+    if named:
+        return Problem(named[1], named[2])
+    return Problem(error.key or key, error.message)
 
 
 def _raise_any(findings: Findings) -> None:

@@ -164,8 +164,6 @@ def _judge_count(free: tuple[str, ...], job: Job, law: Law, findings: Findings) 
 
 
 def _phase_text(periodic: bool, law: Law) -> str:
-    phases = [
-        *(["the phase in time"] if periodic else []),
-        *(f"the phase in {a}" for a in homogeneous_axes(law)),
-    ]
-    return " and ".join(phases) or "a steady state pinned by its law"
+    phases = ["the phase in time"] if periodic else []
+    phases += [f"the phase in {axis}" for axis in homogeneous_axes(law)]
+    return " and ".join(phases) or "a steady state, which nothing shifts,"

@@ -120,11 +120,19 @@ def _missing(place: Place, details: ErrorDetails) -> str:
 def _unknown(place: Place, details: ErrorDetails) -> str:
     name = str(place[-1])
     known = known_keys(place[:-1], details["loc"])
-    where = f"[{key_text(place[:-1])}]" if len(place) > 1 else "a job file"
+    where = _table_text(place[:-1], details["loc"])
     elsewhere = [] if name in known else _sections_with(name)
     if elsewhere:
         return f"is not a key of {where}; move it to [{elsewhere[0]}]"
     return f"is not a key of {where}{did_you_mean(name, known)}; known are {listed(known)}"
+
+
+def _table_text(place: Place, location: Place) -> str:
+    if not place:
+        return "a job file"
+    if place == ("start",) and len(location) > 2:
+        return f"start.kind = '{location[1]}'"
+    return f"[{key_text(place)}]"
 
 
 def _no_kind(place: Place, details: ErrorDetails) -> str:
