@@ -31,7 +31,7 @@ def raise_together(comm: MPI.Intracomm, error: Exception | None, message: str = 
     if not failed:
         return
     rank, text = failed[0]
-    where = f" (rank {rank} of {comm.size})" if comm.size > 1 and len(failed) < comm.size else ""
+    where = f" (rank {rank} of {comm.size})" if rank > 0 else ""
     raise LatticeError(f"{message}{': ' if message else ''}{text}{where}") from error
 
 

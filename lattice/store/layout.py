@@ -7,11 +7,13 @@ import math
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
-import numpy.typing as npt
 
 from lattice.store.statemeta import StateMeta, from_json, to_json
+from lattice.store.watched import WatchedFile
 
 if TYPE_CHECKING:
+    from pathlib import Path
+
     import h5py
 
 SCHEMA = "lattice-state"
@@ -40,54 +42,62 @@ def _share(nodes: int, chunks: int) -> int:
     return -(-nodes // chunks)
 
 
-def file_size(meta: StateMeta) -> int:
-    """Return the bytes a state file takes, rounded up to whole chunks, with room for its structures."""
-    padded = math.prod(
-        -(-nodes // chunk) * chunk for nodes, chunk in zip(meta.shape, chunk_shape(meta), strict=True)
-    )
-    return 8 * padded * len(meta.components) + 8 * sum(meta.shape) + len(to_json(meta)) + 65536
+def create_file(path: Path, meta: StateMeta) -> None:
+    """Write a state file whose field is still zero, every chunk in its final place.
 
-
-def lay_out(file: h5py.File, meta: StateMeta, writes: bool) -> list[h5py.Dataset]:
-    """Create everything but the field, and return the datasets of the components, still empty.
-
-    Collective where `file` is open on several ranks; `writes` is true on one of them.
+    Raises
+    ------
+    OSError, ValueError, RuntimeError
+        Where that is impossible.
     """
+    import h5py
+
+    watched = WatchedFile(path, "w+b")
+    try:
+        with h5py.File(watched, "w", libver=LIBRARY_FORMAT) as file:
+            _lay_out(file, meta)
+    finally:
+        watched.close()
+    if watched.error is not None:
+        raise watched.error
+
+
+def _lay_out(file: h5py.File, meta: StateMeta) -> None:
+    import h5py
+
     record = to_json(meta).encode()
     for name, value in attributes(meta).items():
         file.attrs[name] = value
     file.attrs["metadata_sha256"] = hashlib.sha256(record).hexdigest()
-    _add_record(file, record, writes)
+    file.create_dataset(RECORD, data=np.array(record, h5py.string_dtype("utf-8", len(record))))
     for axis in meta.axes:
-        _add_scale(file, axis, meta.coordinate(axis), writes)
-    return [_add_component(file, meta, component) for component in meta.components]
+        scale = file.create_dataset(axis, data=meta.coordinate(axis))
+        scale.attrs["units"] = UNIT
+        scale.attrs["long_name"] = LONG_NAMES[axis]
+        scale.make_scale(axis)
+    for component in meta.components:
+        _add_component(file, meta, component)
 
 
-def _add_record(file: h5py.File, record: bytes, writes: bool) -> None:
-    import h5py
-
-    dataset = file.create_dataset(RECORD, (), h5py.string_dtype("utf-8", len(record)))
-    if writes:
-        dataset[()] = np.array(record, dtype=dataset.dtype)
-
-
-def _add_scale(file: h5py.File, axis: str, nodes: npt.NDArray[np.float64], writes: bool) -> None:
-    scale = file.create_dataset(axis, nodes.shape, "f8")
-    scale.attrs["units"] = UNIT
-    scale.attrs["long_name"] = LONG_NAMES[axis]
-    scale.make_scale(axis)
-    if writes:
-        scale[...] = nodes
-
-
-def _add_component(file: h5py.File, meta: StateMeta, component: str) -> h5py.Dataset:
-    dataset = file.create_dataset(component, meta.shape, "f8", chunks=chunk_shape(meta), fletcher32=True)
+def _add_component(file: h5py.File, meta: StateMeta, component: str) -> None:
+    dataset = _allocate(file, component, meta)
     dataset.attrs["units"] = UNIT
     dataset.attrs["long_name"] = f"component {component}"
     for place, axis in enumerate(meta.axes):
         dataset.dims[place].label = axis
         dataset.dims[place].attach_scale(file[axis])
-    return dataset
+
+
+def _allocate(file: h5py.File, component: str, meta: StateMeta) -> h5py.Dataset:
+    """Create a dataset with room for all its chunks: their size is fixed, as nothing is compressed."""
+    from h5py import Dataset, h5d, h5p, h5s, h5t
+
+    plan = h5p.create(h5p.DATASET_CREATE)
+    plan.set_chunk(chunk_shape(meta))
+    plan.set_fletcher32()
+    plan.set_alloc_time(h5d.ALLOC_TIME_EARLY)
+    space = h5s.create_simple(meta.shape)
+    return Dataset(h5d.create(file.id, component.encode(), h5t.IEEE_F64LE, space, plan))
 
 
 def attributes(meta: StateMeta) -> dict[str, Any]:

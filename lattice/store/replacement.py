@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import errno
 import os
 import socket
 import time
@@ -17,23 +18,25 @@ def partial_path(path: Path) -> Path:
     return path.with_name(f".{path.name}.{socket.gethostname()}.{os.getpid()}.partial")
 
 
-def prepare_partial(path: Path, size: int) -> Path:
-    """Create the empty partial file for `path`, after removing those of dead processes.
+def reserve(partial: Path) -> None:
+    """Make the file system set aside every block of a file, so that no later write into it lacks room.
 
     Raises
     ------
     OSError
-        Where the folder cannot be written or has no room for `size` bytes.
+        Where there is no room.
     """
-    remove_abandoned(path)
-    partial = partial_path(path)
-    partial.write_bytes(b"")
-    room = os.statvfs(path.parent)
-    free = room.f_bavail * room.f_frsize
-    if free < size:
-        partial.unlink()
-        raise OSError(f"no space left: the file needs {size / 1e6:.3g} MB, {free / 1e6:.3g} MB are free")
-    return partial
+    descriptor = os.open(partial, os.O_RDWR)
+    try:
+        os.posix_fallocate(descriptor, 0, os.fstat(descriptor).st_size)
+        os.fsync(descriptor)
+    finally:
+        os.close(descriptor)
+
+
+def lacks_room(error: OSError) -> bool:
+    """Whether a write failed because the disk or the user's quota is full."""
+    return error.errno in (errno.ENOSPC, errno.EDQUOT)
 
 
 def publish(partial: Path, path: Path) -> None:

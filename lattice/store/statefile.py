@@ -10,7 +10,7 @@ from __future__ import annotations
 
 import math
 import os
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator
 from contextlib import contextmanager
 from dataclasses import dataclass, replace
 from datetime import UTC, datetime
@@ -24,10 +24,17 @@ import numpy.typing as npt
 from lattice.errors import LatticeError, StateFileError
 from lattice.geometry.block import Block
 from lattice.store.agreement import explain, raise_together
-from lattice.store.layout import file_size, read_record
-from lattice.store.replacement import discard, prepare_partial, publish
+from lattice.store.layout import create_file, read_record
+from lattice.store.replacement import (
+    discard,
+    lacks_room,
+    partial_path,
+    publish,
+    remove_abandoned,
+    reserve,
+)
 from lattice.store.statemeta import StateMeta
-from lattice.store.writing import write_collectively, write_through_root
+from lattice.store.writing import fill_collectively, fill_through_root
 
 if TYPE_CHECKING:
     import h5py
@@ -176,17 +183,17 @@ def write_state(
     raise_together(comm, _misfit(owned, block, meta), failure)
     raise_together(comm, _blocks_incomplete(block, meta, comm), failure)
     record = comm.bcast(replace(meta, written=_now()) if comm.rank == 0 else None)
-    partial = _prepare(target, record, comm, failure)
+    partial = comm.bcast(partial_path(target) if comm.rank == 0 else None)
     try:
-        if _collective(way, comm):
-            write_collectively(partial, owned, block, record, comm)
-        else:
-            write_through_root(partial, owned, block, record, comm)
-        raise_together(comm, _publish(partial, target) if comm.rank == 0 else None)
+        _on_root(comm, _create, partial, target, record)
+        fill = fill_collectively if _collective(way, comm) else fill_through_root
+        fill(partial, owned, block, record, comm)
+        _on_root(comm, publish, partial, target)
     except LatticeError as error:
         if comm.rank == 0:
             discard(partial)
-        raise LatticeError(f"{failure}: {error}; {_remedy(target)}") from error
+        kept = "; the older file is untouched" if comm.bcast(target.exists()) else ""
+        raise LatticeError(f"{failure}: {error}{kept}") from error
 
 
 def _collective(way: str, comm: MPI.Intracomm) -> bool:
@@ -197,30 +204,37 @@ def _collective(way: str, comm: MPI.Intracomm) -> bool:
     return comm.size > 1 and bool(comm.allreduce(int(h5py.get_config().mpi)) == comm.size)
 
 
-def _prepare(target: Path, meta: StateMeta, comm: MPI.Intracomm, failure: str) -> Path:
-    """Create the partial file on rank 0 and return its path on every rank."""
-    partial, error = None, None
+def _create(partial: Path, target: Path, meta: StateMeta) -> None:
+    """Lay out the partial file with all its blocks reserved."""
+    remove_abandoned(target)
+    try:
+        create_file(partial, meta)
+        reserve(partial)
+    except OSError as error:
+        if lacks_room(error):
+            raise OSError(_shortage(partial, meta)) from error
+        raise OSError(f"{explain(error)}; choose another folder with --out") from error
+
+
+def _shortage(partial: Path, meta: StateMeta) -> str:
+    room = os.statvfs(partial.parent)
+    needed = 8e-6 * meta.lattice.nodes * len(meta.components)
+    free = 1e-6 * room.f_bavail * room.f_frsize
+    return (
+        f"no space left in {partial.parent} or the quota is used up: the field alone needs {needed:.3g} MB, "
+        f"{free:.3g} MB are free besides; free space or choose another folder with --out"
+    )
+
+
+def _on_root(comm: MPI.Intracomm, action: Callable[..., None], *arguments: object) -> None:
+    """Do something on rank 0 and raise on all ranks if it fails there."""
+    error: Exception | None = None
     if comm.rank == 0:
         try:
-            partial = prepare_partial(target, file_size(meta))
-        except OSError as caught:
-            error = OSError(f"{explain(caught)}; {_remedy(target)}")
-    raise_together(comm, error, failure)
-    found: Path = comm.bcast(partial)
-    return found
-
-
-def _publish(partial: Path, target: Path) -> OSError | None:
-    try:
-        publish(partial, target)
-    except OSError as error:
-        return error
-    return None
-
-
-def _remedy(target: Path) -> str:
-    kept = "; the older file is untouched" if target.exists() else ""
-    return f"free space there or choose another folder with --out{kept}"
+            action(*arguments)
+        except Exception as caught:  # noqa: BLE001 - the other ranks wait for the verdict, whatever it is
+            error = caught
+    raise_together(comm, error)
 
 
 def _misfit(owned: Field, block: Block, meta: StateMeta) -> Exception | None:

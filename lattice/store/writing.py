@@ -7,7 +7,6 @@ followed by an agreement, and the file is closed by all.
 from __future__ import annotations
 
 from collections.abc import Iterator
-from contextlib import suppress
 from pathlib import Path
 from typing import TYPE_CHECKING
 
@@ -16,8 +15,9 @@ import numpy.typing as npt
 
 from lattice.geometry.block import Block
 from lattice.store.agreement import raise_together
-from lattice.store.layout import LIBRARY_FORMAT, chunk_shape, lay_out
+from lattice.store.layout import LIBRARY_FORMAT, chunk_shape
 from lattice.store.statemeta import StateMeta
+from lattice.store.watched import WatchedFile
 
 if TYPE_CHECKING:
     import h5py
@@ -28,47 +28,40 @@ SLAB_BYTES = 2**24
 """Largest slab gathered on rank 0, per component, unless a single chunk row is larger."""
 
 
-def write_collectively(path: Path, owned: Field, block: Block, meta: StateMeta, comm: MPI.Intracomm) -> None:
-    """Write all blocks at once with parallel HDF5.
+def fill_collectively(path: Path, owned: Field, block: Block, meta: StateMeta, comm: MPI.Intracomm) -> None:
+    """Write all blocks at once with parallel HDF5 into a laid-out file, then read them back.
 
-    Collective.
+    Collective. Open MPI's own file layer reports some failed writes as done, hence the reading back.
 
     Raises
     ------
     LatticeError
-        On every rank, if any rank cannot write.
+        On every rank, if any rank cannot write or finds something else than it wrote.
     """
     import h5py
 
-    parts = [np.ascontiguousarray(flat_view(owned, meta, c)) for c in range(len(meta.components))]
-    place = flat_slices(block, meta)
     file: h5py.File | None = None
     error: Exception | None = None
     try:
-        file = h5py.File(path, "w", driver="mpio", comm=comm, libver=LIBRARY_FORMAT)
+        file = h5py.File(path, "r+", driver="mpio", comm=comm, libver=LIBRARY_FORMAT)
     except (OSError, ValueError) as caught:
         error = caught
     raise_together(comm, error)
     assert file is not None
     try:
-        _fill_collectively(file, parts, place, meta, comm)
-        raise_together(comm, _attempt_flush(file))
+        _write_components(file, owned, flat_slices(block, meta), meta, comm)
     finally:
-        error = _attempt_close(file)
+        error = _close_error(file)
     raise_together(comm, error)
+    raise_together(comm, _difference(path, owned, block, meta))
 
 
-def _fill_collectively(
-    file: h5py.File, parts: list[Field], place: tuple[slice, ...], meta: StateMeta, comm: MPI.Intracomm
+def _write_components(
+    file: h5py.File, owned: Field, place: tuple[slice, ...], meta: StateMeta, comm: MPI.Intracomm
 ) -> None:
-    error: Exception | None = None
-    datasets: list[h5py.Dataset] = []
-    try:
-        datasets = lay_out(file, meta, writes=comm.rank == 0)
-    except (OSError, ValueError, RuntimeError) as caught:
-        error = caught
-    raise_together(comm, error)
-    for dataset, part in zip(datasets, parts, strict=True):
+    for index, component in enumerate(meta.components):
+        part = np.ascontiguousarray(_without_rows(owned[..., index], meta))
+        dataset, error = file[component], None
         try:
             with dataset.collective:
                 dataset[place] = part
@@ -77,8 +70,23 @@ def _fill_collectively(
         raise_together(comm, error)
 
 
-def write_through_root(path: Path, owned: Field, block: Block, meta: StateMeta, comm: MPI.Intracomm) -> None:
-    """Gather the field slab by slab on rank 0, which writes it.
+def _difference(path: Path, owned: Field, block: Block, meta: StateMeta) -> Exception | None:
+    """Return how a written file differs from what this rank wrote, None if it does not."""
+    import h5py
+
+    try:
+        with h5py.File(path, "r") as file:
+            for index, component in enumerate(meta.components):
+                stored = file[component][flat_slices(block, meta)]
+                if not np.array_equal(stored, _without_rows(owned[..., index], meta)):
+                    return OSError(f"component {component} reads back other values than were written")
+    except (OSError, RuntimeError) as error:
+        return error
+    return None
+
+
+def fill_through_root(path: Path, owned: Field, block: Block, meta: StateMeta, comm: MPI.Intracomm) -> None:
+    """Gather the field slab by slab on rank 0, which writes it into a laid-out file.
 
     Collective. Rank 0 holds one slab and one other rank's share of it at a time.
 
@@ -88,11 +96,10 @@ def write_through_root(path: Path, owned: Field, block: Block, meta: StateMeta, 
         On every rank, if rank 0 cannot write.
     """
     blocks = comm.gather(block)
-    if comm.rank == 0:
-        assert blocks is not None
+    error: Exception | None = None
+    if blocks is not None:
         error = _write_gathered(path, owned, blocks, meta, comm)
     else:
-        error = None
         for component, slab in slabs(meta):
             shared = intersection(block, slab)
             if shared is not None:
@@ -106,23 +113,19 @@ def _write_gathered(
     """Write every slab on rank 0; after an error go on receiving, so that no sender waits for ever."""
     import h5py
 
-    file: h5py.File | None = None
+    watched = WatchedFile(path, "r+b")
     error: Exception | None = None
-    datasets: list[h5py.Dataset] = []
-    try:
-        file = h5py.File(path, "w", libver=LIBRARY_FORMAT)
-        datasets = lay_out(file, meta, writes=True)
-    except (OSError, ValueError, RuntimeError) as caught:
-        error = caught
+    file = h5py.File(watched, "r+", libver=LIBRARY_FORMAT)
     for component, slab in slabs(meta):
         gathered = _gather_slab(owned, blocks, slab, component, comm)
-        if error is None:
-            try:
-                datasets[component][flat_slices(slab, meta)] = _without_rows(gathered, meta)
-            except (OSError, ValueError, RuntimeError) as caught:
-                error = caught
-    closing = _attempt_close(file) if file is not None else None
-    return error or closing
+        try:
+            if error is None and watched.error is None:
+                file[meta.components[component]][flat_slices(slab, meta)] = _without_rows(gathered, meta)
+        except (OSError, ValueError, RuntimeError) as caught:
+            error = caught
+    error = error or _close_error(file)
+    watched.close()
+    return watched.error or error
 
 
 def _gather_slab(
@@ -197,29 +200,15 @@ def flat_slices(block: Block, meta: StateMeta) -> tuple[slice, ...]:
     return (levels, columns) if meta.dimensions == 1 else (levels, rows, columns)
 
 
-def flat_view(owned: Field, meta: StateMeta, component: int) -> Field:
-    """Return one component of an owned field with the axes of its dataset."""
-    return _without_rows(owned[..., component], meta)
-
-
 def _without_rows(values: Field, meta: StateMeta) -> Field:
     view: Field = values[:, 0, :] if meta.dimensions == 1 else values
     return view
 
 
-def _attempt_flush(file: h5py.File) -> Exception | None:
-    try:
-        file.flush()
-    except (OSError, RuntimeError) as error:
-        return error
-    return None
-
-
-def _attempt_close(file: h5py.File) -> Exception | None:
+def _close_error(file: h5py.File) -> Exception | None:
+    """Close a file and return the error of closing it, None if it went well."""
     try:
         file.close()
     except (OSError, RuntimeError, ValueError) as error:
-        with suppress(Exception):
-            file.id.close()
         return error
     return None
