@@ -1,0 +1,243 @@
+"""Build a form's kernel: write its text where Numba can cache it, compile it, fill its weights.
+
+Numba is optional. Without it the same form is evaluated by NumPy slices (`lattice.kernels.slices`).
+"""
+
+from __future__ import annotations
+
+import hashlib
+import importlib.util
+import os
+import sys
+import tempfile
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+import sympy
+from numpy.typing import NDArray
+
+from lattice.kernels import slices
+from lattice.kernels.forms import X, Y, Form
+from lattice.kernels.scheme import Scheme, space_stencil, time_weights
+from lattice.kernels.source import Source, Table, generate
+
+Array = NDArray[np.float64]
+
+# Reassociation is left out: sums must not depend on a processor's vector width. NaN stays NaN.
+FAST = "{'nsz', 'arcp', 'contract', 'afn'}"
+
+
+@dataclass(frozen=True)
+class Geometry:
+    """Where a padded block lies: spacings, and the coordinates of its padded columns and rows.
+
+    Parameters
+    ----------
+    dt, dy, dx : float
+        Spacings, dimensionless; `dt` is ignored on a lattice with one level.
+    ys, xs : ndarray
+        Coordinates of the padded rows and columns.
+    """
+
+    dt: float
+    dy: float
+    dx: float
+    ys: Array
+    xs: Array
+
+
+class Kernel:
+    """A form compiled for one scheme; `prepare` it for a geometry and scalars, then call it.
+
+    Parameters
+    ----------
+    form : Form
+    scheme : Scheme
+    compiled : bool
+        False evaluates with NumPy slices even where Numba is present.
+
+    Notes
+    -----
+    Not collective: arithmetic on one padded block.
+    """
+
+    def __init__(self, form: Form, scheme: Scheme, compiled: bool = True) -> None:
+        self.form, self.scheme = form, scheme
+        self.source: Source = generate(form, scheme)
+        self._loop = _load(form, self.source.text) if compiled and have_numba() else None
+        self._fill = _WeightFiller(self.source.table, form, scheme)
+        self._weights = np.zeros(self.source.table.length)
+        self._statics = np.zeros((0, 0, 0))
+        self._values: dict[str, float] = {}
+        self._geometry: Geometry | None = None
+
+    def prepare(self, geometry: Geometry, values: Mapping[str, float]) -> None:
+        """Set spacings and scalars; `values` holds every scalar of the form by name."""
+        self._values = {name: values[name] for name in (*self.form.scalars, "length_x", "length_y") if name in values}
+        self._geometry = geometry
+        self._fill(self._weights, geometry, self._values)
+        self._statics = self._fill.statics(geometry, self._values)
+
+    def __call__(self, out: Array, *fields: Array) -> Array:
+        """Evaluate the form.
+
+        Parameters
+        ----------
+        out : ndarray, shape (levels, rows, columns, components)
+            Result, without halo, overwritten.
+        *fields : ndarray, the same shape padded by the scheme's halo
+            C-contiguous, halo filled.
+
+        Returns
+        -------
+        ndarray
+            `out`.
+        """
+        if self._loop is None:
+            assert self._geometry is not None
+            slices.evaluate(self.form, self.scheme, self._geometry, self._values, out, fields)
+        else:
+            self._loop(_flat(out), *(_flat(f) for f in fields), self._statics, self._weights)
+        return out
+
+
+def _flat(array: Array) -> Array:
+    """View (levels, rows, columns, components) as (levels, rows, columns*components)."""
+    return array.reshape(array.shape[0], array.shape[1], -1)
+
+
+class _WeightFiller:
+    """Fill a kernel's weight vector and static fields from spacings and scalars."""
+
+    def __init__(self, table: Table, form: Form, scheme: Scheme) -> None:
+        self.table, self.scheme = table, scheme
+        names = [sympy.Symbol(name, real=True) for name in (*form.scalars, "length_x", "length_y")]
+        self.names = list(dict.fromkeys(names))
+        self.coefficients = [[number_of(t[0], self.names) for t in linear.terms] for linear in table.linears]
+        self.static_functions = [
+            sympy.lambdify([X, Y, *self.names], expression, "numpy") for expression in table.statics
+        ]
+
+    def __call__(self, weights: Array, geometry: Geometry, values: Mapping[str, float]) -> None:
+        levels = self.table.levels
+        difference, midpoint = time_weights(levels)
+        weights[:levels] = np.array(difference) / (geometry.dt if levels > 1 else 1.0)
+        weights[levels : 2 * levels] = midpoint
+        numbers = [values.get(symbol.name, 0.0) for symbol in self.names]
+        for linear, functions in zip(self.table.linears, self.coefficients, strict=True):
+            total = dict.fromkeys(linear.offsets, 0.0)
+            for (_, a, b), function in zip(linear.terms, functions, strict=True):
+                factor = function(numbers)
+                for offset, weight in self.stencil(a, b, geometry).items():
+                    total[offset] += factor * weight
+            weights[linear.first : linear.first + len(total)] = list(total.values())
+        for (a, b), first in self.table.stencils.items():
+            stencil = self.stencil(a, b, geometry)
+            weights[first : first + len(stencil)] = [stencil[key] for key in sorted(stencil)]
+        for name, place in self.table.scalars.items():
+            weights[place] = values[name]
+
+    def stencil(self, a: int, b: int, geometry: Geometry) -> dict[tuple[int, int], float]:
+        """Return the weights of a derivative on the geometry's spacings."""
+        scale = geometry.dx**-a * geometry.dy**-b
+        unit = space_stencil(a, b, self.scheme.order_x, self.scheme.order_y)
+        return {offset: weight * scale for offset, weight in unit.items()}
+
+    def statics(self, geometry: Geometry, values: Mapping[str, float]) -> Array:
+        """Return the padded static fields, shape (n, rows, columns)."""
+        x, y = geometry.xs[None, :], geometry.ys[:, None]
+        shape = (len(self.static_functions), geometry.ys.size, geometry.xs.size)
+        numbers = [values.get(symbol.name, 0.0) for symbol in self.names]
+        fields = np.empty(shape)
+        for index, function in enumerate(self.static_functions):
+            fields[index] = function(x, y, *numbers)
+        return fields
+
+
+def number_of(expression: sympy.Expr, names: list[sympy.Symbol]) -> Callable[[list[float]], float]:
+    """Return a function of the scalars' values for an expression in scalars only."""
+    if expression.is_Number:
+        constant = float(expression)
+        return lambda numbers: constant
+    function = sympy.lambdify([names], expression, "math")
+    return lambda numbers: float(function(numbers))
+
+
+def have_numba() -> bool:
+    """Return whether Numba can be used; its import may fail on an unknown NumPy."""
+    try:
+        import numba  # noqa: F401 - the import itself is the question
+    except Exception:
+        return False
+    return os.environ.get("LATTICE_KERNELS", "numba") != "numpy"
+
+
+def cache_folder() -> Path:
+    """Return the folder of generated kernels: `NUMBA_CACHE_DIR`, else a per-user cache."""
+    root = os.environ.get("NUMBA_CACHE_DIR") or os.path.join(
+        os.environ.get("XDG_CACHE_HOME", os.path.expanduser("~/.cache")), "lattice"
+    )
+    return Path(root) / "kernels"
+
+
+def _load(form: Form, text: str) -> Callable[..., None]:
+    """Write a kernel's module once under a name made of its content, import and compile it.
+
+    Many processes may do so at once: the module is renamed into place, and Numba's own index is
+    written the same way.
+    """
+    signature = "void(f8[:,:,::1], " + "f8[:,:,::1], " * len(form.fields) + "f8[:,:,::1], f8[::1])"
+    module_text = (
+        "import numba\nimport numpy as np\n\n\n"
+        f"@numba.njit('{signature}', cache=True, error_model='numpy', fastmath={FAST})\n" + text
+    )
+    name = f"lattice_{form.name}_{hashlib.sha256(module_text.encode()).hexdigest()[:24]}"
+    if name not in sys.modules:
+        path = _write_once(cache_folder(), name, module_text)
+        _vectorise_many_rows()
+        spec = importlib.util.spec_from_file_location(name, path)
+        assert spec is not None and spec.loader is not None
+        module = importlib.util.module_from_spec(spec)
+        spec.loader.exec_module(module)
+        sys.modules[name] = module
+    loop: Callable[..., None] = sys.modules[name].__dict__["kernel"]
+    return loop
+
+
+def _vectorise_many_rows() -> None:
+    """Let LLVM check more row pointers for overlap before it gives up vectorising a loop.
+
+    Its default of 8 is below the 15 or more rows a two-dimensional stencil reads.
+    """
+    import llvmlite.binding as llvm
+
+    if not _OPTIONS:
+        llvm.set_option("lattice", "--runtime-memory-check-threshold=256")
+        _OPTIONS.append(True)
+
+
+_OPTIONS: list[Any] = []
+
+
+def _write_once(folder: Path, name: str, text: str) -> Path:
+    """Write a module unless it is there, atomically; fall back to a private folder."""
+    try:
+        folder.mkdir(parents=True, exist_ok=True)
+        path = folder / f"{name}.py"
+        if not path.exists() or path.read_text() != text:
+            _replace(path, text)
+        return path
+    except OSError:
+        path = Path(tempfile.mkdtemp(prefix="lattice-kernels-")) / f"{name}.py"
+        path.write_text(text)
+        return path
+
+
+def _replace(path: Path, text: str) -> None:
+    descriptor, temporary = tempfile.mkstemp(dir=path.parent, suffix=".part")
+    with os.fdopen(descriptor, "w") as file:
+        file.write(text)
+    os.replace(temporary, path)
