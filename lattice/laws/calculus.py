@@ -11,6 +11,7 @@ from math import comb
 
 import sympy
 
+from lattice.errors import InputError
 from lattice.laws.law import X, Y, Deriv
 
 # Room for every published law by a wide margin, yet expanded in a fraction of a second.
@@ -19,8 +20,11 @@ TERMS_AT_MOST = 400
 Fields = Set[sympy.Symbol]
 
 
-class TooManyTerms(ValueError):
+class TooManyTerms(InputError):
     """An expression whose products would multiply out into more than `TERMS_AT_MOST` terms."""
+
+    def __init__(self) -> None:
+        super().__init__(f"a formula must multiply out into at most {TERMS_AT_MOST} terms; simplify it")
 
 
 def count_terms(expression: sympy.Expr) -> int:
@@ -36,7 +40,7 @@ def count_terms(expression: sympy.Expr) -> int:
     inner = [count_terms(arg) for arg in expression.args]
     count = _combined(expression, inner)
     if count > TERMS_AT_MOST:
-        raise TooManyTerms(f"it multiplies out into more than {TERMS_AT_MOST} terms")
+        raise TooManyTerms
     return count
 
 
@@ -117,6 +121,33 @@ def rebuild(expression: sympy.Expr, replacements: dict[sympy.Symbol, sympy.Expr]
         inner = rebuild(expression.args[0], replacements, fields)
         return differentiate(inner, int(expression.args[1]), int(expression.args[2]), fields)
     return expression.func(*(rebuild(arg, replacements, fields) for arg in expression.args))
+
+
+def vary(expression: sympy.Expr, field: sympy.Symbol, fields: Fields) -> sympy.Expr:
+    """Return the rate at which `expression` changes when a constant is added to `field` everywhere.
+
+    Examples
+    --------
+    >>> from lattice.laws.law import symbol
+    >>> u = symbol("u")
+    >>> vary(Deriv(u**2, 1, 0) / 2 + u**3, u, {u})
+    3*u**2 + Deriv(u, 1, 0)
+    """
+    if isinstance(expression, Deriv):
+        inner, a, b = expression.args
+        return differentiate(vary(inner, field, fields), int(a), int(b), fields)
+    stand_ins = {part: sympy.Dummy(real=True) for part in _outermost_derivatives(expression)}
+    plain = expression.xreplace(stand_ins)
+    back = {dummy: part for part, dummy in stand_ins.items()}
+    changes = [(field, sympy.Integer(1)), *((d, vary(part, field, fields)) for part, d in stand_ins.items())]
+    total = sympy.Add(*(sympy.diff(plain, by) * change for by, change in changes if change != 0))
+    return total.xreplace(back)
+
+
+def _outermost_derivatives(expression: sympy.Expr) -> set[sympy.Expr]:
+    if isinstance(expression, Deriv):
+        return {expression}
+    return set().union(*(_outermost_derivatives(arg) for arg in expression.args))
 
 
 def conserve(expression: sympy.Expr, fields: Fields) -> sympy.Expr:

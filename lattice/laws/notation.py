@@ -197,7 +197,7 @@ class _Parser:
             count_terms(value)
             return self._smooth(conserve(value, self.fields), token)
         except TooManyTerms as error:
-            raise self.fail(f"a formula must stay small, but {error}; simplify it", token) from None
+            raise self.fail(error.message, token) from None
 
     # -- grammar --------------------------------------------------------------------------------------
 
@@ -354,7 +354,7 @@ class _Parser:
         try:
             result = differentiate(value, a, b, self.fields)
         except TooManyTerms as error:
-            raise self.fail(f"a derivative must stay small, but {error}; simplify it", token) from None
+            raise self.fail(error.message, token) from None
         in_x, in_y, total = order_of(result)
         self._check_order(max(in_x, in_y), total, token)
         return result

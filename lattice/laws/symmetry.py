@@ -1,21 +1,21 @@
-"""The symmetries of a law, found from its equations by substitution.
+"""The symmetries of a law, found from its equations by algebra.
 
-Each check replaces symbols, brings the result into standard form and compares; nothing is fitted and nothing is
-assumed about the law. A symmetry that holds only for special parameter values is found by giving `values`.
+Nothing is assumed about the law. Reflections are found for equations whose terms are even or odd one by one, as
+products, powers and functions of one product are; one that needs an addition theorem (`cos(x + y) + cos(x - y)`)
+is not seen. A symmetry that holds only where some parameters vanish is found by `symmetries_at`.
 """
 
 from __future__ import annotations
 
 from collections.abc import Iterator, Mapping, Sequence
+from functools import reduce
 from itertools import product
+from operator import xor
 
 import sympy
 
-from lattice.laws.calculus import Fields, differentiate, multiply_out, rebuild
+from lattice.laws.calculus import Fields, multiply_out, rebuild, vary
 from lattice.laws.law import X, Y, Deriv, Equation, Law, Reflection, Symmetries, symbol
-
-# A constant added to a component; a dummy cannot collide with a name of the law.
-_SHIFT = sympy.Dummy("V", real=True)
 
 
 def find_symmetries(
@@ -43,7 +43,7 @@ def find_symmetries(
         conserved=tuple(e.component for e in equations if e.evolving and has_zero_mean(e.expression, fields)),
         shiftable=tuple(name for name in evolving if _shift_invariant(equations, name, fields)),
         gauge=tuple(name for name in constrained if _shift_invariant(equations, name, fields)),
-        reflections=tuple(_reflections(equations, fields, dimensions)),
+        reflections=tuple(_reflections(equations, dimensions)),
         galilean=any(_galilean(equations, name, fields) for name in evolving),
     )
 
@@ -66,26 +66,21 @@ def _vanishes(expression: sympy.Expr) -> bool:
 # -- constants added to a component -------------------------------------------------------------------
 
 
-def _shifted(equations: Sequence[Equation], name: str, fields: Fields) -> list[sympy.Expr]:
-    """Return by how much each expression changes when a constant is added to component `name`."""
-    replacement = {symbol(name): symbol(name) + _SHIFT}
-    return [rebuild(e.expression, replacement, fields) - e.expression for e in equations]
-
-
 def _shift_invariant(equations: Sequence[Equation], name: str, fields: Fields) -> bool:
-    return all(_vanishes(change) for change in _shifted(equations, name, fields))
+    return all(_vanishes(vary(e.expression, symbol(name), fields)) for e in equations)
 
 
 def _galilean(equations: Sequence[Equation], name: str, fields: Fields) -> bool:
     """Tell whether `name` + V is undone by x -> x - r*V*t: every evolving equation gains r*V*(component)_x."""
-    changes = _shifted(equations, name, fields)
-    own = next(change for e, change in zip(equations, changes) if e.component == name)
-    rate = multiply_out(own).coeff(Deriv(symbol(name), 1, 0))
-    if rate == 0 or rate.free_symbols & (fields | {X, Y}):
+    if any(e.expression.has(X) for e in equations):
+        return False
+    changes = {e.component: multiply_out(vary(e.expression, symbol(name), fields)) for e in equations}
+    rate = changes[name].coeff(Deriv(symbol(name), 1, 0))
+    if rate == 0 or rate.free_symbols & (fields | {Y}):
         return False
     return all(
-        _vanishes(change - rate * Deriv(symbol(e.component), 1, 0)) if e.evolving else _vanishes(change)
-        for e, change in zip(equations, changes)
+        _vanishes(changes[e.component] - (rate * Deriv(symbol(e.component), 1, 0) if e.evolving else 0))
+        for e in equations
     )
 
 
@@ -156,47 +151,67 @@ def _difference(factor: sympy.Expr) -> tuple[sympy.Expr, int, int]:
 
 
 # -- reflections --------------------------------------------------------------------------------------
+#
+# Every switch (x, y, time, the sign of each component) has a bit. What a reflection does to a product is then a
+# mask: the product changes sign where an odd number of the mask's switches are on. Equations ask for masks that
+# must be even.
+
+_FLIP_X, _FLIP_Y, _FLIP_TIME = 1, 2, 4
+_FIRST_SIGN = 3
+
+_ODD = (sympy.sin, sympy.tanh, sympy.sinh)
+_EVEN = (sympy.cos, sympy.cosh, sympy.sech)
 
 
-def _reflections(equations: Sequence[Equation], fields: Fields, dimensions: int) -> Iterator[Reflection]:
-    flips = product((False, True), repeat=dimensions)
-    for flip, time in product(flips, (False, True)):
-        in_x, in_y = flip[0], dimensions == 2 and flip[1]
-        for signs in product((1, -1), repeat=len(equations)):
-            identity = not (in_x or in_y or time) and all(sign == 1 for sign in signs)
-            candidate = Reflection(in_x, in_y, signs, time)
-            if not identity and _unchanged(equations, candidate, fields):
-                yield candidate
+def _reflections(equations: Sequence[Equation], dimensions: int) -> Iterator[Reflection]:
+    conditions = _conditions(equations)
+    flips = product((0, _FLIP_X), (0, _FLIP_Y)[:dimensions], (0, _FLIP_TIME))
+    for flip in map(sum, flips):
+        for signs in product((0, 1), repeat=len(equations)):
+            switches = flip + sum(sign << (_FIRST_SIGN + place) for place, sign in enumerate(signs))
+            if switches and not any(_is_odd(mask & switches) for mask in conditions):
+                yield Reflection(
+                    bool(switches & _FLIP_X),
+                    bool(switches & _FLIP_Y),
+                    tuple(-1 if sign else 1 for sign in signs),
+                    bool(switches & _FLIP_TIME),
+                )
 
 
-def _unchanged(equations: Sequence[Equation], candidate: Reflection, fields: Fields) -> bool:
-    signs = {symbol(e.component): sign for e, sign in zip(equations, candidate.signs)}
-    for equation, sign in zip(equations, candidate.signs):
-        image = _image(equation.expression, candidate, signs, fields)
+def _is_odd(mask: int) -> bool:
+    return mask.bit_count() % 2 == 1
+
+
+def _conditions(equations: Sequence[Equation]) -> set[int]:
+    """Return the masks that must be even for a reflection to leave the equations unchanged."""
+    bits = {symbol(e.component): 1 << (_FIRST_SIGN + place) for place, e in enumerate(equations)}
+    bits |= {X: _FLIP_X, Y: _FLIP_Y}
+    conditions: set[int] = set()
+    for equation in equations:
+        mask = _mask(multiply_out(equation.expression), bits, conditions)
         if equation.evolving:
-            expected = [-sign if candidate.time else sign]
-        else:
-            expected = [1, -1]
-        if not any(_vanishes(image - factor * equation.expression) for factor in expected):
-            return False
-    return True
+            conditions.add(mask ^ bits[symbol(equation.component)] ^ _FLIP_TIME)
+    return conditions
 
 
-def _image(
-    expression: sympy.Expr, candidate: Reflection, signs: Mapping[sympy.Symbol, int], fields: Fields
-) -> sympy.Expr:
-    """Return the expression written in the reflected fields and coordinates."""
-    if expression == X:
-        return -X if candidate.x else X
-    if expression == Y:
-        return -Y if candidate.y else Y
+def _mask(expression: sympy.Expr, bits: Mapping[sympy.Symbol, int], conditions: set[int]) -> int:
+    """Return the mask of `expression`; what it takes for it to have one is added to `conditions`."""
     if expression.is_Symbol:
-        return signs.get(expression, 1) * expression
-    if not expression.args:
-        return expression
+        return bits.get(expression, 0)
+    masks = [_mask(arg, bits, conditions) for arg in expression.args]
     if isinstance(expression, Deriv):
-        inner, a, b = expression.args
-        odd = (candidate.x and a % 2 == 1) != (candidate.y and b % 2 == 1)
-        image = differentiate(_image(inner, candidate, signs, fields), int(a), int(b), fields)
-        return -image if odd else image
-    return expression.func(*(_image(arg, candidate, signs, fields) for arg in expression.args))
+        along_x, along_y = (int(order) % 2 for order in expression.args[1:])
+        return masks[0] ^ along_x * _FLIP_X ^ along_y * _FLIP_Y
+    if expression.is_Mul:
+        return reduce(xor, masks)
+    if expression.is_Add:
+        conditions.update(mask ^ masks[0] for mask in masks)
+        return masks[0]
+    if isinstance(expression, _ODD):
+        return masks[0]
+    if isinstance(expression, _EVEN):
+        return 0
+    if expression.is_Pow and expression.exp.is_Integer:
+        return masks[0] if expression.exp % 2 == 1 else 0
+    conditions.update(masks)
+    return 0
