@@ -1,0 +1,231 @@
+"""Start from a march: spin a law up from noise, cut a window of one period, make it periodic.
+
+The window is the flow from the end of the spin-up on, seen in the frame of the drift:
+`u(t, x) = u_lab(t, x + cx*t)`. Over the first fraction `blend` of the period a smooth weight mixes it
+with its own continuation one period later, `v(t) = w u(t) + (1 - w) u(t + T)`, so that `v` is as smooth
+across the seam as elsewhere. Rank 0 marches and hands out one slice at a time; every rank keeps its own
+part. The field is the same, bit for bit, on any number of ranks.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Iterator
+from typing import TYPE_CHECKING
+
+import numpy as np
+from numpy.typing import NDArray
+
+from lattice.errors import InputError
+from lattice.geometry.block import Block
+from lattice.geometry.lattice import Lattice
+from lattice.laws.law import Law
+from lattice.starts.drift import drift_of_slice, drift_that_aligns
+from lattice.starts.noise import random_spectrum
+from lattice.starts.options import MarchOptions, Report, silent
+from lattice.starts.stepper import Stepper, Values, settle, suggest_dt
+from lattice.starts.streaming import broadcast_slabs, on_root
+
+if TYPE_CHECKING:
+    from mpi4py import MPI
+
+Real = NDArray[np.float64]
+Complex = NDArray[np.complex128]
+
+SPIN_UP_TOLERANCE = 1e-5
+WINDOW_TOLERANCE = 1e-6
+"""Largest relative errors of one step; the window is what a solver is handed, so it is the finer."""
+STRETCHES = 10
+"""Progress lines of a spin-up."""
+
+
+def march(
+    start: MarchOptions,
+    lattice: Lattice,
+    values: Values,
+    law: Law,
+    block: Block,
+    comm: MPI.Intracomm,
+    report: Report = silent,
+) -> tuple[Real, Values]:
+    """Return this rank's part of a marched window, and the values with what the march found.
+
+    Collective. `report` is called on rank 0 only.
+
+    Parameters
+    ----------
+    start : MarchOptions
+        The job's `start` section.
+    lattice : Lattice
+        Levels and nodes the window is sampled at. `nt = 1` takes the last slice of the march.
+    values : dict of str to float
+        Period, lengths, drifts and parameters.
+    law : Law
+        Any law the marcher takes.
+    block : Block
+        The part of the lattice this rank owns.
+    comm : MPI.Intracomm
+        The ranks.
+
+    Returns
+    -------
+    owned : ndarray, shape block.shape + (components,)
+        Without halo.
+    values : dict of str to float
+        With the drifts along `match_drift`, and the sources that hold the means the law lets run.
+
+    Raises
+    ------
+    InputError, LatticeError
+        On every rank: a law that cannot be marched, or a field that grows without bound.
+    """
+    marcher = _Marcher(start, lattice, values, law, report)
+    found = on_root(comm, marcher.prepare)
+    owned = np.zeros((*block.shape, len(law.components)))
+    for sample, whole in enumerate(broadcast_slabs(comm, marcher.slices)):
+        level = sample % lattice.nt
+        if block.t0 <= level < block.t1:
+            part = whole[block.y0 : block.y1, block.x0 : block.x1]
+            owned[level - block.t0] += blend_weight(sample, lattice.nt, start.blend) * part
+    return owned, {**values, **found}
+
+
+def blend_weight(sample: int, nt: int, blend: float) -> float:
+    """Return the weight of sample `sample` of a window in level `sample % nt`.
+
+    Samples are one level apart; those from `nt` on belong to the continuation. The weight rises over the
+    first `blend*nt` levels as `s**3*(10 - 15*s + 6*s**2)`, which has two continuous derivatives at both ends.
+
+    Examples
+    --------
+    >>> [blend_weight(sample, 10, 0.4) for sample in (0, 2, 12, 5)]
+    [0.0, 0.5, 0.5, 1.0]
+    """
+    s = min(1.0, (sample % nt) / (blend * nt)) if blend > 0.0 else 1.0
+    rising = s * s * s * (10.0 + s * (6.0 * s - 15.0))
+    return rising if sample < nt else 1.0 - rising
+
+
+def samples_in(nt: int, blend: float) -> int:
+    """Return how many slices a window takes: one period and its blended continuation."""
+    return 1 if nt == 1 else nt + math.ceil(blend * nt)
+
+
+class _Marcher:
+    """The march itself; all but the constructor runs on rank 0 only."""
+
+    def __init__(
+        self, start: MarchOptions, lattice: Lattice, values: Values, law: Law, report: Report
+    ) -> None:
+        self.start, self.lattice, self.values, self.law, self.report = start, lattice, values, law, report
+        self.period = values["period"] if lattice.nt > 1 else 0.0
+
+    def prepare(self) -> Values:
+        """Spin up and find the drifts and sources of the window; return these."""
+        self.axes = _matched_axes(self.start, self.law)
+        self.stepper = self._stepper()
+        self.spectrum = self._spin_up(self._noise())
+        self.drift = {axis: self.values.get(f"drift_{axis}", 0.0) for axis in "xy"}
+        self.running: dict[int, float] = {}
+        wandering = _wandering(self.law)
+        if self.lattice.nt > 1 and (self.axes or wandering):
+            self._compare_ends(wandering)
+        elif self.lattice.nt == 1:
+            self._look_at_slice(wandering)
+        found = {f"drift_{axis}": self.drift[axis] for axis in self.axes}
+        sources = {self._name(row): -slope for row, slope in self.running.items()}
+        return {**found, **{f"source_{name}": value for name, value in sources.items()}}
+
+    def slices(self) -> Iterator[Real]:
+        """Yield the window's samples on the lattice's nodes, shape (ny, nx, C)."""
+        spectrum, spacing = self.spectrum, self.period / self.lattice.nt
+        offsets = {row: float(spectrum[row, 0, 0].real) - self._mean(row) for row in self.running}
+        samples = samples_in(self.lattice.nt, self.start.blend)
+        for sample in range(samples):
+            if sample:
+                spectrum = self.stepper.advance(spectrum, spacing)
+            time = sample * spacing
+            seen = self.stepper.modes.shift(spectrum, self.drift["x"] * time, self.drift["y"] * time)
+            for row, slope in self.running.items():
+                seen[row, 0, 0] -= offsets[row] + slope * time
+            yield self.stepper.to_field(seen, (self.lattice.ny, self.lattice.nx))
+            if samples > STRETCHES and sample % (samples // STRETCHES) == 0:
+                self.report(f"march: window {time:.4g} of {(samples - 1) * spacing:.4g}")
+
+    def _stepper(self) -> Stepper:
+        lengths = (self.values.get("length_y", 1.0), self.values["length_x"])
+        dt = 1.0 if self.start.dt is None else self.start.dt
+        return Stepper(self.law, _nodes(self.start, self.lattice), lengths, self.values, dt)
+
+    def _noise(self) -> Complex:
+        spectrum = random_spectrum(self.stepper.operator, self.start.seed, self.start.amplitude)
+        for row in range(len(spectrum)):
+            spectrum[row, 0, 0] += self._mean(row)
+        return spectrum
+
+    def _spin_up(self, spectrum: Complex) -> Complex:
+        """March over the spin-up, and set the step of the window."""
+        stretch = self.start.spin_up / STRETCHES
+        for n in range(STRETCHES if stretch > 0.0 else 0):
+            if self.start.dt is None:
+                spectrum, dt = settle(self.stepper, spectrum, stretch, SPIN_UP_TOLERANCE)
+            else:
+                spectrum, dt = self.stepper.advance(spectrum, stretch), self.start.dt
+            self.report(f"march: spin-up {(n + 1) * stretch:.4g} of {self.start.spin_up:.4g}, dt = {dt:.3g}")
+        if self.start.dt is None:
+            self.stepper = self.stepper.with_step(suggest_dt(self.stepper, spectrum, WINDOW_TOLERANCE))
+        return spectrum
+
+    def _compare_ends(self, wandering: list[int]) -> None:
+        """Find the drifts and the slopes of wandering means from the window's two ends."""
+        first, last = self.spectrum, self.stepper.advance(self.spectrum, self.period)
+        for row in wandering:
+            self.running[row] = float((last - first)[row, 0, 0].real) / self.period
+        given = {
+            axis: 0.0 if axis in self.axes else drift * self.period for axis, drift in self.drift.items()
+        }
+        if self.axes:
+            back = self.stepper.modes.shift(last, given["x"], given["y"])
+            self.drift.update(drift_that_aligns(self.stepper.modes, first, back, self.period, self.axes))
+
+    def _look_at_slice(self, wandering: list[int]) -> None:
+        rate = self.stepper.operator.rate(self.spectrum)
+        for row in wandering:
+            self.running[row] = float(rate[row, 0, 0].real)
+        if self.axes:
+            self.drift.update(drift_of_slice(self.stepper.modes, self.spectrum, rate, self.axes))
+
+    def _name(self, row: int) -> str:
+        return self.law.components[self.stepper.operator.evolving[row]]
+
+    def _mean(self, row: int) -> float:
+        return float(self.start.mean.get(self._name(row), 0.0))
+
+
+def _nodes(start: MarchOptions, lattice: Lattice) -> tuple[int, int]:
+    """Return the marcher's nodes (ny, nx): those given, else the lattice's."""
+    if start.shape is None:
+        return (lattice.ny, lattice.nx)
+    given = tuple(start.shape)
+    if len(given) != lattice.dimensions:
+        wanted = "[nx]" if lattice.dimensions == 1 else "[ny, nx]"
+        raise InputError(f"start.shape must be {wanted} for this law, got {list(given)}")
+    return (given[0], given[1]) if len(given) == 2 else (1, given[0])
+
+
+def _matched_axes(start: MarchOptions, law: Law) -> tuple[str, ...]:
+    axes = tuple(getattr(start, "match_drift", None) or ())
+    for axis in axes:
+        if not law.symmetries.homogeneous.get(axis, False):
+            raise InputError(
+                f"start.match_drift must name axes along which law {law.name} is the same everywhere, got "
+                f"'{axis}'; remove it"
+            )
+    return axes
+
+
+def _wandering(law: Law) -> list[int]:
+    """Return the rows of evolving components whose mean runs freely without changing anything else."""
+    evolving = [c for c, on in zip(law.components, law.evolving, strict=True) if on]
+    free = set(law.symmetries.shiftable) - set(law.symmetries.conserved)
+    return [row for row, name in enumerate(evolving) if name in free]
