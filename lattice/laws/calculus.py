@@ -12,7 +12,7 @@ from math import comb
 import sympy
 
 from lattice.errors import InputError
-from lattice.laws.law import X, Y, Deriv
+from lattice.laws.law import Deriv, X, Y
 
 # Room for every published law by a wide margin, yet expanded in a fraction of a second.
 TERMS_AT_MOST = 400
@@ -111,7 +111,9 @@ def order_of(expression: sympy.Expr) -> tuple[int, int, int]:
     return highest[0], highest[1], highest[2]
 
 
-def rebuild(expression: sympy.Expr, replacements: dict[sympy.Symbol, sympy.Expr], fields: Fields) -> sympy.Expr:
+def rebuild(
+    expression: sympy.Expr, replacements: dict[sympy.Symbol, sympy.Expr], fields: Fields
+) -> sympy.Expr:
     """Return `expression` with symbols replaced and every derivative brought into standard form again."""
     if expression.is_Symbol:
         return replacements.get(expression, expression)

@@ -7,6 +7,7 @@ from __future__ import annotations
 
 import tomllib
 from collections.abc import Mapping, Sequence
+from dataclasses import dataclass, replace
 from functools import cache
 from math import isfinite
 from pathlib import Path
@@ -29,6 +30,31 @@ _PARAMETER_KEYS = ("default", "unit", "meaning")
 def law_names() -> list[str]:
     """Return the names of the shipped laws, sorted."""
     return sorted(path.stem for path in FOLDER.glob("*.toml"))
+
+
+@dataclass(frozen=True)
+class Summary:
+    """What a list of laws shows of one: read from its file without reading its formulas."""
+
+    name: str
+    title: str
+    dimensions: int
+    components: tuple[str, ...]
+
+
+def law_summaries() -> list[Summary]:
+    """Return a summary of every shipped law, sorted by name. Does not import SymPy."""
+    return [_summary(FOLDER / f"{name}.toml") for name in law_names()]
+
+
+def _summary(path: Path) -> Summary:
+    content = _load_toml(path)
+    return Summary(
+        name=path.stem,
+        title=_text(content, "title", path),
+        dimensions=_dimensions(content, path),
+        components=tuple(_texts(content, "components", path)),
+    )
 
 
 @cache
@@ -117,14 +143,13 @@ def read_law_file(path: Path) -> Law:
     InputError
         For a file that is not TOML, has unknown or missing keys, or values of the wrong type.
     """
-    from dataclasses import replace
-
     content = _load_toml(path)
     _check_keys(content, _KEYS, path)
     texts = {key: _text(content, key, path) for key in _TEXTS}
     texts |= {key: _text(content, key, path) for key in _OPTIONAL_TEXTS if key in content}
     if texts["name"] != path.stem:
-        raise InputError(f"must be {path.stem!r}, the name of the file, got {texts['name']!r}", file=path.name, key="name")
+        message = f"must be {path.stem!r}, the name of the file, got {texts['name']!r}"
+        raise InputError(message, file=path.name, key="name")
     parameters = _parameters(_table(content.get("parameters", {}), "parameters", path), path)
     law = read_law(
         texts["name"],
@@ -133,7 +158,14 @@ def read_law_file(path: Path) -> Law:
         parameters,
         _dimensions(content, path),
     )
-    return replace(law, **{key: value for key, value in texts.items() if key != "name"})
+    return replace(
+        law,
+        title=texts["title"],
+        source=texts["source"],
+        scaling=texts.get("scaling", ""),
+        notes=texts.get("notes", ""),
+        best_for=texts.get("best_for", ""),
+    )
 
 
 def _load_toml(path: Path) -> dict[str, Any]:
@@ -149,7 +181,9 @@ def _check_keys(table: Mapping[str, Any], known: Sequence[str], path: Path, pref
     for key in table:
         if key not in known:
             remedy = suggest(key, known)
-            raise InputError(f"unknown key{remedy}; known are {', '.join(known)}", file=path.name, key=prefix + key)
+            raise InputError(
+                f"unknown key{remedy}; known are {', '.join(known)}", file=path.name, key=prefix + key
+            )
 
 
 def _required(content: Mapping[str, Any], key: str, path: Path) -> Any:

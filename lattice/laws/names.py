@@ -56,12 +56,12 @@ def declare(components: Sequence[str], parameters: Iterable[str], dimensions: in
     names = Names(tuple(components), tuple(parameters), dimensions)
     if dimensions not in (1, 2):
         raise InputError(f"law.dimensions must be 1 or 2, got {dimensions!r}")
-    _check_counts(names)
     for name in names.components:
         _check_name(name, "component", _COMPONENT, "use letters and digits, without underscore")
     for name in names.parameters:
         _check_name(name, "parameter", _PARAMETER, "use letters, digits and single underscores")
         _check_parameter(name, names)
+    _check_counts(names)
     return names
 
 
@@ -88,12 +88,12 @@ def _check_name(name: str, role: str, pattern: re.Pattern[str], remedy: str) -> 
         )
     if name in RESERVED:
         raise InputError(f"a {role} must not be called {name!r}, which has a meaning of its own; rename it")
-    if keyword.iskeyword(name) or name.startswith("source_"):
-        raise InputError(f"a {role} must not be called {name!r}, a reserved word; rename it, e.g. {_other(name)!r}")
-
-
-def _other(name: str) -> str:
-    return name.replace("_", "") if "_" in name else name[:3] + "1"
+    if name.startswith("source_"):
+        raise InputError(f"a {role} must not begin with source_, got {name!r}; uniform sources are named so")
+    if keyword.iskeyword(name):
+        raise InputError(
+            f"a {role} must not be called {name!r}, a word of Python; rename it, e.g. '{name[:3]}1'"
+        )
 
 
 def _check_parameter(name: str, names: Names) -> None:

@@ -79,7 +79,9 @@ def read_equations(
     return _assign(read, texts, names)
 
 
-def read_expression(text: str, components: Sequence[str], parameters: Iterable[str], dimensions: int) -> sympy.Expr:
+def read_expression(
+    text: str, components: Sequence[str], parameters: Iterable[str], dimensions: int
+) -> sympy.Expr:
     """Read one expression (no `=`, no time derivative) in the notation; errors as `read_equations`."""
     return _Parser(text, declare(components, parameters, dimensions)).expression()
 
@@ -185,7 +187,8 @@ class _Parser:
         factor = sympy.diff(value, rate)
         if not factor.is_number or factor == 0:
             raise self.fail(
-                f"{rates[0]}_t must stand alone with a number as factor; divide the equation by its factor", place
+                f"{rates[0]}_t must stand alone with a number as factor; divide the equation by its factor",
+                place,
             )
         return rates[0], self._finish(self._divided(value.subs(rate, 0), factor), equals)
 
@@ -298,7 +301,9 @@ class _Parser:
         if name == "t":
             return self.fail("t must not appear: a law must not depend on time itself", token)
         if head in self.names.parameters:
-            return self.fail(f"{name!r} must be the derivative of a component, but {head!r} is a parameter", token)
+            return self.fail(
+                f"{name!r} must be the derivative of a component, but {head!r} is a parameter", token
+            )
         if head in self.names.components:
             return self.fail(f"a subscript must be made of x, y, t, got {letters!r} in {name!r}", token)
         known = (*self.names.known(), *(f"{c}_{s}" for c in self.names.components for s in ("t", "x", "xx")))
@@ -333,7 +338,9 @@ class _Parser:
         letters = token.text[1:]
         if not letters or set(letters) - set("xy"):
             remedy = "; put _t on a bare component" if "t" in letters else ""
-            raise self.fail(f"a subscript of a parenthesis must be made of x, y, got {token.text!r}{remedy}", token)
+            raise self.fail(
+                f"a subscript of a parenthesis must be made of x, y, got {token.text!r}{remedy}", token
+            )
         return self._derivative(value, letters, token)
 
     def _derivative(self, value: sympy.Expr, letters: str, token: Token) -> sympy.Expr:
@@ -386,7 +393,9 @@ class _Parser:
             )
         size = abs(int(exponent)) + (0 if exponent.is_Integer else 1)
         if size * _highest_power(base) > POWER_AT_MOST or size * _bits(base) > BITS_AT_MOST:
-            raise self.fail(f"a power must stay below {POWER_AT_MOST} and its numbers small; simplify it", token)
+            raise self.fail(
+                f"a power must stay below {POWER_AT_MOST} and its numbers small; simplify it", token
+            )
         if exponent < 0:
             return self._inverse(base, token) ** -exponent
         if base.has(*self.rates.values()):

@@ -15,7 +15,7 @@ from operator import xor
 import sympy
 
 from lattice.laws.calculus import Fields, multiply_out, rebuild, vary
-from lattice.laws.law import X, Y, Deriv, Equation, Law, Reflection, Symmetries, symbol
+from lattice.laws.law import Deriv, Equation, Law, Reflection, Symmetries, X, Y, symbol
 
 
 def find_symmetries(
@@ -37,9 +37,7 @@ def find_symmetries(
     constrained = [e.component for e in equations if not e.evolving]
     axes = dict(zip(("x", "y"), (X, Y)[:dimensions]))
     return Symmetries(
-        homogeneous={
-            name: not any(e.expression.has(axis) for e in equations) for name, axis in axes.items()
-        },
+        homogeneous={name: not any(e.expression.has(axis) for e in equations) for name, axis in axes.items()},
         conserved=tuple(e.component for e in equations if e.evolving and has_zero_mean(e.expression, fields)),
         shiftable=tuple(name for name in evolving if _shift_invariant(equations, name, fields)),
         gauge=tuple(name for name in constrained if _shift_invariant(equations, name, fields)),
@@ -107,10 +105,19 @@ def has_zero_mean(expression: sympy.Expr, fields: Fields) -> bool:
 
 
 def _is_wave(factor: sympy.Expr, fields: Fields) -> bool:
-    """Tell whether `factor` is sin or cos of (constant * x + constant * y + constant), not a constant itself."""
-    if not isinstance(factor, (sympy.sin, sympy.cos)) or factor.free_symbols & fields:
+    """Tell whether `factor` is a wave: sin or cos of a*x + b*y + constant, or such a one in x times one in y."""
+    if factor.free_symbols & fields:
         return False
-    slopes = [sympy.diff(factor.args[0], axis) for axis in (X, Y)]
+    parts = sympy.Mul.make_args(factor)
+    axes = [part.free_symbols & {X, Y} for part in parts]
+    apart = len(parts) == 1 or (len(parts) == 2 and not axes[0] & axes[1])
+    return apart and all(
+        isinstance(part, (sympy.sin, sympy.cos)) and _is_linear(part.args[0]) for part in parts
+    )
+
+
+def _is_linear(argument: sympy.Expr) -> bool:
+    slopes = [sympy.diff(argument, axis) for axis in (X, Y)]
     return any(slope != 0 for slope in slopes) and not any(slope.free_symbols & {X, Y} for slope in slopes)
 
 
@@ -188,8 +195,9 @@ def _conditions(equations: Sequence[Equation]) -> set[int]:
     bits |= {X: _FLIP_X, Y: _FLIP_Y}
     conditions: set[int] = set()
     for equation in equations:
-        mask = _mask(multiply_out(equation.expression), bits, conditions)
-        if equation.evolving:
+        expression = multiply_out(equation.expression)
+        mask = _mask(expression, bits, conditions)
+        if equation.evolving and expression != 0:
             conditions.add(mask ^ bits[symbol(equation.component)] ^ _FLIP_TIME)
     return conditions
 
