@@ -11,7 +11,7 @@ from math import comb
 
 import sympy
 
-from lattice.errors import InputError
+from lattice.errors import FormulaError
 from lattice.laws.law import Deriv, X, Y
 
 # Room for every published law by a wide margin, yet expanded in a fraction of a second.
@@ -20,7 +20,7 @@ TERMS_AT_MOST = 400
 Fields = Set[sympy.Symbol]
 
 
-class TooManyTerms(InputError):
+class TooManyTerms(FormulaError):
     """An expression whose products would multiply out into more than `TERMS_AT_MOST` terms."""
 
     def __init__(self) -> None:
@@ -104,7 +104,7 @@ def _differentiate_term(term: sympy.Expr, a: int, b: int, fields: Fields) -> sym
 def order_of(expression: sympy.Expr) -> tuple[int, int, int]:
     """Return the highest derivative order in x, in y and in total; nested derivatives add up."""
     inner = [order_of(arg) for arg in expression.args]
-    highest = tuple(max(orders) for orders in zip(*inner)) if inner else (0, 0, 0)
+    highest = tuple(max(orders) for orders in zip(*inner, strict=True)) if inner else (0, 0, 0)
     if isinstance(expression, Deriv):
         a, b = int(expression.args[1]), int(expression.args[2])
         return highest[0] + a, highest[1] + b, highest[2] + a + b

@@ -29,11 +29,11 @@ def _row(summary: Summary) -> tuple[str, str, str, str]:
 
 def _align(rows: Sequence[Sequence[str]]) -> list[str]:
     """Return rows with columns padded to equal width; the last column wraps below itself."""
-    widths = [max(map(len, column)) for column in zip(*rows)]
+    widths = [max(map(len, column)) for column in zip(*rows, strict=True)]
     start = sum(widths[:-1]) + 2 * (len(widths) - 1)
     lines = []
     for row in rows:
-        head = "".join(cell.ljust(width + 2) for cell, width in zip(row[:-1], widths))
+        head = "".join(cell.ljust(width + 2) for cell, width in zip(row[:-1], widths[:-1], strict=True))
         lines.append(_filled(row[-1], head, " " * start))
     return lines
 
@@ -141,7 +141,7 @@ def _continuous(found: Symmetries) -> Iterator[str]:
 
 def _in_words(reflection: Reflection, components: Sequence[str]) -> str:
     flips = {"t": reflection.time, "x": reflection.x, "y": reflection.y}
-    signs = dict(zip(components, reflection.signs))
+    signs = dict(zip(components, reflection.signs, strict=True))
     changed = [name for name, flipped in flips.items() if flipped]
     changed += [name for name, sign in signs.items() if sign < 0]
     return ", ".join(f"{name} -> -{name}" for name in changed)

@@ -49,13 +49,13 @@ def _repeats(law: Law, values: Mapping[str, float], axis: str) -> bool:
             for turn in (0, 1)
         )
         largest = max(map(abs, here))
-        if not all(abs(a - b) <= _TOLERANCE * largest for a, b in zip(here, there)):
+        if not all(abs(a - b) <= _TOLERANCE * largest for a, b in zip(here, there, strict=True)):
             return False
     return True
 
 
 def _without_fields(expression: sympy.Expr, law: Law) -> sympy.Expr:
-    """Put a number of its own for every component and derivative, so that only x, y and parameters are left."""
+    """Put a number of its own for every component and derivative; x, y and parameters are left."""
     parts = [*sorted(expression.atoms(Deriv), key=str), *(symbol(name) for name in law.components)]
     numbers = {part: sympy.Float(0.7 + 0.1 * place) for place, part in enumerate(parts)}
     return expression.xreplace(numbers)

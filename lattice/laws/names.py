@@ -84,7 +84,8 @@ def _check_counts(names: Names) -> None:
 def _check_name(name: str, role: str, pattern: re.Pattern[str], remedy: str) -> None:
     if not isinstance(name, str) or len(name) > NAME_AT_MOST or not pattern.fullmatch(name):
         raise InputError(
-            f"a {role} must have a plain name of at most {NAME_AT_MOST} characters, got {name!r:.60}; {remedy}"
+            f"a {role} must have a plain name of at most {NAME_AT_MOST} characters, "
+            f"got {name!r:.60}; {remedy}"
         )
     if name in RESERVED:
         raise InputError(f"a {role} must not be called {name!r}, which has a meaning of its own; rename it")

@@ -18,23 +18,22 @@ looked up in the law's own list, and sizes, nesting, exponents and numbers are l
 from __future__ import annotations
 
 from collections.abc import Callable, Iterable, Sequence
+from typing import TypeVar
 
 import sympy
 
 from lattice.errors import FormulaError
-from lattice.laws.calculus import TooManyTerms, conserve, count_terms, differentiate, order_of
-from lattice.laws.law import Deriv, Equation, symbol
+from lattice.laws import bounds
+from lattice.laws.calculus import conserve, count_terms, differentiate, order_of
+from lattice.laws.law import Equation, symbol
 from lattice.laws.names import FUNCTIONS, Names, declare, suggest
 from lattice.laws.tokens import Token, refuse, split_tokens
 
 NESTING_AT_MOST = 40
-POWER_AT_MOST = 32
-BITS_AT_MOST = 2000
 ORDER_PER_AXIS = 6
 ORDER_IN_TOTAL = 8
 
-_FUNCTIONS: dict[str, Callable[..., sympy.Expr]] = {name: getattr(sympy, name) for name in FUNCTIONS}
-_SMOOTH = (sympy.sin, sympy.cos, sympy.exp, sympy.log, sympy.tanh, sympy.sech, sympy.sinh, sympy.cosh, Deriv)
+_Result = TypeVar("_Result")
 
 
 def read_equations(
@@ -90,7 +89,7 @@ def _assign(
     read: list[tuple[str | None, sympy.Expr]], texts: Sequence[str], names: Names
 ) -> tuple[Equation, ...]:
     evolving: dict[str, sympy.Expr] = {}
-    for (component, expression), text in zip(read, texts):
+    for (component, expression), text in zip(read, texts, strict=True):
         if component in evolving:
             raise refuse(f"{component}_t must stand in one equation only; remove one of them", text, 0)
         if component is not None:
@@ -196,10 +195,14 @@ class _Parser:
         return sympy.Add(*(term / factor for term in sympy.Add.make_args(value)))
 
     def _finish(self, value: sympy.Expr, token: Token) -> sympy.Expr:
+        self._at(token, count_terms, value)
+        return self._at(token, bounds.smooth, self._at(token, conserve, value, self.fields))
+
+    def _at(self, token: Token, function: Callable[..., _Result], *arguments: object) -> _Result:
+        """Call `function` and give its refusal the place of `token`."""
         try:
-            count_terms(value)
-            return self._smooth(conserve(value, self.fields), token)
-        except TooManyTerms as error:
+            return function(*arguments)
+        except FormulaError as error:
             raise self.fail(error.message, token) from None
 
     # -- grammar --------------------------------------------------------------------------------------
@@ -211,15 +214,16 @@ class _Parser:
             term = self.product()
             terms.append(-term if operator.text == "-" else term)
         self.depth -= 1
-        return self._bounded(sympy.Add(*terms), self.token)
+        return self._at(self.token, bounds.bounded, sympy.Add(*terms))
 
     def product(self) -> sympy.Expr:
         factors = [self.sign()]
         while operator := self.accept("*", "/"):
             place = self.token
             factor = self.sign()
-            factors.append(self._inverse(factor, place) if operator.text == "/" else factor)
-        return self._bounded(sympy.Mul(*factors), self.token)
+            divides = operator.text == "/"
+            factors.append(self._at(place, bounds.inverse, factor) if divides else factor)
+        return self._at(self.token, bounds.bounded, sympy.Mul(*factors))
 
     def sign(self) -> sympy.Expr:
         negative = False
@@ -237,7 +241,7 @@ class _Parser:
         place = self.token
         exponent = self.sign()
         self.depth -= 1
-        return self._power(base, exponent, place)
+        return self._at(place, bounds.power, base, exponent, self.fields)
 
     def postfix(self) -> sympy.Expr:
         value, closed = self.atom()
@@ -276,7 +280,7 @@ class _Parser:
 
     def _named(self, token: Token) -> tuple[sympy.Expr, bool]:
         name = token.text
-        if name in _FUNCTIONS or name == "lap":
+        if name in FUNCTIONS or name == "lap":
             return self._call(token), True
         if name in self.names.components or name in self.names.parameters:
             return symbol(name), False
@@ -318,7 +322,7 @@ class _Parser:
         argument = self._inside(opening)
         if token.text == "lap":
             return self._laplacian(argument, token)
-        return self._smooth(_FUNCTIONS[token.text](argument), token)
+        return self._at(token, bounds.apply, token.text, argument)
 
     # -- derivatives ----------------------------------------------------------------------------------
 
@@ -358,10 +362,7 @@ class _Parser:
         if value.has(*self.rates.values()):
             raise self.fail("a time derivative must not be differentiated in space", token)
         self._check_order(max(a, b), a + b, token)
-        try:
-            result = differentiate(value, a, b, self.fields)
-        except TooManyTerms as error:
-            raise self.fail(error.message, token) from None
+        result = self._at(token, differentiate, value, a, b, self.fields)
         in_x, in_y, total = order_of(result)
         self._check_order(max(in_x, in_y), total, token)
         return result
@@ -369,59 +370,7 @@ class _Parser:
     def _check_order(self, on_axis: int, total: int, token: Token) -> None:
         if on_axis > ORDER_PER_AXIS or total > ORDER_IN_TOTAL:
             raise self.fail(
-                f"derivatives must be of order <= {ORDER_PER_AXIS} along one axis and <= {ORDER_IN_TOTAL} in all, "
-                f"got {on_axis} and {total}",
+                f"derivatives must be of order <= {ORDER_PER_AXIS} along one axis "
+                f"and <= {ORDER_IN_TOTAL} in all, got {on_axis} and {total}",
                 token,
             )
-
-    # -- arithmetic within limits ---------------------------------------------------------------------
-
-    def _inverse(self, value: sympy.Expr, token: Token) -> sympy.Expr:
-        if value == 0:
-            raise self.fail("a divisor must not be zero", token)
-        if value.has(Deriv, *self.rates.values()):
-            raise self.fail("a divisor must not contain derivatives; multiply the equation by it", token)
-        return value**-1
-
-    def _power(self, base: sympy.Expr, exponent: sympy.Expr, token: Token) -> sympy.Expr:
-        if not exponent.is_Rational:
-            raise self.fail("an exponent must be a number; write exp( ) for other powers", token)
-        if not exponent.is_Integer and base.free_symbols & (self.fields | {symbol("x"), symbol("y")}):
-            raise self.fail(
-                f"the exponent of a component must be a whole number, got {exponent}; write sqrt( ) for a root",
-                token,
-            )
-        size = abs(int(exponent)) + (0 if exponent.is_Integer else 1)
-        if size * _highest_power(base) > POWER_AT_MOST or size * _bits(base) > BITS_AT_MOST:
-            raise self.fail(
-                f"a power must stay below {POWER_AT_MOST} and its numbers small; simplify it", token
-            )
-        if exponent < 0:
-            return self._inverse(base, token) ** -exponent
-        if base.has(*self.rates.values()):
-            raise self.fail("a time derivative must not be raised to a power", token)
-        return self._smooth(base**exponent, token)
-
-    def _bounded(self, value: sympy.Expr, token: Token) -> sympy.Expr:
-        if _highest_power(value) > POWER_AT_MOST or _bits(value) > BITS_AT_MOST:
-            raise self.fail(f"powers must stay below {POWER_AT_MOST} and numbers small; simplify", token)
-        return value
-
-    def _smooth(self, value: sympy.Expr, token: Token) -> sympy.Expr:
-        """Refuse what is not real and analytic: SymPy may turn sqrt(u**2) into a modulus, log(0) into infinity."""
-        for part in sympy.preorder_traversal(value):
-            if part.is_Function and not isinstance(part, _SMOOTH):
-                raise self.fail(f"a law must be smooth, but this contains {part.func.__name__}", token)
-            if part.is_Atom and not (part.is_Symbol or part.is_Rational or part in (sympy.pi, sympy.E)):
-                raise self.fail(f"a law must be made of real, finite numbers, but this gives {part}", token)
-        return value
-
-
-def _highest_power(value: sympy.Expr) -> int:
-    exponents = [abs(power.exp) for power in value.atoms(sympy.Pow) if power.exp.is_Rational]
-    return max([1, *(int(exponent) for exponent in exponents)])
-
-
-def _bits(value: sympy.Expr) -> int:
-    numbers = value.atoms(sympy.Rational)
-    return max([1, *(max(int(n.p).bit_length(), int(n.q).bit_length()) for n in numbers)])

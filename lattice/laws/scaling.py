@@ -1,27 +1,28 @@
 """From the film laws' units to metres and seconds, and back.
 
-A film of kinematic viscosity nu and thickness h flows down a plate at the angle theta to the horizontal. To first
-order in the slope of its surface [1]_, averaged over the thickness, with g the gravity, sigma the surface tension
-and rho the density::
+A film of kinematic viscosity nu and thickness h flows down a plate at the angle theta to the horizontal. To
+first order in the slope of its surface [1]_, averaged over the thickness, with g the gravity, sigma the
+surface tension and rho the density::
 
     h_t + (g sin(theta)/nu) h^2 h_x + (2/15) (g sin(theta))^2/nu^3 (h^6 h_x)_x
         + div( h^3/(3 nu) * grad(-g cos(theta) h + (sigma/rho) lap h) ) = 0
 
-Put h = h0 (1 + H), H small, x in a frame that moves with c0 = g sin(theta) h0^2/nu, and keep the square of H in the
-advection only [2]_ [3]_::
+Put h = h0 (1 + H), H small, x in a frame that moves with c0 = g sin(theta) h0^2/nu, and keep the square of H
+in the advection only [2]_ [3]_::
 
     H_t + 2 c0 H H_x + A H_xx - B H_yy + C lap lap H = 0
     A = (6/5) Re^2 nu - B,   B = g cos(theta) h0^3/(3 nu),   C = sigma h0^3/(3 rho nu)
 
-with Re = g sin(theta) h0^3/(3 nu^2). In units sqrt(C/A) of length, C/A^2 of time and A/(2 c0 sqrt(C/A)) of H this is
-`u_t + u*u_x + u_xx - (B/A)*u_yy + lap(lap(u)) = 0`.
+with Re = g sin(theta) h0^3/(3 nu^2). In units sqrt(C/A) of length, C/A^2 of time and A/(2 c0 sqrt(C/A)) of H
+this is `u_t + u*u_x + u_xx - (B/A)*u_yy + lap(lap(u)) = 0`.
 
 References
 ----------
 .. [1] D. J. Benney, J. Math. Phys. 45 (1966) 150 (from memory; the equation is derived anew in the tests).
 .. [2] G. I. Sivashinsky and D. M. Michelson, Prog. Theor. Phys. 63 (1980) 2112 (from memory).
 .. [3] A. A. Nepomnyashchy, Fluid Dynamics 9 (1974) 354 (from memory).
-.. [4] S. Kalliadasis, C. Ruyer-Quil, B. Scheid and M. G. Velarde, Falling Liquid Films, Springer 2012 (from memory).
+.. [4] S. Kalliadasis, C. Ruyer-Quil, B. Scheid and M. G. Velarde, Falling Liquid Films, Springer 2012 (from
+   memory).
 """
 
 from __future__ import annotations
@@ -108,13 +109,13 @@ def film_units(
     wetting_rate, film_thickness : float
         One of them: mass flow per width in kg/(m s), or mean thickness in m.
     inclination : float
-        Angle of the plate to the horizontal, degrees; 90 is vertical. Above 90 the film hangs below the plate.
+        Angle of the plate to the horizontal, degrees; 90 is vertical, above 90 the film hangs below.
 
     Raises
     ------
     InputError
-        For a value that is not positive and finite, an inclination outside (0, 180), both or none of flow rate and
-        thickness, or a film on which no wave grows.
+        For a value that is not positive and finite, an inclination outside (0, 180), both or none of flow
+        rate and thickness, or a film on which no wave grows.
 
     Examples
     --------
@@ -192,13 +193,15 @@ def _with_cautions(units: FilmUnits) -> FilmUnits:
     if slope > _WAVE_SLOPE:
         wavelength = 2 * pi * sqrt(2) * units.length
         cautions.append(
-            f"the fastest growing wave, {wavelength:.3g} m, is not long against the film, {units.film_thickness:.3g} m"
+            f"the fastest growing wave, {wavelength:.3g} m, is not long against the film, "
+            f"{units.film_thickness:.3g} m"
         )
     if units.reynolds > _REYNOLDS:
         cautions.append(f"Re = {units.reynolds:.3g} is above order one: inertia beyond this equation matters")
     if units.transverse != 0.0:
         cautions.append(
-            f"in two dimensions this plate has a further term {units.transverse:+.4g}*u_yy, which film-2d lacks"
+            f"in two dimensions this plate has a further term {units.transverse:+.4g}*u_yy, "
+            "which film-2d lacks"
         )
     cautions.append(
         "isothermal film without evaporation or vapour shear; base a design decision on certified states, "

@@ -1,8 +1,9 @@
 """The symmetries of a law, found from its equations by algebra.
 
-Nothing is assumed about the law. Reflections are found for equations whose terms are even or odd one by one, as
-products, powers and functions of one product are; one that needs an addition theorem (`cos(x + y) + cos(x - y)`)
-is not seen. A symmetry that holds only where some parameters vanish is found by `symmetries_at`.
+Nothing is assumed about the law. Reflections are found for equations whose terms are even or odd one by
+one, as products, powers and functions of one product are; one that needs an addition theorem
+(`cos(x + y) + cos(x - y)`) is not seen. A symmetry that holds only where some parameters vanish is found by
+`symmetries_at`.
 """
 
 from __future__ import annotations
@@ -35,7 +36,7 @@ def find_symmetries(
     fields = frozenset(symbol(name) for name in components)
     evolving = [e.component for e in equations if e.evolving]
     constrained = [e.component for e in equations if not e.evolving]
-    axes = dict(zip(("x", "y"), (X, Y)[:dimensions]))
+    axes = dict(list({"x": X, "y": Y}.items())[:dimensions])
     return Symmetries(
         homogeneous={name: not any(e.expression.has(axis) for e in equations) for name, axis in axes.items()},
         conserved=tuple(e.component for e in equations if e.evolving and has_zero_mean(e.expression, fields)),
@@ -69,7 +70,7 @@ def _shift_invariant(equations: Sequence[Equation], name: str, fields: Fields) -
 
 
 def _galilean(equations: Sequence[Equation], name: str, fields: Fields) -> bool:
-    """Tell whether `name` + V is undone by x -> x - r*V*t: every evolving equation gains r*V*(component)_x."""
+    """Tell whether x -> x - r*V*t undoes `name` + V: evolving equations gain r*V*(component)_x."""
     if any(e.expression.has(X) for e in equations):
         return False
     changes = {e.component: multiply_out(vary(e.expression, symbol(name), fields)) for e in equations}
@@ -105,7 +106,7 @@ def has_zero_mean(expression: sympy.Expr, fields: Fields) -> bool:
 
 
 def _is_wave(factor: sympy.Expr, fields: Fields) -> bool:
-    """Tell whether `factor` is a wave: sin or cos of a*x + b*y + constant, or such a one in x times one in y."""
+    """Tell whether `factor` is a wave: sin or cos of a*x + b*y + constant, or one in x times one in y."""
     if factor.free_symbols & fields:
         return False
     parts = sympy.Mul.make_args(factor)
@@ -159,9 +160,9 @@ def _difference(factor: sympy.Expr) -> tuple[sympy.Expr, int, int]:
 
 # -- reflections --------------------------------------------------------------------------------------
 #
-# Every switch (x, y, time, the sign of each component) has a bit. What a reflection does to a product is then a
-# mask: the product changes sign where an odd number of the mask's switches are on. Equations ask for masks that
-# must be even.
+# Every switch (x, y, time, the sign of each component) has a bit. What a reflection does to a product is
+# then a mask: the product changes sign where an odd number of the mask's switches are on. For the equations
+# to stay unchanged certain masks must be even.
 
 _FLIP_X, _FLIP_Y, _FLIP_TIME = 1, 2, 4
 _FIRST_SIGN = 3

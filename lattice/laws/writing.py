@@ -29,7 +29,7 @@ def write_expression(expression: sympy.Expr) -> str:
     >>> from lattice.laws.law import Deriv, symbol
     >>> u = symbol("u")
     >>> write_expression(Deriv(u**2, 1, 0) / 2 + Deriv(u, 2, 2))
-    '(u**2)_x/2 + u_xxyy'
+    'u_xxyy + (u**2)_x/2'
     """
     return str(_NotationPrinter().doprint(expression))
 
