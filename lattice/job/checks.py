@@ -6,7 +6,6 @@ from collections.abc import Iterable, Mapping
 from pathlib import Path
 from typing import TYPE_CHECKING
 
-from lattice.geometry.stencils import half_width
 from lattice.job.choices import PRECONDITIONERS
 from lattice.job.problems import Findings, did_you_mean, listed
 from lattice.job.schema import ArrayStart, Job, MarchStart, PatchesSection, Wave, WavesStart
@@ -107,18 +106,10 @@ def _judge_lattice(job: Job, law: Law, findings: Findings) -> None:
 
 def _fewest(law: Law, axis: str, order: int) -> int:
     """Return the fewest nodes: twice the order, and no node twice in one difference."""
-    return max(2 * order, 2 * half_width(highest_derivative(law, axis), order) + 1)
+    from lattice.kernels.scheme import reach
 
-
-def highest_derivative(law: Law, axis: str) -> int:
-    """Return the highest derivative along an axis that the law (or its frame) takes."""
-    from lattice.laws.law import Deriv
-
-    place = 1 + "xy".index(axis)
-    orders = [
-        int(atom.args[place]) for equation in law.equations for atom in equation.expression.atoms(Deriv)
-    ]
-    return max([1, *orders])
+    reaches = [reach(equation.expression, order, order)["xy".index(axis)] for equation in law.equations]
+    return max(2 * order, 2 * max(reaches) + 1)
 
 
 def _judge_nodes(name: str, nodes: int, order: int, fewest: int, findings: Findings) -> None:
@@ -201,6 +192,13 @@ def _judge_march(start: MarchStart, job: Job, law: Law, findings: Findings) -> N
     for nodes in start.shape or ():
         if nodes < 8:
             findings.refuse("start.shape", f"must have at least 8 nodes on each axis, got {nodes}; raise it")
+    for axis in start.match_drift or ():
+        if axis not in homogeneous_axes(law):
+            findings.refuse(
+                "start.match_drift",
+                f"must name axes along which the law is the same everywhere"
+                f" ({listed(homogeneous_axes(law))}), got '{axis}'; remove it",
+            )
     if start.dt is not None and job.box.period is not None and start.dt > job.box.period:
         findings.refuse(
             "start.dt", f"must be <= box.period = {job.box.period}, got {start.dt}; shorten the time step"

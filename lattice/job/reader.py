@@ -15,7 +15,7 @@ from lattice.errors import FormulaError, InputError
 from lattice.job.checks import judge, judge_law_section
 from lattice.job.overrides import lay_over
 from lattice.job.problems import Findings, JobErrors, Problem
-from lattice.job.resolve import fill_from_state, fill_in, find_files
+from lattice.job.resolve import changed, fill_from_state, fill_in, find_files
 from lattice.job.schema import Job
 from lattice.job.wording import problem_from
 
@@ -45,15 +45,26 @@ def load_job(path: str | os.PathLike[str], overrides: Sequence[str] = ()) -> Job
 
 
 def load_job_with_cautions(
-    path: str | os.PathLike[str], overrides: Sequence[str] = ()
+    path: str | os.PathLike[str], overrides: Sequence[str] = (), folder: str | None = None
 ) -> tuple[Job, tuple[str, ...]]:
-    """Return the job of `load_job` and what the user should be warned of, one text each."""
+    """Return the job of `load_job` and what the user should be warned of, one text each.
+
+    Parameters
+    ----------
+    path, overrides
+        As for `load_job`.
+    folder : str, optional
+        The run's folder, instead of the job's own.
+    """
     file = Path(path)
     tables, overridden = lay_over(_read_toml(file), overrides)
     try:
-        return _resolve(tables, file)
+        job, cautions = _resolve(tables, file)
     except _Refused as refused:
         raise JobErrors(refused.problems, str(path), overridden) from None
+    if folder is not None:
+        job = changed(job, output=changed(job.output, folder=folder))
+    return job, cautions
 
 
 class _Refused(Exception):

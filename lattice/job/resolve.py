@@ -94,7 +94,7 @@ def fill_in(job: Job, law: Law, file: Path) -> Job:
         box=changed(job.box, **{f"drift_{a}": getattr(job.box, f"drift_{a}") or 0.0 for a in axes(law)}),
         lattice=_lattice_filled(job, law),
         solve=changed(job.solve, free=named, mean=means),
-        start=_start_filled(job, law, means),
+        start=_start_filled(job, law, means, free),
         output=changed(job.output, folder=job.output.folder or f"runs/{file.stem}"),
     )
 
@@ -111,7 +111,7 @@ def _lattice_filled(job: Job, law: Law) -> Any:
     return changed(job.lattice, order_y=job.lattice.order_x)
 
 
-def _start_filled(job: Job, law: Law, means: dict[str, float]) -> Any:
+def _start_filled(job: Job, law: Law, means: dict[str, float], free: tuple[str, ...]) -> Any:
     start = job.start
     if not isinstance(start, (MarchStart, WavesStart)):
         return start
@@ -119,4 +119,7 @@ def _start_filled(job: Job, law: Law, means: dict[str, float]) -> Any:
     if isinstance(filled, WavesStart):
         modes = tuple(changed(wave, component=wave.component or law.components[0]) for wave in filled.modes)
         return changed(filled, modes=modes)
+    if filled.match_drift is None:
+        guessed = (axis for axis in axes(law) if getattr(job.box, f"drift_{axis}") is None)
+        return changed(filled, match_drift=tuple(axis for axis in guessed if f"drift_{axis}" in free))
     return filled

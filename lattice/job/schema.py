@@ -168,6 +168,11 @@ class MarchStart(Section):
     blend: float = _key(
         "fraction of the period over which the window's end is blended into its start", 0.3, ge=0, lt=1
     )
+    match_drift: tuple[Literal["x", "y"], ...] | None = _key(
+        "axes along which the drift is chosen so that the window's end fits its start",
+        None,
+        shown="axes whose drift is free and not given in [box]",
+    )
     shape: tuple[Count, ...] | None = _key(
         "nodes of the marcher, `[nx]` or `[ny, nx]`",
         None,

@@ -1,0 +1,60 @@
+"""Exit codes, and what the user reads when something stops the program."""
+
+from __future__ import annotations
+
+from lattice.errors import InputError, LatticeError
+
+CONVERGED, REFUSED, NOT_CONVERGED, INTERRUPTED = 0, 2, 3, 4
+FAILED = 70
+"""An error of the program or its libraries; 70 is EX_SOFTWARE of sysexits.h."""
+STOPPED_EARLY = 130
+"""Interrupted before there was a state to keep; 128 + SIGINT as shells have it."""
+PIPE_CLOSED = 141
+"""The reader of the output went away; 128 + SIGPIPE."""
+
+TABLE = """\
+exit codes:
+   0  converged, or done              2  refused input
+   3  not converged (state kept)      4  interrupted with a usable state
+  70  internal failure              130  interrupted before there was a state
+"""
+
+
+def exit_code(error: BaseException) -> int:
+    """Return the exit code for a failure."""
+    error = root_cause(error)
+    if isinstance(error, KeyboardInterrupt):
+        return STOPPED_EARLY
+    return REFUSED if isinstance(error, InputError) else FAILED
+
+
+def explain(error: BaseException, debug: bool = False) -> str:
+    """Return what the user reads about a failure."""
+    error = root_cause(error)
+    if isinstance(error, KeyboardInterrupt):
+        return "interrupted"
+    if isinstance(error, InputError):
+        return f"error: {error}"
+    if isinstance(error, LatticeError):
+        return f"failed: {error}"
+    return f"internal failure: {describe(error)}" + ("" if debug else "; --debug shows where")
+
+
+def describe(error: BaseException) -> str:
+    """Return an exception as one readable line.
+
+    Examples
+    --------
+    >>> describe(ValueError("no such   thing"))
+    'ValueError: no such thing'
+    """
+    text = " ".join(str(error).split())
+    return f"{type(error).__name__}: {text}" if text else type(error).__name__
+
+
+def root_cause(error: BaseException) -> BaseException:
+    """Return our own error where a library has wrapped it: PETSc re-raises a callback's failure."""
+    cause = error.__cause__
+    if type(error).__module__.partition(".")[0] == "petsc4py" and cause is not None:
+        return root_cause(cause)
+    return error

@@ -1,0 +1,176 @@
+"""`lattice solve JOB`: solve a job, here or on several MPI ranks."""
+
+from __future__ import annotations
+
+import argparse
+import os
+import sys
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+from lattice.cli.exits import REFUSED
+from lattice.environment import Launch, find_launch
+from lattice.errors import InputError
+
+if TYPE_CHECKING:
+    from mpi4py import MPI
+
+    from lattice.job.schema import Job
+
+EPILOG = """\
+Options for PETSc follow after `--`, for instance
+  lattice solve jobs/film-first.toml --ranks 4 -- -log_view -ksp_monitor
+
+The run's folder holds state.h5, summary.json, steps.jsonl, job.toml and field.png. The state is written
+after every step. Ctrl-C, SIGTERM or SIGUSR1 ends the run at the next step with exit code 4.
+
+exit codes: 0 converged, 2 refused input, 3 not converged (state kept), 4 interrupted with a usable
+state, 70 internal failure, 130 interrupted before there was a state.
+"""
+
+
+def add_arguments(parser: argparse.ArgumentParser) -> None:
+    """Add this command's arguments."""
+    parser.add_argument("job", metavar="JOB", help="a job file")
+    parser.add_argument("--ranks", metavar="N", type=_count, help="run on N MPI ranks")
+    parser.add_argument("--out", metavar="DIR", help="the run's folder, instead of output.folder")
+    parser.add_argument(
+        "--set",
+        metavar="SECTION.KEY=VALUE",
+        action="append",
+        default=[],
+        dest="overrides",
+        help="a value that replaces the job file's; may be repeated",
+    )
+    parser.add_argument("--force", action="store_true", help="replace the run that the folder holds")
+    parser.add_argument(
+        "--launcher",
+        metavar="COMMAND",
+        help="what starts the ranks, with its options; default: LATTICE_LAUNCHER, else mpiexec",
+    )
+
+
+def _count(text: str) -> int:
+    if not text.isdigit() or int(text) < 1:
+        raise argparse.ArgumentTypeError(f"must be an integer >= 1, got '{text}'")
+    return int(text)
+
+
+def run(options: argparse.Namespace) -> int:
+    """Run the command and return the exit code."""
+    _check_petsc_options(options.petsc_options)
+    launch = find_launch()
+    if launch is not None and options.ranks not in (None, launch.ranks):
+        raise InputError(
+            f"must equal the {launch.ranks} rank(s) that {launch.launcher} started, got {options.ranks};"
+            " leave --ranks out",
+            key="--ranks",
+        )
+    if launch is not None and launch.ranks > 1:
+        return _run_as_rank(options, launch)
+    if options.ranks is not None and options.ranks > 1:
+        return _start_ranks(options)
+    return _run_alone(options)
+
+
+def _check_petsc_options(given: list[str]) -> None:
+    if given and not given[0].startswith("-"):
+        raise InputError(f"PETSc options must start with a dash, got '{given[0]}'", key="--")
+
+
+def _start_ranks(options: argparse.Namespace) -> int:
+    """Judge the job here, so that a refusal costs no launch, then start the ranks."""
+    from lattice.cli.launch import find_launcher, is_oversubscribed, launch_command, run_ranks
+
+    _read_job(options, options.ranks)
+    launcher = find_launcher(options.launcher)
+    if is_oversubscribed(options.ranks):
+        print(f"note: {options.ranks} ranks share fewer cores, and will be slow", file=sys.stderr)
+    program = [sys.executable, "-m", "lattice", *options.typed]
+    command = launch_command(launcher, options.ranks, program)
+    return run_ranks(command, {**os.environ, "PYTHONUNBUFFERED": "1"})
+
+
+def _run_alone(options: argparse.Namespace) -> int:
+    """Solve in this process."""
+    job, cautions = _read_job(options, 1)
+    _warn(cautions)
+    from lattice.cli.guard import run_guarded, stop_on_signals
+
+    stop_on_signals()
+    from mpi4py import MPI
+
+    comm = MPI.COMM_WORLD
+    return run_guarded(comm, lambda: _solve(options, job, comm), options.debug)
+
+
+def _run_as_rank(options: argparse.Namespace, launch: Launch) -> int:
+    """Solve as one of several ranks that a launcher has started."""
+    from lattice.cli.guard import run_guarded, stop_on_signals
+
+    stop_on_signals()
+    from mpi4py import MPI
+
+    comm = MPI.COMM_WORLD
+    if comm.Get_size() != launch.ranks:
+        if launch.rank > 0:
+            return REFUSED
+        raise InputError(
+            f"{launch.launcher} started {launch.ranks} ranks, but MPI sees {comm.Get_size()}: launcher and"
+            " MPI library do not match; use that library's launcher (for srun try --mpi=pmix or --mpi=pmi2)"
+        )
+    return run_guarded(comm, lambda: _solve_together(options, comm), options.debug)
+
+
+def _solve_together(options: argparse.Namespace, comm: MPI.Intracomm) -> int:
+    """Read the job on one rank, give it to all, solve."""
+    answer: tuple[Job | None, str] = (None, "")
+    if comm.Get_rank() == 0:
+        answer = _answer(options, comm.Get_size())
+    job, complaint = comm.bcast(answer)
+    if job is None:
+        # The same error on all ranks, told by one of them.
+        raise InputError(complaint)
+    code = _solve(options, job, comm)
+    # A rank that left early with another code than 0 would have the launcher kill the rest.
+    comm.Barrier()
+    return code
+
+
+def _answer(options: argparse.Namespace, ranks: int) -> tuple[Job | None, str]:
+    try:
+        job, cautions = _read_job(options, ranks)
+    except InputError as error:
+        return None, str(error)
+    _warn(cautions)
+    return job, ""
+
+
+def _read_job(options: argparse.Namespace, ranks: int) -> tuple[Job, tuple[str, ...]]:
+    from lattice.cli.paths import check_run_folder
+    from lattice.job.ranks import check_ranks
+    from lattice.job.reader import load_job_with_cautions
+
+    job, cautions = load_job_with_cautions(options.job, options.overrides, folder=options.out)
+    check_ranks(job, ranks)
+    check_run_folder(Path(job.output.folder or ""), options.force)
+    return job, cautions
+
+
+def _warn(cautions: tuple[str, ...]) -> None:
+    for caution in cautions:
+        print(f"caution: {caution}", file=sys.stderr, flush=True)
+
+
+def _solve(options: argparse.Namespace, job: Job, comm: MPI.Intracomm) -> int:
+    from lattice.solve.run import run_job
+
+    outcome: Any = run_job(job, Path(job.output.folder or ""), comm, options.petsc_options, _report(comm))
+    return int(outcome.exit_code)
+
+
+def _report(comm: MPI.Intracomm) -> Any:
+    """Return what prints a line of progress on one rank."""
+    if comm.Get_rank() > 0:
+        return lambda text: None
+    return lambda text: print(text, flush=True)
