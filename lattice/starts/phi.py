@@ -124,11 +124,12 @@ def weights(linear: Complex, dt: float, matrices: bool) -> Weights:
 def _combine(full: list[Complex], half: list[Complex], dt: float) -> Weights:
     # [1] eqs. (26)-(29), written with phi functions; powers of one matrix commute.
     p1, p2, p3 = full[1:]
+    middle: Complex = np.multiply(2.0 * dt, p2 - 2.0 * p3)
     return Weights(
         whole=full[0],
         half=half[0],
         stage=0.5 * dt * half[1],
         first=dt * (p1 - 3.0 * p2 + 4.0 * p3),
-        middle=2.0 * dt * (p2 - 2.0 * p3),
+        middle=middle,
         last=dt * (4.0 * p3 - p2),
     )

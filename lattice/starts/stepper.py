@@ -33,6 +33,7 @@ FIRST_STEP_RATE = 0.5
 LARGEST_STEP_RATE = 2.0
 """Largest step, in the same measure: much beyond it a step may look exact where the flow is at rest."""
 STEP_CHANGES = 40
+"""Halvings or doublings before a search for the step is given up: a factor of 1e12."""
 
 
 class Stepper:
