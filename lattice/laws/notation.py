@@ -7,7 +7,7 @@ Grammar, with the usual precedence (`-u**2` is `-(u**2)`, `**` binds to the righ
     product  = sign { ("*" | "/") sign }
     sign     = { "+" | "-" } power
     power    = postfix [ "**" sign ]
-    postfix  = atom { subscript }
+    postfix  = atom [ subscript ]
     atom     = number | name | function "(" sum ")" | "lap" "(" sum ")" | "(" sum ")"
 
 A subscript of letters x, y after a component (`u_xxy`) or a closing parenthesis (`(u**2)_x`) is a derivative;
@@ -245,8 +245,8 @@ class _Parser:
 
     def postfix(self) -> sympy.Expr:
         value, closed = self.atom()
-        while self.token.kind == "subscript" and closed:
-            value = self._subscripted(value, self.advance())
+        if closed and self.token.kind == "subscript":
+            return self._subscripted(value, self.advance())
         return value
 
     def atom(self) -> tuple[sympy.Expr, bool]:
