@@ -78,9 +78,12 @@ def _is_remote(error: BaseException) -> bool:
     return isinstance(root_cause(error), RemoteFailure)
 
 
-def stop_on_signals() -> None:
-    """Make SIGUSR1 and SIGTERM end the program like Ctrl-C until the solver takes them over."""
-    for number in (signal.SIGUSR1, signal.SIGTERM):
+def stop_on_signals(alone: bool) -> None:
+    """Make SIGUSR1, and SIGTERM where alone, end the program like Ctrl-C until the solver takes them over.
+
+    SIGTERM is also how a launcher ends the other ranks after one has failed: they have nothing to say.
+    """
+    for number in (signal.SIGUSR1, signal.SIGTERM) if alone else (signal.SIGUSR1,):
         signal.signal(number, _interrupt)
 
 

@@ -5,8 +5,9 @@ from __future__ import annotations
 import argparse
 import os
 import sys
+import time
 from pathlib import Path
-from typing import TYPE_CHECKING, Any
+from typing import TYPE_CHECKING, Any, NoReturn
 
 from lattice.cli.exits import REFUSED
 from lattice.environment import Launch, find_launch
@@ -61,16 +62,25 @@ def run(options: argparse.Namespace) -> int:
     _check_petsc_options(options.petsc_options)
     launch = find_launch()
     if launch is not None and options.ranks not in (None, launch.ranks):
-        raise InputError(
+        _refuse(
+            launch,
             f"must equal the {launch.ranks} rank(s) that {launch.launcher} started, got {options.ranks};"
             " leave --ranks out",
-            key="--ranks",
         )
     if launch is not None and launch.ranks > 1:
         return _run_as_rank(options, launch)
     if options.ranks is not None and options.ranks > 1:
         return _start_ranks(options)
     return _run_alone(options)
+
+
+def _refuse(launch: Launch, message: str) -> NoReturn:
+    """Refuse on all ranks, before MPI is started; the first one tells why."""
+    if launch.rank > 0:
+        # A launcher may kill the first rank, message unsaid, once another has ended in failure.
+        time.sleep(1.0)
+        sys.exit(REFUSED)
+    raise InputError(message, key="--ranks")
 
 
 def _check_petsc_options(given: list[str]) -> None:
@@ -94,10 +104,10 @@ def _start_ranks(options: argparse.Namespace) -> int:
 def _run_alone(options: argparse.Namespace) -> int:
     """Solve in this process."""
     job, cautions = _read_job(options, 1)
-    _warn(cautions)
+    _warn(job, cautions)
     from lattice.cli.guard import run_guarded, stop_on_signals
 
-    stop_on_signals()
+    stop_on_signals(alone=True)
     from mpi4py import MPI
 
     comm = MPI.COMM_WORLD
@@ -108,16 +118,15 @@ def _run_as_rank(options: argparse.Namespace, launch: Launch) -> int:
     """Solve as one of several ranks that a launcher has started."""
     from lattice.cli.guard import run_guarded, stop_on_signals
 
-    stop_on_signals()
+    stop_on_signals(alone=False)
     from mpi4py import MPI
 
     comm = MPI.COMM_WORLD
     if comm.Get_size() != launch.ranks:
-        if launch.rank > 0:
-            return REFUSED
-        raise InputError(
+        _refuse(
+            launch,
             f"{launch.launcher} started {launch.ranks} ranks, but MPI sees {comm.Get_size()}: launcher and"
-            " MPI library do not match; use that library's launcher (for srun try --mpi=pmix or --mpi=pmi2)"
+            " MPI library do not match; use that library's launcher (for srun try --mpi=pmix or --mpi=pmi2)",
         )
     return run_guarded(comm, lambda: _solve_together(options, comm), options.debug)
 
@@ -142,7 +151,7 @@ def _answer(options: argparse.Namespace, ranks: int) -> tuple[Job | None, str]:
         job, cautions = _read_job(options, ranks)
     except InputError as error:
         return None, str(error)
-    _warn(cautions)
+    _warn(job, cautions)
     return job, ""
 
 
@@ -157,8 +166,10 @@ def _read_job(options: argparse.Namespace, ranks: int) -> tuple[Job, tuple[str, 
     return job, cautions
 
 
-def _warn(cautions: tuple[str, ...]) -> None:
-    for caution in cautions:
+def _warn(job: Job, cautions: tuple[str, ...]) -> None:
+    from lattice.job.resolution import resolution_cautions
+
+    for caution in (*cautions, *resolution_cautions(job)):
         print(f"caution: {caution}", file=sys.stderr, flush=True)
 
 

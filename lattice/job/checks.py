@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Mapping
+from collections.abc import Mapping
 from pathlib import Path
 from typing import TYPE_CHECKING
 
@@ -91,6 +91,28 @@ def _judge_box(job: Job, law: Law, findings: Findings) -> None:
                 f"box.drift_{axis}",
                 f"must be 0: the law depends on {axis}, so no state can drift along {axis}, got {drift};"
                 " remove it",
+            )
+
+
+def judge_forcing(job: Job, law: Law, findings: Findings) -> None:
+    """Refuse a box whose length does not hold whole periods of the law's forcing; for a resolved job."""
+    from lattice.job.unknowns import first_values
+    from lattice.laws.forcing import find_aperiodic_axes
+
+    values = first_values(job, law)
+    for axis in find_aperiodic_axes(law, values):
+        findings.refuse(
+            f"box.length_{axis}",
+            f"must hold whole periods of what the law prescribes along {axis}, got"
+            f" {values[f'length_{axis}']}; fit the length or the law's parameters"
+            " (in full precision, 2*pi = 6.283185307179586)",
+        )
+    for name in job.solve.free or ():
+        if name.startswith("length_") and name[-1] not in homogeneous_axes(law):
+            findings.refuse(
+                "solve.free",
+                f"must not name {name}: the law prescribes a force along {name[-1]}, which fits the given"
+                " length only; remove it",
             )
 
 
@@ -223,13 +245,5 @@ def _judge_wave(key: str, wave: Wave, job: Job, law: Law, findings: Findings) ->
 
 
 def _judge_array(start: ArrayStart, findings: Findings) -> None:
-    endings = (".npy", ".h5", ".hdf5")
-    ending = Path(start.file).suffix
-    if ending not in endings:
-        findings.refuse("start.file", f"must end in one of {_spoken(endings)}, got '{start.file}'")
-    elif ending == ".npy" and start.dataset is not None:
+    if Path(start.file).suffix == ".npy" and start.dataset is not None:
         findings.refuse("start.dataset", "is for HDF5 files, start.file is a .npy file; remove it")
-
-
-def _spoken(names: Iterable[str]) -> str:
-    return ", ".join(names)

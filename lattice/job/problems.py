@@ -63,7 +63,7 @@ def did_you_mean(word: str, known: Iterable[str]) -> str:
     >>> did_you_mean("zebra", ["march", "state"])
     ''
     """
-    near = get_close_matches(word, list(known), n=1, cutoff=0.6)
+    near = get_close_matches(word, list(known), n=1, cutoff=0.6 if len(word) > 3 else 0.5)
     return f" (did you mean '{near[0]}'?)" if near else ""
 
 
@@ -79,6 +79,6 @@ def listed(names: Iterable[str], none: str = "none") -> str:
 
 
 def _line(problem: Problem, file: str, overridden: Sequence[str]) -> str:
-    typed = any(problem.key == key or problem.key.startswith(f"{key}.") for key in overridden)
+    typed = any(problem.key == key or problem.key.startswith((f"{key}.", f"{key}[")) for key in overridden)
     place = [f"{file} with --set" if typed else file, problem.key]
     return ": ".join([*(part for part in place if part), problem.message])

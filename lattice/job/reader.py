@@ -12,12 +12,12 @@ from typing import Any
 from pydantic import ValidationError
 
 from lattice.errors import FormulaError, InputError
-from lattice.job.checks import judge, judge_law_section
+from lattice.job.checks import judge, judge_forcing, judge_law_section
 from lattice.job.overrides import lay_over
 from lattice.job.problems import Findings, JobErrors, Problem
 from lattice.job.resolve import changed, fill_from_state, fill_in, find_files
 from lattice.job.schema import Job
-from lattice.job.wording import problem_from
+from lattice.job.wording import problems_from
 
 
 def load_job(path: str | os.PathLike[str], overrides: Sequence[str] = ()) -> Job:
@@ -83,14 +83,17 @@ def _resolve(tables: dict[str, Any], file: Path) -> tuple[Job, tuple[str, ...]]:
     _raise_any(findings)
     job = fill_from_state(job, law, findings)
     _raise_any(findings)
-    return fill_in(job, law, file), tuple(findings.cautions)
+    job = fill_in(job, law, file)
+    judge_forcing(job, law, findings)
+    _raise_any(findings)
+    return job, tuple(findings.cautions)
 
 
 def _validated(tables: dict[str, Any]) -> Job:
     try:
         return Job.model_validate(_frozen(tables))
     except ValidationError as error:
-        raise _Refused([problem_from(details) for details in error.errors(include_url=False)]) from None
+        raise _Refused(problems_from(error.errors(include_url=False))) from None
 
 
 def _law(job: Job) -> Any:

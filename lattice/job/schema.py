@@ -76,7 +76,7 @@ class LawSection(Section):
         "values of the law's parameters by name; for an own law a number or a table with"
         " `default`, `unit` and `meaning`",
         {},
-        shown="the law's own",
+        shown="the law's own, or a stored start's",
     )
 
     def parameter_values(self) -> dict[str, float]:
@@ -93,16 +93,16 @@ class BoxSection(Section):
     period: Positive | None = _key(
         "period in time; first guess where it is free; absent for `lattice.nt = 1`",
         None,
-        shown="from a stored start",
+        shown="required, or a stored start's",
     )
-    length_x: Positive | None = _key("length in x", None, shown="from a stored start")
+    length_x: Positive | None = _key("length in x", None, shown="required, or a stored start's")
     length_y: Positive | None = _key(
-        "length in y, for a law in two dimensions", None, shown="from a stored start"
+        "length in y, for a law in two dimensions", None, shown="required, or a stored start's"
     )
     drift_x: float | None = _key(
-        "velocity in x of the frame in which the state repeats", None, shown="0, or from a stored start"
+        "velocity in x of the frame in which the state repeats", None, shown="0, or a stored start's"
     )
-    drift_y: float | None = _key("the same in y", None, shown="0, or from a stored start")
+    drift_y: float | None = _key("the same in y", None, shown="0, or a stored start's")
 
 
 class LatticeSection(Section):
@@ -214,7 +214,7 @@ class ArrayStart(Section):
     """Start from an array of the user's, shape (nt, ny, nx, components)."""
 
     kind: Literal["array"]
-    file: Name = _key("a .npy or .h5 file, relative to the job file or the current folder")
+    file: Name = _key("a NumPy or HDF5 file, relative to the job file or the current folder")
     dataset: Name | None = _key("name of the dataset in an HDF5 file", None, shown="`u`")
 
 

@@ -33,6 +33,20 @@ _BOUNDS = {
 }
 
 
+def problems_from(found: Sequence[ErrorDetails]) -> list[Problem]:
+    """Return the schema's findings as problems in the user's words.
+
+    A list with a bad item is also found too short; only the item is worth telling.
+    """
+    problems = [(problem_from(details), details["type"]) for details in found]
+    keys = [problem.key for problem, _ in problems]
+    return [
+        problem
+        for problem, kind in problems
+        if kind != "too_short" or not any(key.startswith(f"{problem.key}[") for key in keys)
+    ]
+
+
 def problem_from(details: ErrorDetails) -> Problem:
     """Return one finding of the schema as a problem in the user's words."""
     place = plain_place(details["loc"])
@@ -101,7 +115,8 @@ def _type_remedy(wanted: str, given: Any, place: Place) -> str:
 
 
 def _out_of_bounds(place: Place, details: ErrorDetails) -> str:
-    bound = _BOUNDS[details["type"]].format(**details["ctx"])
+    limits = {name: f"{limit:g}" for name, limit in details["ctx"].items()}
+    bound = _BOUNDS[details["type"]].format(**limits)
     return f"must be {bound}, got {value_text(details['input'])}"
 
 
