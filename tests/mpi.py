@@ -198,21 +198,29 @@ def _end_session(process: subprocess.Popen[bytes]) -> None:
 
 
 def _members(session: int) -> list[int]:
-    """Return the living processes of a session, from Linux's `/proc/PID/stat` (see proc(5))."""
+    """Return the living processes of a session."""
     found = []
     for entry in Path("/proc").iterdir():
-        if not entry.name.isdigit():
-            continue
-        with contextlib.suppress(OSError):
-            # The command name in parentheses may hold spaces: fields are counted after it.
-            state, _parent, _group, member_of = (entry / "stat").read_text().rpartition(")")[2].split()[:4]
-            if int(member_of) == session and state not in "ZX":
-                found.append(int(entry.name))
+        if entry.name.isdigit() and is_running(int(entry.name), session):
+            found.append(int(entry.name))
     return found
+
+
+def is_running(pid: int, session: int | None = None) -> bool:
+    """Return whether a process lives, and belongs to the session; from `/proc/PID/stat`, see proc(5)."""
+    try:
+        status = Path(f"/proc/{pid}/stat").read_text(encoding="utf-8")
+    except OSError:
+        return False
+    # The command name in parentheses may hold spaces: fields are counted after it.
+    state, _parent, _group, member_of = status.rpartition(")")[2].split()[:4]
+    return state not in "ZX" and session in (None, int(member_of))
 
 
 def _run_on_this_rank(seconds: str, kind: str, target: str, *arguments: str) -> None:
     faulthandler.dump_traceback_later(float(seconds), exit=True)
+    # Whole lines: those of several ranks are merged into one stream.
+    sys.stdout.reconfigure(line_buffering=True, write_through=False)
     sys.argv = [target, *arguments]
     sys.path.remove(str(Path(__file__).resolve().parent))
     if kind == "module":
@@ -225,7 +233,7 @@ def _run_on_this_rank(seconds: str, kind: str, target: str, *arguments: str) -> 
 def _run_script(path: str) -> None:
     try:
         runpy.run_path(path, run_name="__main__")
-    except Exception:
+    except Exception:  # noqa: BLE001 - any failure of a script ends all ranks
         traceback.print_exc()
         sys.stderr.flush()
         # Without this the other ranks would wait in their next collective until the time limit.

@@ -1,0 +1,47 @@
+"""What `import lattice` offers: the list grows on purpose only, and each entry is documented in full."""
+
+from __future__ import annotations
+
+import importlib.metadata
+import inspect
+import tomllib
+import warnings
+
+import pytest
+
+import lattice
+from tests.sources import ROOT
+
+SURFACE: list[str] = []
+
+# Of numpydoc's checks: parameters and results described, in order, with types.
+DOCSTRING_CHECKS = {"GL06", "GL07", "GL08", "PR01", "PR02", "PR03", "PR04", "PR07", "RT01", "SS01", "YD01"}
+
+
+def test_the_public_names_are_these() -> None:
+    assert list(getattr(lattice, "__all__", [])) == SURFACE
+
+
+def test_every_public_name_exists() -> None:
+    assert [name for name in SURFACE if not hasattr(lattice, name)] == []
+
+
+@pytest.mark.parametrize("name", SURFACE)
+def test_the_public_surface_is_documented(name: str) -> None:
+    with warnings.catch_warnings():
+        warnings.simplefilter("ignore")  # of the documentation packages, not of ours
+        from numpydoc.validate import validate
+    if not callable(getattr(lattice, name)):
+        pytest.skip(f"{name} is a value")
+    errors = validate(f"lattice.{name}")["errors"]
+    returns_nothing = inspect.isclass(getattr(lattice, name))
+    left_out = {"RT01"} if returns_nothing else set()
+    assert [text for code, text in errors if code in DOCSTRING_CHECKS - left_out] == []
+
+
+def test_the_command_is_installed() -> None:
+    with (ROOT / "pyproject.toml").open("rb") as file:
+        project = tomllib.load(file)["project"]
+    scripts = importlib.metadata.entry_points(group="console_scripts", name="lattice")
+    assert {script.value for script in scripts} == {project["scripts"]["lattice"]}
+    assert importlib.metadata.version(project["name"]) == project["version"]
