@@ -14,7 +14,9 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
 def run(options: argparse.Namespace) -> int:
     """Run the command and return the exit code."""
     from lattice.cli.paths import state_path
+
+    state = state_path(options.state)
     from lattice.show.describe import describe_state
 
-    print(describe_state(state_path(options.state)))
+    print(describe_state(state))
     return 0

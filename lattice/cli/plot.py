@@ -17,10 +17,11 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
 def run(options: argparse.Namespace) -> int:
     """Run the command and return the exit code."""
     from lattice.cli.paths import state_path, writable_path
-    from lattice.show.pictures import plot_state
 
     state = state_path(options.state)
     picture = writable_path(options.out or state.with_suffix(".png"))
+    from lattice.show.pictures import plot_state
+
     plot_state(state, picture)
     print(picture)
     return 0
