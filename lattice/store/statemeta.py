@@ -108,8 +108,8 @@ class StateMeta:
 
 
 def to_json(meta: StateMeta) -> str:
-    """Return `meta` as JSON with sorted keys; numbers that are not finite become null."""
-    return json.dumps(plain(asdict(meta)), sort_keys=True, allow_nan=False, ensure_ascii=False)
+    """Return `meta` as JSON, dictionaries in their order; numbers that are not finite become null."""
+    return json.dumps(plain(asdict(meta)), allow_nan=False, ensure_ascii=False)
 
 
 def from_json(text: str) -> StateMeta:

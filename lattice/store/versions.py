@@ -61,7 +61,7 @@ def _mumps_version() -> str:
     """Return the version in the file name of the MUMPS library this process has loaded (Linux)."""
     with suppress(OSError):
         mapped = Path("/proc/self/maps").read_text(encoding="utf-8", errors="replace")
-        named = re.search(r"libdmumps[-.](?:so\.)?(\d+(?:\.\d+)*)", mapped)
+        named = re.search(r"libdmumps[-.](?:so\.)?(\d+\.\d+)", mapped)
         if named:
-            return named[1].rstrip(".")
+            return named[1]
     return "unknown"
