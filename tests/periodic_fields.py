@@ -1,4 +1,4 @@
-"""Values of a law's expressions on smooth periodic fields, by Fourier series: nothing of the solver's stencils."""
+"""Values of a law's expressions on smooth periodic fields, by Fourier series instead of stencils."""
 
 from __future__ import annotations
 
@@ -60,8 +60,7 @@ class Box:
 def evaluate(expression: sympy.Expr, box: Box, values: Mapping[str, object]) -> np.ndarray:
     """Return `expression` at every node; `values` has the components and parameters by name."""
     if expression.is_Symbol:
-        coordinates = {"x": box.x, "y": box.y}
-        return np.asarray(values[expression.name] if expression.name in values else coordinates[expression.name])
+        return np.asarray({"x": box.x, "y": box.y, **values}[expression.name])
     if expression.is_number:
         return np.asarray(float(expression))
     if isinstance(expression, Deriv):
@@ -78,7 +77,7 @@ def evaluate(expression: sympy.Expr, box: Box, values: Mapping[str, object]) -> 
 
 
 def right_hand_sides(law: Law, box: Box, values: Mapping[str, object]) -> list[np.ndarray]:
-    """Return G of every equation (u_t + G = 0 or G = 0) at every node, parameters at their defaults unless given."""
+    """Return G of every equation (u_t + G = 0 or G = 0) at every node; parameters not given have defaults."""
     everything = {**law.defaults, **values}
     shape = (box.ny, box.nx)
     return [np.broadcast_to(evaluate(e.expression, box, everything), shape) for e in law.equations]

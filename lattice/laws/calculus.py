@@ -135,11 +135,16 @@ def vary(expression: sympy.Expr, field: sympy.Symbol, fields: Fields) -> sympy.E
     >>> vary(Deriv(u**2, 1, 0) / 2 + u**3, u, {u})
     3*u**2 + Deriv(u, 1, 0)
     """
-    if isinstance(expression, Deriv):
-        inner, a, b = expression.args
+    terms = (t for t in sympy.Add.make_args(expression) if field in t.free_symbols)
+    return sympy.Add(*(_vary_term(term, field, fields) for term in terms))
+
+
+def _vary_term(term: sympy.Expr, field: sympy.Symbol, fields: Fields) -> sympy.Expr:
+    if isinstance(term, Deriv):
+        inner, a, b = term.args
         return differentiate(vary(inner, field, fields), int(a), int(b), fields)
-    stand_ins = {part: sympy.Dummy(real=True) for part in _outermost_derivatives(expression)}
-    plain = expression.xreplace(stand_ins)
+    stand_ins = {part: sympy.Dummy(real=True) for part in _outermost_derivatives(term)}
+    plain = term.xreplace(stand_ins)
     back = {dummy: part for part, dummy in stand_ins.items()}
     changes = [(field, sympy.Integer(1)), *((d, vary(part, field, fields)) for part, d in stand_ins.items())]
     total = sympy.Add(*(sympy.diff(plain, by) * change for by, change in changes if change != 0))

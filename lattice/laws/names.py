@@ -108,5 +108,8 @@ def _check_parameter(name: str, names: Names) -> None:
 
 def suggest(name: str, known: Iterable[str]) -> str:
     """Return `(did you mean 'x'?)` with a leading blank, or nothing."""
-    close = difflib.get_close_matches(name[:NAME_AT_MOST], list(known), n=1, cutoff=0.6)
+    names = list(known)
+    close = difflib.get_close_matches(name[:NAME_AT_MOST], names, n=1, cutoff=0.6)
+    if not close and len(name) > 2:
+        close = [other for other in names if other.startswith(name)]
     return f" (did you mean {close[0]!r}?)" if close else ""

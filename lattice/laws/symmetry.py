@@ -34,16 +34,18 @@ def find_symmetries(
         1 or 2.
     """
     fields = frozenset(symbol(name) for name in components)
-    evolving = [e.component for e in equations if e.evolving]
-    constrained = [e.component for e in equations if not e.evolving]
-    axes = dict(list({"x": X, "y": Y}.items())[:dimensions])
+    axes = {"x": X} if dimensions == 1 else {"x": X, "y": Y}
+    changes = {name: _changes(equations, name, fields) for name in components}
+    invariant = {name for name in components if not any(changes[name].values())}
     return Symmetries(
         homogeneous={name: not any(e.expression.has(axis) for e in equations) for name, axis in axes.items()},
         conserved=tuple(e.component for e in equations if e.evolving and has_zero_mean(e.expression, fields)),
-        shiftable=tuple(name for name in evolving if _shift_invariant(equations, name, fields)),
-        gauge=tuple(name for name in constrained if _shift_invariant(equations, name, fields)),
+        shiftable=tuple(e.component for e in equations if e.evolving and e.component in invariant),
+        gauge=tuple(e.component for e in equations if not e.evolving and e.component in invariant),
         reflections=tuple(_reflections(equations, dimensions)),
-        galilean=any(_galilean(equations, name, fields) for name in evolving),
+        galilean=any(
+            _galilean(equations, e.component, changes[e.component]) for e in equations if e.evolving
+        ),
     )
 
 
@@ -58,29 +60,23 @@ def symmetries_at(law: Law, values: Mapping[str, float]) -> Symmetries:
     return find_symmetries(equations, law.components, names, law.dimensions)
 
 
-def _vanishes(expression: sympy.Expr) -> bool:
-    return bool(multiply_out(expression) == 0)
-
-
 # -- constants added to a component -------------------------------------------------------------------
 
 
-def _shift_invariant(equations: Sequence[Equation], name: str, fields: Fields) -> bool:
-    return all(_vanishes(vary(e.expression, symbol(name), fields)) for e in equations)
+def _changes(equations: Sequence[Equation], name: str, fields: Fields) -> dict[str, sympy.Expr]:
+    """Return the rate at which each component's equation changes when a constant is added to `name`."""
+    return {e.component: multiply_out(vary(e.expression, symbol(name), fields)) for e in equations}
 
 
-def _galilean(equations: Sequence[Equation], name: str, fields: Fields) -> bool:
+def _galilean(equations: Sequence[Equation], name: str, changes: Mapping[str, sympy.Expr]) -> bool:
     """Tell whether x -> x - r*V*t undoes `name` + V: evolving equations gain r*V*(component)_x."""
     if any(e.expression.has(X) for e in equations):
         return False
-    changes = {e.component: multiply_out(vary(e.expression, symbol(name), fields)) for e in equations}
     rate = changes[name].coeff(Deriv(symbol(name), 1, 0))
-    if rate == 0 or rate.free_symbols & (fields | {Y}):
+    if rate == 0 or rate.free_symbols & {symbol(e.component) for e in equations} or rate.has(Y):
         return False
-    return all(
-        _vanishes(changes[e.component] - (rate * Deriv(symbol(e.component), 1, 0) if e.evolving else 0))
-        for e in equations
-    )
+    gains = {e.component: rate * Deriv(symbol(e.component), 1, 0) if e.evolving else 0 for e in equations}
+    return all(multiply_out(changes[component] - gain) == 0 for component, gain in gains.items())
 
 
 # -- conserved mean -----------------------------------------------------------------------------------
@@ -102,7 +98,7 @@ def has_zero_mean(expression: sympy.Expr, fields: Fields) -> bool:
         if key is None:
             return False
         pairs[key] = pairs.get(key, sympy.Integer(0)) + sign * constant
-    return all(_vanishes(total) for total in pairs.values())
+    return all(multiply_out(total) == 0 for total in pairs.values())
 
 
 def _is_wave(factor: sympy.Expr, fields: Fields) -> bool:
