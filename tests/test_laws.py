@@ -262,6 +262,11 @@ def test_reflection_of_the_film_law_appears_where_dispersion_vanishes():
     assert symmetries_at(law, {"dispersion": 0.1}).reflections == ()
 
 
+def test_vanishing_divisors_leave_the_general_symmetries():
+    law = load_law("kolmogorov")
+    assert symmetries_at(law, {"Re": 0.0}) == law.symmetries
+
+
 def own(equations, components=("u",), parameters=None, dimensions=1):
     return read_law("own", equations, components, parameters or {}, dimensions)
 

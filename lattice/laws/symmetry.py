@@ -50,12 +50,17 @@ def find_symmetries(
 
 
 def symmetries_at(law: Law, values: Mapping[str, float]) -> Symmetries:
-    """Return the symmetries of `law` where some parameters vanish: those whose value is exactly zero."""
+    """Return the symmetries of `law` where some parameters vanish: those whose value is exactly zero.
+
+    Where an equation is infinite for those values (`u/nu` at nu = 0) they are those for general ones.
+    """
     fields = frozenset(symbol(name) for name in law.components)
     zeros = {symbol(p.name): sympy.Integer(0) for p in law.parameters if values.get(p.name, p.default) == 0.0}
     equations = [
         Equation(e.component, e.evolving, rebuild(e.expression, zeros, fields)) for e in law.equations
     ]
+    if any(e.expression.has(sympy.zoo, sympy.nan) for e in equations):
+        return law.symmetries
     names = [p.name for p in law.parameters]
     return find_symmetries(equations, law.components, names, law.dimensions)
 
