@@ -119,6 +119,12 @@ def test_every_command_explains_itself(command: str) -> None:
         (["info", "."], "holds no state.h5"),
         (["plot", "none.h5"], "error: none.h5: no such state file"),
         (["plot", "film.toml", "--out", "nowhere/a.png"], "must lie in an existing folder"),
+        (["plot", "none.h5", "--cut", "z=1"], "--cut: must be t, x or y = a number, got 'z=1'"),
+        (["plot", "none.h5", "--cut", "t"], "--cut: must be t, x or y = a number, got 't'"),
+        (["plot", "none.h5", "--cut", "t=nan"], "--cut: must be t, x or y = a number, got 't=nan'"),
+        (["plot", "none.h5", "--cut", "t=1", "--cut", "t=2"], "--cut: must hold each axis once, got t twice"),
+        (["plot", "none.h5", "--size", "8"], "--size: must be width x height in inches"),
+        (["plot", "none.h5", "--size", "8x1e9"], "--size: must be width x height in inches"),
         (["plot", "film.toml", "--out", "."], "is a folder, the name of a file is wanted"),
         (["laws", "kuramoto-sivashinski"], "(did you mean 'kuramoto-sivashinsky'?)"),
         (["laws", "--", "-log_view"], "only solve takes options for PETSc, got -log_view"),
@@ -237,6 +243,46 @@ def test_ctrl_c_before_the_solve_is_one_line(job: Path) -> None:
     assert (process.returncode, out, err) == (exits.STOPPED_EARLY, "", "interrupted\n")
 
 
+@pytest.fixture
+def run_folder(tmp_path: Path) -> Path:
+    """A run's folder with a state of two waves."""
+    import numpy as np
+    from mpi4py import MPI
+
+    from lattice.geometry.block import Block
+    from lattice.geometry.lattice import Lattice
+    from lattice.laws.catalogue import load_law
+    from lattice.store.statefile import write_state
+    from lattice.store.statemeta import StateMeta
+
+    law, grid = load_law("kuramoto-sivashinsky"), Lattice(nt=16, ny=1, nx=24)
+    values = {"period": 17.25, "length_x": 21.5, "drift_x": 0.125, "source_u": 0.0, "dispersion": 0.0}
+    t, x = np.arange(16)[:, None] / 16, np.arange(24)[None, :] / 24
+    field = np.cos(2 * np.pi * (2 * x - t)) + np.sin(2 * np.pi * 3 * x)
+    folder = tmp_path / "run"
+    folder.mkdir()
+    meta = StateMeta.of_law(law, grid, values, free=("period", "drift_x"))
+    write_state(folder / "state.h5", field[:, None, :, None], Block.whole(grid), meta, MPI.COMM_SELF)
+    return folder
+
+
+def test_a_state_is_told_by_its_file_or_its_folder(run_folder: Path) -> None:
+    by_file, by_folder = lattice("info", str(run_folder / "state.h5")), lattice("info", str(run_folder))
+    assert by_file.returncode == by_folder.returncode == 0
+    assert by_file.stdout == by_folder.stdout
+    assert all(text in by_file.stdout for text in ("kuramoto-sivashinsky", "period", "17.25", "0.125"))
+
+
+def test_a_state_is_drawn_beside_itself_or_where_asked(run_folder: Path) -> None:
+    beside = lattice("plot", str(run_folder))
+    other = ("--out", str(run_folder / "other.png"), "--cut", "t=3.5", "--component", "u", "--size", "4x3")
+    asked = lattice("plot", str(run_folder), *other)
+    assert beside.returncode == asked.returncode == 0
+    for done, name in ((beside, "state.png"), (asked, "other.png")):
+        assert done.stdout.strip() == str(run_folder / name)
+        assert (run_folder / name).read_bytes().startswith(b"\x89PNG")
+
+
 def test_laws_lists_every_shipped_law() -> None:
     from lattice.laws.catalogue import law_names
 
@@ -283,6 +329,13 @@ def test_every_failure_has_its_exit_code_and_text() -> None:
     assert exits.exit_code(KeyboardInterrupt()) == exits.STOPPED_EARLY
     assert exits.explain(InputError("must be 3", file="a.toml", key="b")) == "error: a.toml: b: must be 3"
     assert exits.explain(RemoteFailure("rank 1 failed")) == "failed: rank 1 failed"
+
+
+def test_a_failure_that_petsc_has_wrapped_is_told_as_our_own() -> None:
+    wrapper = type("Error", (RuntimeError,), {"__module__": "petsc4py.PETSc"})("error code 101")
+    wrapper.__cause__ = InputError("must be 3")
+    assert exits.explain(wrapper) == "error: must be 3"
+    assert exits.exit_code(wrapper) == exits.REFUSED
 
 
 def test_prepare_sets_what_is_unset_and_leaves_the_rest(tmp_path: Path) -> None:

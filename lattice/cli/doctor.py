@@ -84,8 +84,10 @@ def _packages(answer: Answer) -> Iterator[Finding]:
     absent = [name for name, version in answer.values.items() if version is None]
     found = ", ".join(f"{name} {version}" for name, version in answer.values.items() if version is not None)
     if absent:
-        yield Finding(MISSING, "packages", f"not importable: {', '.join(absent)}", "pip install .")
-    yield Finding(OK, "packages", found)
+        text = f"not importable: {', '.join(absent)}; found {found}"
+        yield Finding(MISSING, "packages", text, "pip install .")
+    else:
+        yield Finding(OK, "packages", found)
 
 
 def _petsc(answer: Answer) -> Iterator[Finding]:

@@ -18,5 +18,5 @@ def run(options: argparse.Namespace) -> int:
     state = state_path(options.state)
     from lattice.show.describe import describe_state
 
-    print(describe_state(state))
+    print(describe_state(state).rstrip())
     return 0
