@@ -83,10 +83,11 @@ class _Levels:
     def read(self, first: int, last: int) -> Real:
         levels = np.asarray(self._source[first:last], dtype=float).reshape(last - first, *self._shape[1:])
         if not np.all(np.isfinite(levels)):
-            level, row, column, _ = np.argwhere(~np.isfinite(levels))[0]
+            place = tuple(np.argwhere(~np.isfinite(levels))[0])
+            level, row, column, _ = place
             raise InputError(
-                f"must hold finite numbers, got {levels[level, row, column]} at level {first + level}, row "
-                f"{row}, column {column}",
+                f"must hold finite numbers, got {levels[place]} at level {first + level}, row {row}, "
+                f"column {column}",
                 file=self._path,
             )
         return levels

@@ -11,7 +11,8 @@ Real = NDArray[np.float64]
 Complex = NDArray[np.complex128]
 
 FINER = 4
-"""Refinement of the correlation's grid before its peak is located by a parabola."""
+"""Refinement of the grid on which the peak of the correlation is looked for."""
+NEWTON_STEPS = 8
 
 
 def drift_that_aligns(
@@ -38,12 +39,30 @@ def drift_that_aligns(
     surface = surface[:, :1] if "x" not in axes else surface
     surface = surface[:1] if "y" not in axes else surface
     peak = np.unravel_index(int(np.argmax(surface)), surface.shape)
+    turns = [int(place) / nodes for place, nodes in zip(peak, surface.shape, strict=True)]
+    shift = {axis: turns["yx".index(axis)] * modes.lengths["yx".index(axis)] for axis in axes}
     found = {}
-    for axis in axes:
-        n = "yx".index(axis)
-        turns = _refined(np.moveaxis(surface, n, 0)[:, peak[1 - n]], int(peak[n])) / surface.shape[n]
-        found[f"drift_{axis}"] = (turns - round(turns)) * modes.lengths[n] / time
+    for axis, place in _climbed(modes, product, shift).items():
+        length = modes.lengths["yx".index(axis)]
+        found[f"drift_{axis}"] = (place - length * round(place / length)) / time
     return found
+
+
+def _climbed(modes: Modes, product: Complex, shift: dict[str, float]) -> dict[str, float]:
+    """Return the peak of the correlation `sum product exp(i k s)` near `shift`, by Newton's method."""
+    axes = list(shift)
+    k = [modes.kx + 0.0 * modes.ky if axis == "x" else modes.ky + 0.0 * modes.kx for axis in axes]
+    # Modes with kx > 0 stand for two, the other being the conjugate.
+    both = np.where(modes.kx > 0.0, 2.0, 1.0) * product
+    place = np.array([shift[axis] for axis in axes])
+    for _ in range(NEWTON_STEPS):
+        turned = both * np.exp(1j * sum(s * q for s, q in zip(place, k, strict=True)))
+        slope = np.array([(1j * q * turned).sum().real for q in k])
+        curvature = np.array([[-(p * q * turned).sum().real for p in k] for q in k])
+        if np.linalg.eigvalsh(curvature).max() >= 0.0:
+            break
+        place = place - np.linalg.solve(curvature, slope)
+    return dict(zip(axes, (float(s) for s in place), strict=True))
 
 
 def drift_of_slice(modes: Modes, spectrum: Complex, rate: Complex, axes: tuple[str, ...]) -> dict[str, float]:
@@ -74,10 +93,3 @@ def scaled(spectrum: Complex, sizes: Real) -> Complex:
     scale = np.divide(1.0, sizes, out=np.zeros_like(sizes), where=sizes > 0.0)
     product: Complex = spectrum * scale[:, None, None]
     return product
-
-
-def _refined(values: Real, peak: int) -> float:
-    """Return the place of the peak of the parabola through three periodic values."""
-    left, middle, right = values[peak - 1], values[peak], values[(peak + 1) % len(values)]
-    curvature = left - 2.0 * middle + right
-    return peak + (0.5 * float(left - right) / float(curvature) if curvature < 0.0 else 0.0)

@@ -93,7 +93,8 @@ def march(
 def blend_weight(sample: int, nt: int, blend: float) -> float:
     """Return the weight of sample `sample` of a window in level `sample % nt`.
 
-    Samples are one level apart; those from `nt` on belong to the continuation. The weight rises over the
+    Samples are one level apart; those from `nt` on belong to the continuation. The weight is 1 for
+    `nt = 1`, where there is no window; else it rises over the
     first `blend*nt` levels as `s**3*(10 - 15*s + 6*s**2)`, which has two continuous derivatives at both ends.
 
     Examples
@@ -101,7 +102,7 @@ def blend_weight(sample: int, nt: int, blend: float) -> float:
     >>> [blend_weight(sample, 10, 0.4) for sample in (0, 2, 12, 5)]
     [0.0, 0.5, 0.5, 1.0]
     """
-    s = min(1.0, (sample % nt) / (blend * nt)) if blend > 0.0 else 1.0
+    s = min(1.0, (sample % nt) / (blend * nt)) if blend > 0.0 and nt > 1 else 1.0
     rising = s * s * s * (10.0 + s * (6.0 * s - 15.0))
     return rising if sample < nt else 1.0 - rising
 
@@ -125,14 +126,14 @@ class _Marcher:
         self.axes = _matched_axes(self.start, self.law)
         self.stepper = self._stepper()
         self.spectrum = self._spin_up(self._noise())
-        self.drift = {axis: self.values.get(f"drift_{axis}", 0.0) for axis in "xy"}
+        self.drift = {name: self.values.get(name, 0.0) for name in ("drift_x", "drift_y")}
         self.running: dict[int, float] = {}
         wandering = _wandering(self.law)
         if self.lattice.nt > 1 and (self.axes or wandering):
             self._compare_ends(wandering)
         elif self.lattice.nt == 1:
             self._look_at_slice(wandering)
-        found = {f"drift_{axis}": self.drift[axis] for axis in self.axes}
+        found = {f"drift_{axis}": self.drift[f"drift_{axis}"] for axis in self.axes}
         sources = {self._name(row): -slope for row, slope in self.running.items()}
         return {**found, **{f"source_{name}": value for name, value in sources.items()}}
 
@@ -145,7 +146,9 @@ class _Marcher:
             if sample:
                 spectrum = self.stepper.advance(spectrum, spacing)
             time = sample * spacing
-            seen = self.stepper.modes.shift(spectrum, self.drift["x"] * time, self.drift["y"] * time)
+            seen = self.stepper.modes.shift(
+                spectrum, self.drift["drift_x"] * time, self.drift["drift_y"] * time
+            )
             for row, slope in self.running.items():
                 seen[row, 0, 0] -= offsets[row] + slope * time
             yield self.stepper.to_field(seen, (self.lattice.ny, self.lattice.nx))
@@ -181,11 +184,9 @@ class _Marcher:
         first, last = self.spectrum, self.stepper.advance(self.spectrum, self.period)
         for row in wandering:
             self.running[row] = float((last - first)[row, 0, 0].real) / self.period
-        given = {
-            axis: 0.0 if axis in self.axes else drift * self.period for axis, drift in self.drift.items()
-        }
         if self.axes:
-            back = self.stepper.modes.shift(last, given["x"], given["y"])
+            given = [0.0 if axis in self.axes else self.drift[f"drift_{axis}"] * self.period for axis in "xy"]
+            back = self.stepper.modes.shift(last, *given)
             self.drift.update(drift_that_aligns(self.stepper.modes, first, back, self.period, self.axes))
 
     def _look_at_slice(self, wandering: list[int]) -> None:
@@ -214,7 +215,7 @@ def _nodes(start: MarchOptions, lattice: Lattice) -> tuple[int, int]:
 
 
 def _matched_axes(start: MarchOptions, law: Law) -> tuple[str, ...]:
-    axes = tuple(getattr(start, "match_drift", None) or ())
+    axes = tuple(start.match_drift or ())
     for axis in axes:
         if not law.symmetries.homogeneous.get(axis, False):
             raise InputError(

@@ -89,6 +89,9 @@ class Modes:
 
         Transforms ignore its other part, so that round-off in it would grow undisturbed at the linear rate.
         """
+        if self.my == 0:
+            spectrum.imag[..., 0] = 0.0
+            return
         column = spectrum[..., 0]
         mirrored = np.roll(column[..., ::-1], 1, axis=-1)
         spectrum[..., 0] = 0.5 * (column + mirrored.conj())

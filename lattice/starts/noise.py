@@ -14,6 +14,10 @@ Complex = NDArray[np.complex128]
 
 LOW_BAND = 4
 """Largest mode number of the noise of a law that amplifies no wave."""
+BESIDE = 0.1
+"""Size of the noise on waves beside the band."""
+NEUTRAL = 1e-12
+"""Growth, relative to the fastest rate of any mode, below which a wave counts as neutral."""
 
 
 def random_field(
@@ -24,11 +28,13 @@ def random_field(
     amplitude: float,
     values: dict[str, float] | None = None,
 ) -> Real:
-    """Return smooth noise confined to the linearly unstable waves, shape (ny, nx, C).
+    """Return smooth noise on the linearly unstable waves, shape (ny, nx, C).
 
-    The band is that about the zero state; where the law amplifies no wave, it is the lowest modes. The
-    coefficients are drawn in an order that does not depend on the nodes: one seed is one field on any
-    lattice that carries the band. Components whose mean is conserved or arbitrary have zero mean.
+    The band is that about the zero state; where the law amplifies no wave, it is the lowest modes. Waves
+    up to twice as short get a tenth of the size: noise on a single unstable wave would be symmetric, and a
+    march from it would stay so. The coefficients are drawn in an order that does not depend on the nodes:
+    one seed is one field on any lattice that carries these waves. Components whose mean is conserved or
+    arbitrary have zero mean.
 
     Parameters
     ----------
@@ -52,16 +58,14 @@ def random_spectrum(operator: SpectralOperator, seed: int, amplitude: float) -> 
     """Return the evolving spectra of `random_field`."""
     if not (np.isfinite(amplitude) and amplitude > 0.0):
         raise InputError(f"the noise amplitude must be positive and finite, got {amplitude}")
-    modes, law = operator.modes, operator.law
+    modes = operator.modes
     spectrum = np.zeros((len(operator.evolving), *modes.spectrum_shape), dtype=complex)
-    zero_mean = {*law.symmetries.conserved, *law.symmetries.shiftable}
     generator = np.random.default_rng(seed)
-    for row, column in _band(operator):
-        draws = generator.standard_normal((len(operator.evolving), 2))
-        for e, component in enumerate(operator.evolving):
-            at_mean = row == 0 and column == 0
-            if not (at_mean and law.components[component] in zero_mean):
-                spectrum[e, row, column] = draws[e, 0] + (0.0 if at_mean else 1j * draws[e, 1])
+    weights = _weights(operator)
+    for row, column in _by_mode_number(operator, weights):
+        real, imaginary = generator.standard_normal((2, len(operator.evolving)))
+        spectrum[:, row, column] = weights[row, column] * (real + 1j * imaginary)
+    spectrum[~_has_free_mean(operator), 0, 0] = 0.0
     modes.restore_symmetry(spectrum)
     sizes = np.sqrt(modes.mean_product(spectrum, spectrum))
     scale = np.divide(amplitude, sizes, out=np.zeros_like(sizes), where=sizes > 0.0)
@@ -69,20 +73,33 @@ def random_spectrum(operator: SpectralOperator, seed: int, amplitude: float) -> 
     return noise
 
 
-def _band(operator: SpectralOperator) -> list[tuple[int, int]]:
-    """Return (row, column) of the noise's modes, by rising mode number."""
+def _has_free_mean(operator: SpectralOperator) -> NDArray[np.bool_]:
+    """Return for each evolving component whether its noise may have a mean."""
+    law = operator.law
+    settled = {*law.symmetries.conserved, *law.symmetries.shiftable}
+    return np.array([law.components[n] not in settled for n in operator.evolving])
+
+
+def _weights(operator: SpectralOperator) -> Real:
+    """Return the size of the noise of every mode: 1 in the band, a fraction beside it, else 0."""
     rates, modes = operator.growth_rates(), operator.modes
-    numbers_y = np.concatenate([np.arange(modes.my + 1), np.arange(-modes.my, 0)])
     # Rates of round-off size at neutral waves are no growth.
-    growing = rates > 1e-9 * max(1.0, float(np.abs(operator.linear[..., 0, 0]).max()))
-    if not np.any(np.delete(growing.ravel(), 0)):
-        low = np.hypot(numbers_y[:, None], np.arange(modes.mx + 1)[None, :]) <= LOW_BAND
-        growing = low & (np.arange(low.size).reshape(low.shape) > 0)
-    found = [(int(row), int(column)) for row, column in np.argwhere(growing)]
+    band = rates > NEUTRAL * float(np.abs(rates).max())
+    k = np.hypot(modes.kx, modes.ky)
+    if not np.any(band & (k > 0.0)):
+        rows = np.rint(modes.ky * modes.lengths[0] / (2.0 * np.pi))
+        columns = np.rint(modes.kx * modes.lengths[1] / (2.0 * np.pi))
+        band = (np.hypot(rows, columns) <= LOW_BAND) & (k > 0.0)
+    beside = (k <= 2.0 * k[band].max()) & (k > 0.0)
+    return np.where(band, 1.0, np.where(beside, BESIDE, 0.0))
+
+
+def _by_mode_number(operator: SpectralOperator, weights: Real) -> list[tuple[int, int]]:
+    """Return (row, column) of the modes with noise in an order that does not depend on the nodes."""
+    rows = 2 * operator.modes.my + 1
 
     def order(place: tuple[int, int]) -> tuple[int, int, int]:
-        row, column = place
-        number = int(numbers_y[row])
-        return (number * number + column * column, column, number)
+        number = place[0] - rows if place[0] > operator.modes.my else place[0]
+        return (number * number + place[1] * place[1], place[1], number)
 
-    return sorted(found, key=order)
+    return sorted(((int(row), int(column)) for row, column in np.argwhere(weights > 0.0)), key=order)

@@ -82,8 +82,10 @@ class SpectralOperator:
             fields = self.modes.to_nodes(self._inputs(c), self._padded)
             inputs = [fields[..., n, :, :] for n in range(fields.shape[-3])]
             terms = self.split.evaluate_products(inputs, *self._coordinates, self._parameters)
-            stacked = np.stack([np.broadcast_to(term, inputs[0].shape) for term in terms], axis=-3)
-            spectra = self.modes.from_nodes(stacked)
+            nodes = np.empty((*c.shape[:-3], len(terms), *self._padded))
+            for n, term in enumerate(terms):
+                nodes[..., n, :, :] = term
+            spectra = self.modes.from_nodes(nodes)
             for n, (row, factor) in enumerate(self._outputs):
                 out[..., row, :, :] -= factor * spectra[..., n, :, :]
         return out

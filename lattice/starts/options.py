@@ -48,7 +48,7 @@ class MarchOptions:
     dt: float | None = None
     blend: float = 0.3
     shape: Sequence[int] | None = None
-    match_drift: Sequence[str] = ()
+    match_drift: Sequence[str] | None = ()
 
 
 @dataclass(frozen=True)
