@@ -275,7 +275,7 @@ def test_a_state_is_told_by_its_file_or_its_folder(run_folder: Path) -> None:
 
 def test_a_state_is_drawn_beside_itself_or_where_asked(run_folder: Path) -> None:
     beside = lattice("plot", str(run_folder))
-    other = ("--out", str(run_folder / "other.png"), "--cut", "t=3.5", "--component", "u", "--size", "4x3")
+    other = ("--out", str(run_folder / "other.png"), "--cut", "t=3.5", "--component", "u", "--size", "7x4")
     asked = lattice("plot", str(run_folder), *other)
     assert beside.returncode == asked.returncode == 0
     for done, name in ((beside, "state.png"), (asked, "other.png")):

@@ -91,7 +91,7 @@ def read_size(given: str | None) -> tuple[float, float] | None:
     sizes = [number for number in numbers if number is not None and 0 < number <= LARGEST_SIZE]
     if len(numbers) != 2 or len(sizes) != 2:
         raise InputError(
-            f"must be width x height in inches, each at most {LARGEST_SIZE:g}, got '{given}'; for example 8x5",
+            f"must be width x height in inches, at most {LARGEST_SIZE:g} each, got '{given}'; such as 8x5",
             key="--size",
         )
     return sizes[0], sizes[1]
