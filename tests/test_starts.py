@@ -178,8 +178,8 @@ def test_travelling_film_wave_and_its_drift_are_found_from_noise():
     assert np.mean(field**2) == pytest.approx(1.3351206129, abs=5e-6)
     values["period"] = 15.0
     field, aligned = begin("march", options, Lattice(24, 1, 32), values, law)
-    assert aligned["drift_x"] == pytest.approx(found["drift_x"], abs=1e-6)
-    assert np.abs(field - field[:1]).max() < 1e-4
+    assert aligned["drift_x"] == pytest.approx(found["drift_x"], abs=5e-6)
+    assert np.abs(field - field[:1]).max() < 1e-5
 
 
 def test_drift_is_found_along_both_axes():
@@ -247,10 +247,12 @@ def test_step_is_chosen_and_progress_is_told():
         MarchOptions(spin_up=40.0), lattice, film(), law, Block.whole(lattice), ALONE, lines.append
     )
     text = "\n".join(lines)
-    steps = [float(value) for value in re.findall(r"dt = (\S+)", text)]
+    told = re.search(
+        r"march: window of 20, dt = (\S+), error of a step by halving (\S+)$", text, re.MULTILINE
+    )
     assert "march: spin-up 40 of 40" in text
-    assert "march: window 0 of" in text
-    assert all(0.01 < dt < 1.0 for dt in steps)
+    assert 0.01 < float(told[1]) < 0.5
+    assert float(told[2]) <= 1e-6
 
 
 @pytest.mark.parametrize(

@@ -11,6 +11,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Iterator
+from time import monotonic
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -36,7 +37,8 @@ SPIN_UP_TOLERANCE = 1e-5
 WINDOW_TOLERANCE = 1e-6
 """Largest relative errors of one step; the window is what a solver is handed, so it is the finer."""
 STRETCHES = 10
-"""Progress lines of a spin-up."""
+"""Parts of a spin-up between which progress may be told."""
+SECONDS_BETWEEN_LINES = 5.0
 
 
 def march(
@@ -120,6 +122,7 @@ class _Marcher:
     ) -> None:
         self.start, self.lattice, self.values, self.law, self.report = start, lattice, values, law, report
         self.period = values["period"] if lattice.nt > 1 else 0.0
+        self._told = monotonic()
 
     def prepare(self) -> Values:
         """Spin up and find the drifts and sources of the window; return these."""
@@ -134,8 +137,9 @@ class _Marcher:
         elif self.lattice.nt == 1:
             self._look_at_slice(wandering)
         found = {f"drift_{axis}": self.drift[f"drift_{axis}"] for axis in self.axes}
-        sources = {self._name(row): -slope for row, slope in self.running.items()}
-        return {**found, **{f"source_{name}": value for name, value in sources.items()}}
+        found |= {f"source_{self._name(row)}": -slope for row, slope in self.running.items()}
+        self._tell_of_window(found)
+        return found
 
     def slices(self) -> Iterator[Real]:
         """Yield the window's samples on the lattice's nodes, shape (ny, nx, C)."""
@@ -152,8 +156,7 @@ class _Marcher:
             for row, slope in self.running.items():
                 seen[row, 0, 0] -= offsets[row] + slope * time
             yield self.stepper.to_field(seen, (self.lattice.ny, self.lattice.nx))
-            if samples > STRETCHES and sample % (samples // STRETCHES) == 0:
-                self.report(f"march: window {time:.4g} of {(samples - 1) * spacing:.4g}")
+            self._tell(f"march: window {time:.4g} of {(samples - 1) * spacing:.4g}")
 
     def _stepper(self) -> Stepper:
         lengths = (self.values.get("length_y", 1.0), self.values["length_x"])
@@ -174,7 +177,8 @@ class _Marcher:
                 spectrum, dt = settle(self.stepper, spectrum, stretch, SPIN_UP_TOLERANCE)
             else:
                 spectrum, dt = self.stepper.advance(spectrum, stretch), self.start.dt
-            self.report(f"march: spin-up {(n + 1) * stretch:.4g} of {self.start.spin_up:.4g}, dt = {dt:.3g}")
+            done = f"{(n + 1) * stretch:.4g} of {self.start.spin_up:.4g}"
+            self._tell(f"march: spin-up {done}, dt = {dt:.3g}", at_once=n == STRETCHES - 1)
         if self.start.dt is None:
             self.stepper = self.stepper.with_step(suggest_dt(self.stepper, spectrum, WINDOW_TOLERANCE))
         return spectrum
@@ -195,6 +199,22 @@ class _Marcher:
             self.running[row] = float(rate[row, 0, 0].real)
         if self.axes:
             self.drift.update(drift_of_slice(self.stepper.modes, self.spectrum, rate, self.axes))
+
+    def _tell_of_window(self, found: Values) -> None:
+        dt = self.stepper.dt
+        error = self.stepper.step_error(self.spectrum, dt)
+        cut = f"window of {self.period:.6g}" if self.lattice.nt > 1 else "last slice"
+        text = f"march: {cut}, dt = {dt:.3g}, error of a step by halving {error:.1e}"
+        self._tell(
+            ", ".join([text, *(f"{name} = {value:.6g}" for name, value in found.items())]), at_once=True
+        )
+
+    def _tell(self, text: str, at_once: bool = False) -> None:
+        """Report progress, by the clock unless `at_once`."""
+        now = monotonic()
+        if at_once or now - self._told >= SECONDS_BETWEEN_LINES:
+            self._told = now
+            self.report(text)
 
     def _name(self, row: int) -> str:
         return self.law.components[self.stepper.operator.evolving[row]]
