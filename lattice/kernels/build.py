@@ -8,6 +8,7 @@ from __future__ import annotations
 import hashlib
 import importlib.util
 import os
+import re
 import sys
 import tempfile
 from collections.abc import Callable, Mapping
@@ -21,6 +22,7 @@ from numpy.typing import NDArray
 
 from lattice.kernels import slices
 from lattice.kernels.forms import X, Y, Form
+from lattice.kernels.rows import generate_rows, row_points
 from lattice.kernels.scheme import Scheme, space_stencil, time_weights
 from lattice.kernels.source import Source, Table, generate
 
@@ -49,7 +51,53 @@ class Geometry:
     xs: Array
 
 
-class Kernel:
+class Loop:
+    """A generated loop with its weights; `prepare` it for a geometry and scalars before a call.
+
+    Parameters
+    ----------
+    form : Form
+    scheme : Scheme
+    source : Source
+    compiled : bool
+        True compiles it with Numba; False leaves `function` None until `interpret` is called.
+    """
+
+    def __init__(self, form: Form, scheme: Scheme, source: Source, compiled: bool) -> None:
+        self.form, self.scheme, self.source = form, scheme, source
+        self.function = _load(form, source.text) if compiled else None
+        self._fill = _WeightFiller(source.table, form, scheme)
+        self.weights = np.zeros(source.table.length)
+        self.static_fields = np.zeros((0, 0, 0))
+        self.values: dict[str, float] = {}
+        self.geometry: Geometry | None = None
+
+    def prepare(self, geometry: Geometry, values: Mapping[str, float]) -> None:
+        """Set spacings and scalars; `values` holds every scalar of the form by name."""
+        self.values = dict(values)
+        self.geometry = geometry
+        self._fill(self.weights, geometry, values)
+        self.static_fields = self._fill.statics(geometry, values)
+
+
+class Rows(Loop):
+    """The loop that fills the rows of the sparse Jacobian (see `lattice.kernels.rows`)."""
+
+    def __init__(self, form: Form, scheme: Scheme) -> None:
+        compiled = have_numba()
+        super().__init__(form, scheme, generate_rows(form, scheme), compiled)
+        self.points = row_points(form, scheme)
+        if not compiled:
+            self.function = _interpret(self.source.text)
+
+    def __call__(self, out: Array, padded: Array) -> Array:
+        """Fill `out`, shape (levels, rows, columns*stride), from the padded state."""
+        assert self.function is not None
+        self.function(out, _flat(padded), self.static_fields, self.weights)
+        return out
+
+
+class Kernel(Loop):
     """A form compiled for one scheme; `prepare` it for a geometry and scalars, then call it.
 
     Parameters
@@ -65,21 +113,7 @@ class Kernel:
     """
 
     def __init__(self, form: Form, scheme: Scheme, compiled: bool = True) -> None:
-        self.form, self.scheme = form, scheme
-        self.source: Source = generate(form, scheme)
-        self._loop = _load(form, self.source.text) if compiled and have_numba() else None
-        self._fill = _WeightFiller(self.source.table, form, scheme)
-        self._weights = np.zeros(self.source.table.length)
-        self._statics = np.zeros((0, 0, 0))
-        self._values: dict[str, float] = {}
-        self._geometry: Geometry | None = None
-
-    def prepare(self, geometry: Geometry, values: Mapping[str, float]) -> None:
-        """Set spacings and scalars; `values` holds every scalar of the form by name."""
-        self._values = {name: values[name] for name in (*self.form.scalars, "length_x", "length_y") if name in values}
-        self._geometry = geometry
-        self._fill(self._weights, geometry, self._values)
-        self._statics = self._fill.statics(geometry, self._values)
+        super().__init__(form, scheme, generate(form, scheme), compiled and have_numba())
 
     def __call__(self, out: Array, *fields: Array) -> Array:
         """Evaluate the form.
@@ -96,11 +130,11 @@ class Kernel:
         ndarray
             `out`.
         """
-        if self._loop is None:
-            assert self._geometry is not None
-            slices.evaluate(self.form, self.scheme, self._geometry, self._values, out, fields)
+        if self.function is None:
+            assert self.geometry is not None
+            slices.evaluate(self.form, self.scheme, self.geometry, self.values, out, fields)
         else:
-            self._loop(_flat(out), *(_flat(f) for f in fields), self._statics, self._weights)
+            self.function(_flat(out), *(_flat(f) for f in fields), self.static_fields, self.weights)
         return out
 
 
@@ -201,9 +235,22 @@ def _load(form: Form, text: str) -> Callable[..., None]:
         spec = importlib.util.spec_from_file_location(name, path)
         assert spec is not None and spec.loader is not None
         module = importlib.util.module_from_spec(spec)
-        spec.loader.exec_module(module)
-        sys.modules[name] = module
+        sys.modules[name] = module  # before it runs: Numba looks the module up when it loads its cache
+        try:
+            spec.loader.exec_module(module)
+        except BaseException:
+            del sys.modules[name]
+            raise
     loop: Callable[..., None] = sys.modules[name].__dict__["kernel"]
+    return loop
+
+
+def _interpret(text: str) -> Callable[..., None]:
+    """Return a generated loop as plain Python whose innermost loops are NumPy row operations."""
+    whole_rows = re.sub(r"for i in range\((.*)\):", r"for i in (np.arange(\1),):", text)
+    namespace: dict[str, Any] = {"np": np}
+    exec(compile(whole_rows, "<generated rows>", "exec"), namespace)  # noqa: S102 - text made by rows.py
+    loop: Callable[..., None] = namespace["kernel"]
     return loop
 
 

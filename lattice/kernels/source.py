@@ -141,6 +141,19 @@ class Emitter:
             f"w{first + k} * {self.access(symbol, dy, dx)}" for k, (dy, dx) in enumerate(offsets)
         )
 
+    def row_lines(self, level: str, indent: int) -> list[str]:
+        """Return the lines that name every row view the emitted text reads, on a level."""
+        lines = []
+        for name, (base, index, dy) in sorted(self.rows.items()):
+            row = f"j0 + j + {self.scheme.halo_y + dy}"
+            if base[0] == "f":
+                lines.append(f"{name} = {base}[{level}, {row}, i0 * {self.components}:]")
+            elif base[0] == "s":
+                lines.append(f"{name} = statics[{index}, {row}, i0:]")
+            else:
+                lines.append(f"{name} = q[{index}, j + {self.scheme.halo_y + dy}]")
+        return [" " * indent + line for line in lines]
+
     def offsets(self, a: int, b: int) -> list[tuple[int, int]]:
         """Return the offsets (dy, dx) of a derivative's nonzero weights, in order."""
         return sorted(space_stencil(a, b, self.scheme.order_x, self.scheme.order_y))
@@ -242,7 +255,7 @@ def _gather(form: Form, scheme: Scheme) -> Source:
         body += _combine(form, scheme, evolving, late)
     if nodal:
         body += _nodal_levels(early, scheme, nodal, nodes)
-    return Source(_function(form, late.table, body), late.table, late.flops + early.flops)
+    return Source(module_function(form, late.table, body), late.table, late.flops + early.flops)
 
 
 def _opening(form: Form, scheme: Scheme, buffers: int) -> list[str]:
@@ -259,25 +272,12 @@ def _opening(form: Form, scheme: Scheme, buffers: int) -> list[str]:
     ]
 
 
-def _row_lines(emitter: Emitter, scheme: Scheme, level: str, indent: int) -> list[str]:
-    lines = []
-    for name, (base, index, dy) in sorted(emitter.rows.items()):
-        row = f"j0 + j + {scheme.halo_y + dy}"
-        if base[0] == "f":
-            lines.append(f"{name} = {base}[{level}, {row}, i0 * {emitter.components}:]")
-        elif base[0] == "s":
-            lines.append(f"{name} = statics[{index}, {row}, i0:]")
-        else:
-            lines.append(f"{name} = q[{index}, j + {scheme.halo_y + dy}]")
-    return [" " * indent + line for line in lines]
-
-
 def _ring_levels(emitter: Emitter, scheme: Scheme, texts: list[str]) -> list[str]:
     count = len(texts)
     lines = [
         f"   slot = (m % {scheme.levels}) * {count}",
         "   for j in range(rows):",
-        *_row_lines(emitter, scheme, f"m + {scheme.halo_t - scheme.below}", 4),
+        *emitter.row_lines(f"m + {scheme.halo_t - scheme.below}", 4),
         *(f"    g{e} = ring[slot + {e}, j]" for e in range(count)),
         "    for i in range(cols):",
         *(f"     g{e}[i] = {text}" for e, text in enumerate(texts)),
@@ -317,7 +317,7 @@ def _nodal_levels(emitter: Emitter, scheme: Scheme, nodal: list[int], texts: lis
         "   if 0 <= n < lt:",
         "    for j in range(rows):",
         f"     o = out[n, j0 + j, i0 * {components}:]",
-        *_row_lines(emitter, scheme, f"n + {scheme.halo_t}", 5),
+        *emitter.row_lines(f"n + {scheme.halo_t}", 5),
         "     for i in range(cols):",
         *(f"      o[i * {components} + {c}] = {text}" for c, text in zip(nodal, texts, strict=True)),
     ]
@@ -356,7 +356,7 @@ def _adjoint(form: Form, scheme: Scheme) -> Source:
     own = f"    f{last}_own = f{last}[n + {scheme.halo_t}, j0 + j, i0 * {components}:]"
     lines.insert(len(lines) - components - 1, own)
     lines.append("   for j in range(rows):")
-    lines += _row_lines(emitter, scheme, f"n + {scheme.halo_t}", 4)
+    lines += emitter.row_lines(f"n + {scheme.halo_t}", 4)
     for k in range(levels):
         row = f"j0 + j + {scheme.halo_y}, i0 * {components}:"
         lines.append(f"    e_{k} = f{last}[n + {top - k}, {row}]")
@@ -367,10 +367,10 @@ def _adjoint(form: Form, scheme: Scheme) -> Source:
             offset = scheme.halo_x * components + c
             terms += [f"w{k} * e_{k}[i * {components} + {offset}]" for k in range(levels)]
         lines.append(f"     o[i * {components} + {c}] = " + " + ".join(terms))
-    return Source(_function(form, emitter.table, lines), emitter.table, emitter.flops)
+    return Source(module_function(form, emitter.table, lines), emitter.table, emitter.flops)
 
 
-def _function(form: Form, table: Table, lines: list[str]) -> str:
+def module_function(form: Form, table: Table, lines: list[str]) -> str:
     """Return the module text around a kernel's body."""
     fields = ", ".join(f"f{k}" for k in range(len(form.fields)))
     head = [f"def kernel(out, {fields}, statics, w):"]

@@ -1,0 +1,75 @@
+"""The unknown scalars of a problem and the condition that fixes each.
+
+Where a state lies in time and along a homogeneous axis is arbitrary; a phase condition fixes it and
+leaves room for one free scalar. A mean that the law leaves open is given and leaves room for a source.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
+
+from lattice.errors import InputError
+from lattice.geometry.lattice import Lattice
+from lattice.kernels.forms import sourced
+from lattice.laws.law import Law
+
+Values = dict[str, float]
+
+
+@dataclass(frozen=True)
+class Unknown:
+    """One free scalar, paired with its condition.
+
+    Parameters
+    ----------
+    name : str
+        The scalar.
+    condition : str
+        "phase_t", "phase_x", "phase_y" or "mean_<component>".
+    unit : float
+        Size of a relative change of one: the scalar's unknown is `sqrt(N) * scalar / unit`, so that a
+        relative change costs as much as the same change at each of the N unknowns of the field.
+    """
+
+    name: str
+    condition: str
+    unit: float
+
+
+def pair_unknowns(
+    law: Law, lattice: Lattice, free: Sequence[str], values: Mapping[str, float]
+) -> tuple[Unknown, ...]:
+    """Pair every free scalar, and the source of every open mean, with a condition.
+
+    Raises
+    ------
+    InputError
+        If more scalars are free than conditions can fix.
+    """
+    phases = ["phase_t"] if lattice.nt > 1 else []
+    phases += [f"phase_{axis}" for axis in "xy"[: law.dimensions] if law.symmetries.homogeneous[axis]]
+    own = {"period": "phase_t", "drift_x": "phase_x", "drift_y": "phase_y"}
+    asked = [name for name in free if not name.startswith("source_")]
+    paired = {name: own[name] for name in asked if own.get(name) in phases}
+    left = [phase for phase in phases if phase not in paired.values()]
+    for name in asked:
+        if name not in paired:
+            if not left:
+                raise InputError(
+                    f"at most {len(phases)} scalars besides sources can be free here, got {len(asked)}; hold one",
+                    key="solve.free",
+                )
+            paired[name] = left.pop(0)
+    pairs = [Unknown(name, paired[name], _unit(name, values)) for name in asked]
+    pairs += [Unknown(f"source_{c}", f"mean_{c}", 1.0) for c in sourced(law)]
+    return tuple(pairs)
+
+
+def _unit(name: str, values: Mapping[str, float]) -> float:
+    """Return the size a relative change of a scalar refers to."""
+    value = abs(values[name])
+    if name.startswith("drift_"):
+        axis = name.removeprefix("drift_")
+        return max(value, values[f"length_{axis}"] / values["period"] if values["period"] != 1.0 else 1.0)
+    return value if value > 0 else 1.0
