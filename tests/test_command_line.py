@@ -16,7 +16,7 @@ from lattice import environment
 from lattice.cli import exits
 from lattice.cli.main import COMMANDS, main, make_parser, split_at_dashes
 from lattice.errors import InputError, LatticeError, RemoteFailure
-from tests.mpi import run_module
+from tests.mpi import run_module, run_ranks
 
 ROOT = Path(__file__).resolve().parents[1]
 
@@ -241,6 +241,43 @@ def test_ctrl_c_before_the_solve_is_one_line(job: Path) -> None:
         process.send_signal(signal.SIGINT)
         out, err = process.communicate(timeout=60)
     assert (process.returncode, out, err) == (exits.STOPPED_EARLY, "", "interrupted\n")
+
+
+FAKE_SOLVER = """
+import sys, types
+seen = types.SimpleNamespace(calls=[])
+def run_job(job, folder, comm, petsc_options, report):
+    seen.calls.append((job, folder, comm, petsc_options))
+    report(f"solving {job.lattice.nx} into {folder} with {petsc_options}")
+    return types.SimpleNamespace(exit_code=3)
+sys.modules["lattice.solve.run"] = types.SimpleNamespace(run_job=run_job)
+"""
+
+
+def test_solve_hands_job_folder_and_petsc_options_to_the_solver(job: Path) -> None:
+    options = "'--set', 'lattice.nx=64', '--out', 'here', '--', '-ksp_rtol', '1e-3'"
+    script = f"{FAKE_SOLVER}\nfrom lattice.cli.main import main\nsys.exit(main(['solve', {str(job)!r}, {options}]))"
+    done = subprocess.run(
+        [sys.executable, "-c", script], capture_output=True, text=True, timeout=60, env=ALONE, cwd=job.parent
+    )
+    assert done.stdout == "solving 64 into here with ['-ksp_rtol', '1e-3']\n"
+    assert (done.returncode, done.stderr) == (exits.NOT_CONVERGED, "")
+
+
+def test_all_ranks_solve_the_same_job_and_one_reports(job: Path) -> None:
+    script = f"""{FAKE_SOLVER}
+from lattice.cli.main import main
+code = main(["solve", {str(job)!r}, "--set", "solve.free=['period']"])
+from mpi4py import MPI
+jobs = MPI.COMM_WORLD.allgather(seen.calls[0][0])
+assert len(jobs) == 3 and jobs[0] == jobs[1] == jobs[2], jobs
+sys.exit(code)
+"""
+    done = run_ranks(3, script, check=False, cwd=job.parent)
+    assert done.returncode == exits.NOT_CONVERGED
+    assert done.stdout.count("solving 48 into runs/film with []") == 1
+    assert done.stderr.count("caution: drift_x is held") == 1
+    assert "Traceback" not in done.stderr
 
 
 @pytest.fixture

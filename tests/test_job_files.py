@@ -170,13 +170,6 @@ def test_a_file_that_is_no_job_is_refused(tmp_path: Path, content: bytes, said: 
     assert str(path) in str(caught.value)
 
 
-def test_a_missing_file_and_a_folder_are_refused(tmp_path: Path) -> None:
-    with pytest.raises(InputError, match="no such job file"):
-        load_job(tmp_path / "none.toml")
-    with pytest.raises(InputError, match="is a folder"):
-        load_job(tmp_path)
-
-
 # Values of every kind that TOML has, some of them hostile, put at every key.
 VALUES = st.recursive(
     st.one_of(
@@ -198,6 +191,25 @@ KEYS = [
     if section != "start"
     for key in field.annotation.model_fields  # type: ignore[union-attr]
 ] + [("start", key) for key in {key for model in START_MODELS.values() for key in model.model_fields}]
+
+
+@given(st.sampled_from(sorted(KEYS)), st.text(st.characters(categories=["Cc", "Cf", "L"]), min_size=1))
+@settings(max_examples=100, suppress_health_check=[HealthCheck.function_scoped_fixture])
+def test_no_refusal_steers_the_terminal(tmp_path: Path, place: tuple[str, str], text: str) -> None:
+    section, key = place
+    tables = {name: dict(table) for name, table in FILM.items()}
+    tables.setdefault(section, {})[key] = text
+    tables.setdefault(section, {})[text + "?"] = 1
+    with pytest.raises(InputError) as caught:
+        load_job(written(tmp_path, tables))
+    assert all(letter.isprintable() or letter == "\n" for letter in str(caught.value))
+
+
+def test_a_missing_file_and_a_folder_are_refused(tmp_path: Path) -> None:
+    with pytest.raises(InputError, match="no such job file"):
+        load_job(tmp_path / "none.toml")
+    with pytest.raises(InputError, match="is a folder"):
+        load_job(tmp_path)
 
 
 @given(st.sampled_from(BASE_NAMES), st.sampled_from(sorted(KEYS)), VALUES)

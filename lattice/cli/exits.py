@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from lattice.errors import InputError, LatticeError
+from lattice.job.problems import printable
 
 CONVERGED, REFUSED, NOT_CONVERGED, INTERRUPTED = 0, 2, 3, 4
 FAILED = 70
@@ -29,15 +30,15 @@ def exit_code(error: BaseException) -> int:
 
 
 def explain(error: BaseException, debug: bool = False) -> str:
-    """Return what the user reads about a failure."""
+    """Return what the user reads about a failure; text from files cannot steer the terminal."""
     error = root_cause(error)
     if isinstance(error, KeyboardInterrupt):
         return "interrupted"
-    if isinstance(error, InputError):
-        return f"error: {error}"
     if isinstance(error, LatticeError):
-        return f"failed: {error}"
-    return f"internal failure: {describe(error)}" + ("" if debug else "; --debug shows where")
+        kind = "error" if isinstance(error, InputError) else "failed"
+        text = printable(str(error), keep="\n")
+        return f"{kind}: {text}"
+    return f"internal failure: {printable(describe(error))}" + ("" if debug else "; --debug shows where")
 
 
 def describe(error: BaseException) -> str:

@@ -174,9 +174,12 @@ def _warn(job: Job, cautions: tuple[str, ...]) -> None:
 
 
 def _solve(options: argparse.Namespace, job: Job, comm: MPI.Intracomm) -> int:
+    from lattice.job.writer import job_to_toml
     from lattice.solve.run import run_job
 
-    outcome: Any = run_job(job, Path(job.output.folder or ""), comm, options.petsc_options, _report(comm))
+    outcome: Any = run_job(
+        job, Path(job.output.folder or ""), comm, options.petsc_options, _report(comm), job_to_toml(job)
+    )
     return int(outcome.exit_code)
 
 

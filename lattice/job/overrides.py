@@ -8,6 +8,7 @@ from collections.abc import Mapping, Sequence
 from typing import Any
 
 from lattice.errors import InputError
+from lattice.job.problems import printable
 
 _KEY = re.compile(r"[A-Za-z_][A-Za-z0-9_-]*(\.[A-Za-z0-9_-]+)*")
 
@@ -30,7 +31,8 @@ def read_override(text: str) -> tuple[tuple[str, ...], Any]:
     key, equals, value = text.partition("=")
     if not equals or not _KEY.fullmatch(key.strip()) or not value.strip():
         raise InputError(
-            f"must be written section.key=value, got '{text}'; for example --set lattice.nx=96", key="--set"
+            f"must be written section.key=value, got '{printable(text)}'; for example --set lattice.nx=96",
+            key="--set",
         )
     return tuple(key.strip().split(".")), _value(value.strip())
 

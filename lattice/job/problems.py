@@ -67,6 +67,20 @@ def did_you_mean(word: str, known: Iterable[str]) -> str:
     return f" (did you mean '{near[0]}'?)" if near else ""
 
 
+def printable(text: str, keep: str = "") -> str:
+    r"""Return text with control characters spelled out, so that it cannot steer a terminal.
+
+    Examples
+    --------
+    >>> printable("red\x1b[31m")
+    'red\\x1b[31m'
+    """
+    return "".join(
+        letter if letter.isprintable() or letter in keep else letter.encode("unicode_escape").decode()
+        for letter in text
+    )
+
+
 def listed(names: Iterable[str], none: str = "none") -> str:
     """Return names as "a, b, c", or the word for none.
 
@@ -81,4 +95,4 @@ def listed(names: Iterable[str], none: str = "none") -> str:
 def _line(problem: Problem, file: str, overridden: Sequence[str]) -> str:
     typed = any(problem.key == key or problem.key.startswith((f"{key}.", f"{key}[")) for key in overridden)
     place = [f"{file} with --set" if typed else file, problem.key]
-    return ": ".join([*(part for part in place if part), problem.message])
+    return printable(": ".join([*(part for part in place if part), problem.message]), keep="\n")

@@ -9,7 +9,7 @@ from pydantic import BaseModel
 from pydantic_core import ErrorDetails
 
 from lattice.job.choices import START_KINDS
-from lattice.job.problems import Problem, did_you_mean, listed
+from lattice.job.problems import Problem, did_you_mean, listed, printable
 from lattice.job.schema import START_MODELS, Job, OwnParameter, Wave
 
 Place = tuple[int | str, ...]
@@ -76,7 +76,7 @@ def key_text(place: Sequence[int | str]) -> str:
     text = ""
     for part in place:
         text += f"[{part + 1}]" if isinstance(part, int) else f".{part}" if text else str(part)
-    return text
+    return printable(text)
 
 
 def value_text(value: Any) -> str:
@@ -84,7 +84,7 @@ def value_text(value: Any) -> str:
     if isinstance(value, bool):
         return str(value).lower()
     if isinstance(value, str):
-        text = f"'{value}'"
+        text = f"'{printable(value)}'"
     elif isinstance(value, (tuple, list)):
         text = "[" + ", ".join(value_text(item) for item in value) + "]"
     elif isinstance(value, Mapping):
