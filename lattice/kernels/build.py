@@ -12,7 +12,7 @@ import re
 import sys
 import tempfile
 from collections.abc import Callable, Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Any
 
@@ -85,7 +85,8 @@ class Rows(Loop):
 
     def __init__(self, form: Form, scheme: Scheme) -> None:
         compiled = have_numba()
-        super().__init__(form, scheme, generate_rows(form, scheme), compiled)
+        reading = replace(form, name="rows", fields=form.fields[:1])
+        super().__init__(reading, scheme, generate_rows(form, scheme), compiled)
         self.points = row_points(form, scheme)
         if not compiled:
             self.function = _interpret(self.source.text)

@@ -1,0 +1,242 @@
+"""A run: start, Newton's method, state file, summary."""
+
+from __future__ import annotations
+
+import math
+import time
+from collections.abc import Callable, Sequence
+from dataclasses import asdict, dataclass
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from lattice.errors import LatticeError
+from lattice.show.progress import header, step_line
+from lattice.solve.newton import Newton, NewtonResult, Step
+from lattice.solve.petsc import start_petsc
+from lattice.solve.registry import make_preconditioner
+from lattice.solve.stop import StopFlag
+from lattice.starts import STARTS
+from lattice.store.runfolder import RunFolder, Summary, peak_memory_mb
+from lattice.store.statefile import write_state
+from lattice.store.statemeta import StateMeta
+from lattice.store.versions import versions
+from lattice.system.system import System
+
+if TYPE_CHECKING:
+    from mpi4py import MPI
+
+    from lattice.job.schema import Job
+
+Report = Callable[[str], None]
+CONVERGED, NOT_CONVERGED, INTERRUPTED = 0, 3, 4
+
+
+@dataclass(frozen=True)
+class Outcome:
+    """How a run ended: the process exit code and the content of summary.json."""
+
+    exit_code: int
+    summary: Summary
+
+
+def run_job(
+    job: Job, folder: Path, comm: MPI.Intracomm, petsc_options: Sequence[str], report: Report, job_text: str
+) -> Outcome:
+    """Run a job and keep its files in a folder.
+
+    Collective.
+
+    Parameters
+    ----------
+    job : Job
+        Resolved, the same on all ranks.
+    folder : Path
+        Made if it is not there; held by this run until it ends.
+    comm : MPI.Intracomm
+    petsc_options : sequence of str
+        As typed after `--`.
+    report : callable
+        Takes lines for the user; silent on all ranks but one.
+    job_text : str
+        The resolved job in TOML, for the folder and the state file.
+
+    Returns
+    -------
+    Outcome
+
+    Raises
+    ------
+    LatticeError
+        If the folder cannot be used, the start cannot be made, or a factorisation fails for good.
+    """
+    start_petsc(petsc_options)
+    with RunFolder(folder, comm) as files, StopFlag(comm) as stop:
+        files.begin(job_text)
+        return _Run(job, files, comm, stop, report, job_text).go()
+
+
+class _Run:
+    """The state of a run between its steps."""
+
+    def __init__(
+        self,
+        job: Job,
+        files: RunFolder,
+        comm: MPI.Intracomm,
+        stop: StopFlag,
+        report: Report,
+        job_text: str,
+    ) -> None:
+        self.job, self.files, self.comm, self.stop, self.report = job, files, comm, stop, report
+        self.job_text, self.versions = job_text, versions()
+        self.law, self.lattice = job.make_law(), job.make_lattice()
+        self.began = time.perf_counter()
+        self.seconds: dict[str, float] = {}
+        self.history: list[dict[str, Any]] = []
+        self.linear_iterations = 0
+        self.residual_max = self.mean_square = math.nan
+        self.system: System
+        self.newton: Newton
+
+    def go(self) -> Outcome:
+        x = self._begin()
+        self.newton = Newton(
+            self.system,
+            make_preconditioner(self.job.solve.preconditioner, self.system, self.job.solve),
+            self.job.solve,
+            self.stop,
+            self._after_step,
+        )
+        try:
+            result = self.newton.solve(x)
+            return self._finish(x, result)
+        finally:
+            self.newton.destroy()
+            x.destroy()
+            self.system.destroy()
+
+    def _begin(self) -> Any:
+        """Make the system and its start; return the vector of unknowns."""
+        job, comm = self.job, self.comm
+        self.system = System(
+            self.law, self.lattice, job.make_values(), job.solve.free or (), job.solve.mean, comm
+        )
+        lattice, unknowns = self.lattice, self.system.blocks.size + len(self.system.unknowns)
+        grid = " x ".join(str(p) for p in self.system.blocks.grid)
+        self.report(
+            f"{self.law.title or self.law.name}: {unknowns} unknowns on {lattice.nt} x {lattice.ny} x {lattice.nx} "
+            f"nodes (t, y, x), {comm.size} rank(s) as {grid}"
+        )
+        start = STARTS[job.start.kind]
+        owned, values = start(
+            job.start, lattice, job.make_values(), self.law, self.system.blocks.block, comm, self.report
+        )
+        x = self.system.vector()
+        self.system.pack(owned, values, x)
+        self.system.set_reference(x)
+        self.seconds["start"] = time.perf_counter() - self.began
+        self.report(f"start '{job.start.kind}' took {self.seconds['start']:.1f} s")
+        self.report(header([u.name for u in self.system.unknowns]))
+        return x
+
+    def _after_step(self, step: Step, x: Any) -> None:
+        """Report a step, append it to the folder and write the state."""
+        values = self.system.values_of(x)
+        self._measure(x)
+        self.linear_iterations += step.linear_iterations
+        memory = peak_memory_mb(self.comm)
+        free = {u.name: values[u.name] for u in self.system.unknowns}
+        elapsed = time.perf_counter() - self.began
+        self.report(
+            step_line(step.number, step.residual_rms, free, step.linear_iterations, elapsed, memory)
+        )
+        entry = {
+            "step": step.number,
+            "residual_rms": step.residual_rms,
+            "residual_max": self.residual_max,
+            "scalars": free,
+            "linear_iterations": step.linear_iterations,
+            "seconds": elapsed,
+            "peak_memory_mb": memory,
+        }
+        self.history.append(entry)
+        self.files.append_step(entry)
+        self._write(x, "running")
+
+    def _measure(self, x: Any) -> None:
+        """Set the largest residual and the mean square of the field."""
+        from mpi4py import MPI
+
+        function = self.newton.function()
+        count = self.system.blocks.owned_size
+        residual = function.getArray(readonly=1)[:count]
+        field = x.getArray(readonly=1)[:count]
+        self.residual_max = self.comm.allreduce(float(np.abs(residual).max()), op=MPI.MAX)
+        square = self.comm.allreduce(float(field @ field))
+        self.mean_square = square / self.lattice.nodes
+
+    def _write(self, x: Any, outcome: str) -> None:
+        meta = StateMeta.of_law(
+            self.law,
+            self.lattice,
+            self.system.values_of(x),
+            free=tuple(u.name for u in self.system.unknowns),
+            residual_rms=self.history[-1]["residual_rms"],
+            residual_max=self.residual_max,
+            mean_square=self.mean_square,
+            outcome=outcome,
+            history=tuple(self.history),
+            versions=self.versions,
+            job_text=self.job_text,
+        )
+        owned: NDArray[np.float64] = self.system.field_of(x)
+        write_state(self.files.state, owned, self.system.blocks.block, meta, self.comm)
+
+    def _finish(self, x: Any, result: NewtonResult) -> Outcome:
+        if not self.history:
+            raise LatticeError(f"Newton's method made no step: {result.reason}")
+        outcome, code = "not converged", NOT_CONVERGED
+        if result.converged:
+            outcome, code = "converged", CONVERGED
+        elif result.interrupted:
+            outcome, code = "interrupted", INTERRUPTED
+        self._write(x, outcome)
+        phases = self.newton.seconds
+        self.seconds |= {
+            "newton": phases["solve"] - phases["after_step"],
+            "set_up": phases["set_up"],
+            "residual": phases["residual"],
+            "linear": phases["solve"] - phases["after_step"] - phases["set_up"] - phases["residual"],
+            "write": phases["after_step"],
+            "total": time.perf_counter() - self.began,
+        }
+        summary = Summary(
+            outcome=outcome,
+            reason=result.reason,
+            law=self.law.name,
+            lattice=self.lattice,
+            unknowns=self.system.blocks.size + len(self.system.unknowns),
+            residual_rms=self.history[-1]["residual_rms"],
+            residual_max=self.residual_max,
+            scalars=self.system.values_of(x),
+            mean_square=self.mean_square,
+            newton_steps=self.history[-1]["step"],
+            linear_iterations=self.linear_iterations,
+            seconds=self.seconds,
+            ranks=self.comm.size,
+            peak_memory_mb=peak_memory_mb(self.comm),
+            versions=self.versions,
+        )
+        self.files.write_summary(summary)
+        self.report(f"{outcome}: {result.reason}; {_words(summary)}; files in {self.files.path}")
+        return Outcome(code, summary)
+
+
+def _words(summary: Summary) -> str:
+    return (
+        f"residual_rms {summary.residual_rms:.3e} after {summary.newton_steps} Newton steps and "
+        f"{summary.linear_iterations} linear iterations, {asdict(summary)['seconds']['total']:.1f} s"
+    )
