@@ -26,6 +26,7 @@ from lattice.job.schema import START_MODELS, Job
 from lattice.job.unknowns import scalar_names
 from lattice.job.writer import job_to_toml
 from lattice.laws.law import Parameter
+from lattice.solve.registry import _PLACES
 from lattice.starts import STARTS
 
 ROOT = Path(__file__).resolve().parents[1]
@@ -444,7 +445,7 @@ def test_a_rank_count_that_does_not_divide_is_told_the_next_that_fits(tmp_path: 
 
 def test_every_start_and_preconditioner_is_named_once_everywhere() -> None:
     assert set(START_KINDS) == set(START_MODELS) == set(STARTS)
-    assert set(PRECONDITIONERS) >= {"direct", "patches"}
+    assert set(PRECONDITIONERS) == set(_PLACES)
 
 
 def test_the_reference_lists_every_key_with_a_meaning() -> None:

@@ -7,13 +7,15 @@ import os
 import sys
 import time
 from pathlib import Path
-from typing import TYPE_CHECKING, Any, NoReturn
+from typing import TYPE_CHECKING, NoReturn
 
 from lattice.cli.exits import REFUSED
 from lattice.environment import Launch, find_launch
 from lattice.errors import InputError
 
 if TYPE_CHECKING:
+    from collections.abc import Callable
+
     from mpi4py import MPI
 
     from lattice.job.schema import Job
@@ -177,13 +179,11 @@ def _solve(options: argparse.Namespace, job: Job, comm: MPI.Intracomm) -> int:
     from lattice.job.writer import job_to_toml
     from lattice.solve.run import run_job
 
-    outcome: Any = run_job(
-        job, Path(job.output.folder or ""), comm, options.petsc_options, _report(comm), job_to_toml(job)
-    )
-    return int(outcome.exit_code)
+    folder, text = Path(job.output.folder or ""), job_to_toml(job)
+    return run_job(job, folder, comm, options.petsc_options, _report(comm), text).exit_code
 
 
-def _report(comm: MPI.Intracomm) -> Any:
+def _report(comm: MPI.Intracomm) -> Callable[[str], None]:
     """Return what prints a line of progress on one rank."""
     if comm.Get_rank() > 0:
         return lambda text: None
