@@ -26,13 +26,11 @@ def test_every_public_name_exists() -> None:
     assert [name for name in SURFACE if not hasattr(lattice, name)] == []
 
 
-@pytest.mark.parametrize("name", SURFACE)
+@pytest.mark.parametrize("name", [name for name in SURFACE if callable(getattr(lattice, name, None))])
 def test_the_public_surface_is_documented(name: str) -> None:
     with warnings.catch_warnings():
         warnings.simplefilter("ignore")  # of the documentation packages, not of ours
         from numpydoc.validate import validate
-    if not callable(getattr(lattice, name)):
-        pytest.skip(f"{name} is a value")
     errors = validate(f"lattice.{name}")["errors"]
     returns_nothing = inspect.isclass(getattr(lattice, name))
     left_out = {"RT01"} if returns_nothing else set()
