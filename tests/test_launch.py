@@ -156,12 +156,43 @@ def test_no_rank_outlives_a_killed_launch(tmp_path: Path, running: list[subproce
     wait_for(lambda: alive(tmp_path) == [])
 
 
+FILM = """
+law.name = "kuramoto-sivashinsky"
+box = { period = 16.3, length_x = 22.0 }
+lattice = { nt = 64, nx = 64 }
+start = { kind = "march", seed = 1, spin_up = 20.0 }
+solve.residual_rms = 1e-30
+output.picture = false
+"""
+
+
+def test_ctrl_c_during_a_solve_keeps_the_state_and_ends_with_code_4(
+    tmp_path: Path, running: list[subprocess.Popen[str]]
+) -> None:
+    from lattice.store.statefile import read_meta
+
+    (tmp_path / "film.toml").write_text(FILM, encoding="utf-8")
+    process = subprocess.Popen(
+        [sys.executable, "-m", "lattice", "solve", "film.toml", "--ranks", "2", "--out", "run"],
+        stdout=subprocess.PIPE, stderr=subprocess.PIPE, text=True,
+        env={**os.environ, "PYTHONPATH": str(ROOT)}, cwd=tmp_path,
+    )  # fmt: skip
+    running.append(process)
+    steps = tmp_path / "run" / "steps.jsonl"
+    wait_for(lambda: steps.exists() and len(steps.read_text().splitlines()) > 1, seconds=120.0)
+    process.send_signal(signal.SIGINT)
+    out, err = process.communicate(timeout=60)
+    assert process.returncode == 4, out + err
+    assert "interrupted: stopped by SIGUSR1" in out
+    assert read_meta(tmp_path / "run" / "state.h5").outcome == "interrupted"
+
+
 @pytest.mark.parametrize(
     ("version", "flavour"),
     [
         ("mpiexec (OpenRTE) 4.1.4\n\nReport bugs to http://www.open-mpi.org/community/help/", "openmpi"),
         ("mpiexec (Open MPI) 5.0.3", "openmpi"),
-        ("HYDRA build details:\n    Version:  4.0.2", "mpich"),
+        ("HYDRA build details:\n    Version:  5.0.2", "mpich"),
         ("Intel(R) MPI Library for Linux* OS, Version 2021.9", "mpich"),
         ("slurm 22.05.8", "slurm"),
         ("something else", "unknown"),
@@ -169,7 +200,7 @@ def test_no_rank_outlives_a_killed_launch(tmp_path: Path, running: list[subproce
     ],
 )
 def test_the_kind_of_launcher_is_known_by_its_version(version: str, flavour: str) -> None:
-    # The lines as the programs print them, from memory; the first and the fifth were seen on Debian 12.
+    # Open MPI 4.1.4, MPICH 5.0.2 and Slurm 22.05.8 were seen to print such lines; the others are from memory.
     assert flavour_of(version) == flavour
 
 

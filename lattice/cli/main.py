@@ -35,7 +35,9 @@ def main(arguments: Sequence[str] | None = None) -> int:
         os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
         return PIPE_CLOSED
     except KeyboardInterrupt as error:
-        print(explain(error), file=sys.stderr)
+        launch = environment.find_launch()
+        if launch is None or launch.rank == 0:
+            print(explain(error), file=sys.stderr)
         return exit_code(error)
     return code
 
