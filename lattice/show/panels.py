@@ -169,8 +169,7 @@ def spectrum_panel(axes: Axes, spectra: Sequence[Spectrum], order: int) -> None:
     axes.axvspan(2.0 * end / 3.0, end, color="#000000", alpha=0.06, linewidth=0)
     axes.axvline(first.limit, color=BAD, linewidth=0.9, linestyle=(0, (4, 2)))
     axes.set_xlabel(f"{SPECTRUM_LABELS[first.axis]} (dimensionless)")
-    of = f" of {first.component}" if len(spectra) == 1 else ""
-    axes.set_ylabel(f"mean square{of} per mode")
+    axes.set_ylabel("mean square per mode")
     _annotate_limit(axes, first.limit, order)
     _annotate_last_third(axes, spectra)
     if len(spectra) > 1:
@@ -236,13 +235,14 @@ def _annotate_last_third(axes: Axes, spectra: Sequence[Spectrum]) -> None:
 def header(figure: Figure, meta: StateMeta, subject: str = "") -> None:
     """Write law, scalars and residual above the panels and keep that band free of them."""
     width, height = figure.get_size_inches()
-    title = (meta.title or meta.law) + (f": {subject}" if subject else "")
+    title = meta.title or meta.law
     faint, verdict = {"color": FAINT}, {"color": GOOD if is_solution(meta) else BAD, "fontweight": "bold"}
     rows: list[tuple[str, dict[str, Any]]] = [
         *(
             (line, {"fontsize": 11.5, "fontweight": "bold"})
             for line in wrapped(title.split(" "), " ", width * 9)
         ),
+        *((line, {"fontweight": "bold"}) for line in ([subject] if subject else [])),
         *((line, {}) for line in wrapped(scalar_texts(meta), "    ", width * 15)),
         *((line, faint) for line in wrapped(lattice_texts(meta), ";  ", width * 14)),
         *((line, verdict) for line in wrapped(f"residual {residual_text(meta)}".split(" "), " ", width * 12)),

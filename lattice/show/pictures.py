@@ -6,6 +6,7 @@ space-time cut and spectra. Without time: a profile or a map. A cut: one plane o
 
 from __future__ import annotations
 
+import math
 import os
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field
@@ -39,6 +40,8 @@ if TYPE_CHECKING:
 
 FORMATS = ("png", "pdf", "svg")
 DOTS_PER_INCH = 150
+SMALLEST = 0.7
+"""Smallest size of a picture in units of its natural one; below, labels run into each other."""
 SNAPSHOTS_ALONE, SNAPSHOTS_IN_ROW = 6, 4
 """Snapshots of a field of one component (in two rows), and per component of several."""
 
@@ -169,9 +172,18 @@ def _components(meta: StateMeta, wanted: str | None) -> tuple[str, ...]:
     return (wanted,)
 
 
-def _figure(size: tuple[float, float]) -> Figure:
+def _figure(wanted: tuple[float, float] | None, natural: tuple[float, float]) -> Figure:
+    """Return an empty figure of the wanted size in inches, the natural one unless given."""
     from matplotlib.figure import Figure
 
+    size = wanted or natural
+    least = tuple(math.ceil(10.0 * SMALLEST * inches) / 10.0 for inches in natural)
+    if size[0] < least[0] or size[1] < least[1]:
+        raise InputError(
+            f"must be at least {least[0]:.1f}x{least[1]:.1f} for this picture, got {size[0]:g}x{size[1]:g}; "
+            "raise it, or show one component or a cut",
+            key="--size",
+        )
     return Figure(figsize=size, dpi=DOTS_PER_INCH, layout="constrained")
 
 
@@ -180,7 +192,7 @@ def _draw_space_time(
 ) -> Figure:
     """Space-time planes side by side, t upwards; spectra to their right."""
     meta = file.meta
-    figure = _figure(size or (5.4 + 4.0 * len(components), 6.4))
+    figure = _figure(size, (5.4 + 4.0 * len(components), 6.4))
     grid = figure.add_gridspec(2, len(components) + 1, width_ratios=[1.35] * len(components) + [1.0])
     for column, component in enumerate(components):
         axes = figure.add_subplot(grid[:, column])
@@ -225,7 +237,7 @@ def _draw_sheet(file: StateFile, components: tuple[str, ...], size: tuple[float,
     rows, columns = (2, SNAPSHOTS_ALONE // 2) if len(components) == 1 else (1, SNAPSHOTS_IN_ROW)
     band_height = rows * _snapshot_height(file.meta, columns) + 0.3
     above, below = band_height * len(components), 2.7
-    figure = _figure(size or (12.0, above + below + 1.0))
+    figure = _figure(size, (12.0, above + below + 1.0))
     fields, spectra = figure.subfigures(2, 1, height_ratios=[above, below])
     bands = np.atleast_1d(fields.subfigures(len(components), 1))
     for band, component in zip(bands, components, strict=True):
@@ -284,7 +296,7 @@ def _inner_labels(axes: Axes, left: bool, bottom: bool) -> None:
 
 def _draw_profile(file: StateFile, components: tuple[str, ...], size: tuple[float, float] | None) -> Figure:
     """The profile of a steady state or travelling wave, and its spectrum."""
-    figure = _figure(size or (10.5, 2.4 + 2.6 * len(components)))
+    figure = _figure(size, (10.5, 2.4 + 2.6 * len(components)))
     grid = figure.add_gridspec(len(components), 2, width_ratios=[1.6, 1.0])
     _lines(figure, grid, file, components, "x", {})
     _spectra(figure.add_subplot(grid[:, 1]), file, components, "x")
@@ -308,7 +320,7 @@ def _lines(
 
 def _draw_maps(file: StateFile, components: tuple[str, ...], size: tuple[float, float] | None) -> Figure:
     """Maps of a steady state or travelling wave side by side; spectra below."""
-    figure = _figure(size or (max(8.0, 5.6 * len(components)), 8.6))
+    figure = _figure(size, (max(8.0, 5.6 * len(components)), 8.6))
     above, below = figure.subfigures(2, 1, height_ratios=[1.7, 1.0])
     for axes, component in zip(above.subplots(1, len(components), squeeze=False)[0], components, strict=True):
         _plane(above, axes, file, component, ("y", "x"), {"t": 0})
@@ -334,10 +346,10 @@ def _draw_cut(file: StateFile, components: tuple[str, ...], options: PictureOpti
     if not left:
         raise InputError("must leave a line or a plane; hold fewer coordinates", key="--cut")
     if len(left) == 1:
-        figure = _figure(options.size or (8.5, 1.6 + 2.6 * len(components)))
+        figure = _figure(options.size, (8.5, 1.6 + 2.6 * len(components)))
         _lines(figure, figure.add_gridspec(len(components), 1), file, components, left[0], at)
     else:
-        figure = _figure(options.size or (max(6.5, 5.6 * len(components)), 6.2))
+        figure = _figure(options.size, (max(6.5, 5.6 * len(components)), 6.2))
         for axes, component in zip(
             figure.subplots(1, len(components), squeeze=False)[0], components, strict=True
         ):

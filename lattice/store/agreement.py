@@ -2,9 +2,12 @@
 
 from __future__ import annotations
 
-from mpi4py import MPI
+from typing import TYPE_CHECKING
 
 from lattice.errors import LatticeError
+
+if TYPE_CHECKING:
+    from mpi4py import MPI
 
 
 def raise_together(comm: MPI.Intracomm, error: Exception | None, message: str = "") -> None:

@@ -63,17 +63,15 @@ def create_file(path: Path, meta: StateMeta) -> None:
 
 
 def _lay_out(file: h5py.File, meta: StateMeta) -> None:
-    import h5py
-
     record = to_json(meta).encode()
     for name, value in attributes(meta).items():
-        file.attrs[name] = value
-    file.attrs["metadata_sha256"] = hashlib.sha256(record).hexdigest()
-    file.create_dataset(RECORD, data=np.array(record, h5py.string_dtype("utf-8", len(record))))
+        file.attrs[name] = _stored(value)
+    file.attrs["metadata_sha256"] = _stored(hashlib.sha256(record).hexdigest())
+    file.create_dataset(RECORD, data=_stored(record.decode()))
     for axis in meta.axes:
         scale = file.create_dataset(axis, data=meta.coordinate(axis))
-        scale.attrs["units"] = UNIT
-        scale.attrs["long_name"] = LONG_NAMES[axis]
+        scale.attrs["units"] = _stored(UNIT)
+        scale.attrs["long_name"] = _stored(LONG_NAMES[axis])
         scale.make_scale(axis)
     for component in meta.components:
         _add_component(file, meta, component)
@@ -81,10 +79,9 @@ def _lay_out(file: h5py.File, meta: StateMeta) -> None:
 
 def _add_component(file: h5py.File, meta: StateMeta, component: str) -> None:
     dataset = _allocate(file, component, meta)
-    dataset.attrs["units"] = UNIT
-    dataset.attrs["long_name"] = f"component {component}"
+    dataset.attrs["units"] = _stored(UNIT)
+    dataset.attrs["long_name"] = _stored(f"component {component}")
     for place, axis in enumerate(meta.axes):
-        dataset.dims[place].label = axis
         dataset.dims[place].attach_scale(file[axis])
 
 
@@ -98,6 +95,20 @@ def _allocate(file: h5py.File, component: str, meta: StateMeta) -> h5py.Dataset:
     plan.set_alloc_time(h5d.ALLOC_TIME_EARLY)
     space = h5s.create_simple(meta.shape)
     return Dataset(h5d.create(file.id, component.encode(), h5t.IEEE_F64LE, space, plan))
+
+
+def _stored(value: Any) -> Any:
+    """Return text as HDF5 text of fixed length; other values as they are.
+
+    Text of variable length would lie in HDF5's global heap, which has no checksum: HDF5 1.10 loops for
+    ever on some single-bit errors there.
+    """
+    import h5py
+
+    if not isinstance(value, str):
+        return value
+    text = value.encode() or b" "
+    return np.array(text, h5py.string_dtype("utf-8", len(text)))
 
 
 def attributes(meta: StateMeta) -> dict[str, Any]:
@@ -135,7 +146,7 @@ def read_record(file: h5py.File) -> StateMeta:
     """
     _check_schema(file)
     record = _record_bytes(file)
-    if hashlib.sha256(record).hexdigest() != file.attrs.get("metadata_sha256"):
+    if hashlib.sha256(record).hexdigest() != _text(file.attrs.get("metadata_sha256")):
         raise ValueError("is damaged: its metadata do not match their sha256 checksum")
     try:
         meta = from_json(record.decode())
@@ -147,7 +158,7 @@ def read_record(file: h5py.File) -> StateMeta:
 
 
 def _check_schema(file: h5py.File) -> None:
-    schema, version = file.attrs.get("schema"), file.attrs.get("schema_version")
+    schema, version = _text(file.attrs.get("schema")), file.attrs.get("schema_version")
     if schema != SCHEMA or version is None:
         raise ValueError(f"is HDF5 but no state file of this package (it lacks schema = {SCHEMA!r})")
     if int(version) > SCHEMA_VERSION:
@@ -160,7 +171,7 @@ def _check_schema(file: h5py.File) -> None:
 def _record_bytes(file: h5py.File) -> bytes:
     if RECORD not in file:
         raise ValueError(f"is damaged: it has no dataset {RECORD!r}")
-    return bytes(file[RECORD].asstr()[()].encode())
+    return bytes(file[RECORD][()])
 
 
 def _check_datasets(file: h5py.File, meta: StateMeta) -> None:
@@ -185,5 +196,12 @@ def _check_copies(file: h5py.File, meta: StateMeta) -> None:
 
 def _same(stored: Any, expected: Any) -> bool:
     if isinstance(expected, float) and math.isnan(expected):
-        return bool(np.isnan(stored))
+        return isinstance(stored, np.floating) and bool(np.isnan(stored))
+    if isinstance(expected, str):
+        return bool(_text(stored) == (expected or " "))
     return bool(stored == expected)
+
+
+def _text(stored: Any) -> Any:
+    """Return stored text of fixed length as text, anything else unchanged."""
+    return stored.decode(errors="replace") if isinstance(stored, bytes) else stored
