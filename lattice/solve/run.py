@@ -231,8 +231,21 @@ class _Run:
             versions=self.versions,
         )
         self.files.write_summary(summary)
+        if self.job.output.picture:
+            self._draw()
         self.report(f"{outcome}: {result.reason}; {_words(summary)}; files in {self.files.path}")
         return Outcome(code, summary)
+
+    def _draw(self) -> None:
+        """Draw the state's picture on one rank; a failure costs the picture, not the run."""
+        if self.comm.rank > 0:
+            return
+        from lattice.show.pictures import plot_state
+
+        try:
+            plot_state(self.files.state, self.files.picture)
+        except LatticeError as error:
+            self.report(f"no picture: {error}")
 
 
 def _words(summary: Summary) -> str:

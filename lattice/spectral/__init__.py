@@ -1,0 +1,1 @@
+"""Spectral: distributed Fourier transforms of lattice fields, transfer between lattices, symbols."""
