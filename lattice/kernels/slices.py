@@ -22,7 +22,7 @@ if TYPE_CHECKING:
 Array = NDArray[np.float64]
 
 
-class _Evaluator:
+class Evaluator:
     """Values of expressions on all rows of some levels, by shifted slices of padded arrays."""
 
     def __init__(
@@ -101,7 +101,7 @@ def evaluate(
     if form.kind == "adjoint":
         arrays = _transposed_midpoints(form, scheme, arrays, midpoint, levels)
     for c, output in enumerate(form.outputs):
-        evaluator = _Evaluator(scheme, geometry, values, arrays, (rows, columns))
+        evaluator = Evaluator(scheme, geometry, values, arrays, (rows, columns))
         total = np.zeros((fields[0].shape[0] if form.kind == "gather" else levels, rows, columns))
         total += evaluator.value(output.expression)
         if not output.evolving:

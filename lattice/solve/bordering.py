@@ -21,7 +21,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 if TYPE_CHECKING:
-    from lattice.solve.registry import Preconditioner
+    from lattice.solve.registry import FieldInverse
     from lattice.system.system import System
 
 Array = NDArray[np.float64]
@@ -35,10 +35,10 @@ class Bordering:
     Parameters
     ----------
     system : System
-    inner : Preconditioner
+    inner : FieldInverse
     """
 
-    def __init__(self, system: System, inner: Preconditioner) -> None:
+    def __init__(self, system: System, inner: FieldInverse) -> None:
         self.system, self.inner = system, inner
         self._work, self._solved = system.blocks.vector(), system.blocks.vector()
         self._right: list[Any] = []
@@ -98,6 +98,28 @@ class Bordering:
         out = y.getArray()
         out[:owned] = self._solved.getArray(readonly=1)
         if self.system.last:
+            out[owned:] = scalars[: border.size]
+
+    def apply_transpose(self, r: Any, y: Any) -> None:
+        """Set `y` to the transpose of `apply`'s operator times `r`."""
+        owned, system = self.system.blocks.owned_size, self.system
+        border, pins = system.border_of(r), len(self.inner.pins)
+        self._work.getArray()[:] = r.getArray(readonly=1)[:owned]
+        local = np.array([c.getArray(readonly=1) @ self._work.getArray(readonly=1) for c in self._right])
+        products = system.comm.allreduce(local) if self._right else local
+        known = np.concatenate([border, np.zeros(pins)])
+        scalars = solve_small(self._schur.T, known - products)
+        for unknown, number in zip(system.unknowns, scalars[: border.size], strict=True):
+            system.add_row(unknown.condition, -float(number), self._work)
+        low, high = self._work.getOwnershipRange()
+        array = self._work.getArray()
+        for (row, _), number in zip(self.inner.pins, scalars[border.size :], strict=True):
+            if low <= row < high:
+                array[row - low] -= number
+        self.inner.apply_transpose(self._work, self._solved)
+        out = y.getArray()
+        out[:owned] = self._solved.getArray(readonly=1)
+        if system.last:
             out[owned:] = scalars[: border.size]
 
     def _free_columns(self) -> None:

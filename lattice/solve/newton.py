@@ -19,7 +19,6 @@ from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
 from lattice.solve import reasons
-from lattice.solve.bordering import Bordering
 
 if TYPE_CHECKING:
     from lattice.solve.registry import Preconditioner
@@ -81,14 +80,17 @@ class _Jacobian:
         self.system.adjoint(w, out)
 
 
-class _Preconditioner:
-    """Context of the PETSc python PC; the bordering itself outlives it."""
+class _PythonPC:
+    """Context of the PETSc python PC; the preconditioner itself outlives it."""
 
-    def __init__(self, bordering: Bordering) -> None:
-        self.bordering = bordering
+    def __init__(self, made: Preconditioner) -> None:
+        self.made = made
 
     def apply(self, pc: Any, r: Any, y: Any) -> None:
-        self.bordering.apply(r, y)
+        self.made.apply(r, y)
+
+    def applyTranspose(self, pc: Any, r: Any, y: Any) -> None:  # noqa: N802 - petsc4py's name
+        self.made.apply_transpose(r, y)
 
 
 class Newton:
@@ -99,7 +101,7 @@ class Newton:
     Parameters
     ----------
     system : System
-    inner : Preconditioner
+    preconditioner : Preconditioner
     options : object
         The job's solve section: residual_rms, newton_steps, linear_rtol, linear_iterations, line_search.
     stop : StopFlag
@@ -110,13 +112,13 @@ class Newton:
     def __init__(
         self,
         system: System,
-        inner: Preconditioner,
+        preconditioner: Preconditioner,
         options: Any,
         stop: StopFlag,
         after_step: Callable[[Step, Any], None],
     ) -> None:
         self.system, self.options, self.stop, self.after_step = system, options, stop, after_step
-        self.bordering = Bordering(system, inner)
+        self.preconditioner = preconditioner
         self.seconds = {"set_up": 0.0, "residual": 0.0, "after_step": 0.0, "solve": 0.0}
         self._steps: list[Step] = []
         self._function = system.vector()
@@ -150,7 +152,7 @@ class Newton:
             snes.setUseEW(True, version=2, rtol_0=FORCING, rtol_max=FORCING)
         pc = ksp.getPC()
         pc.setType("python")
-        pc.setPythonContext(_Preconditioner(self.bordering))
+        pc.setPythonContext(_PythonPC(self.preconditioner))
         snes.setFromOptions()
         snes.setConvergenceTest(self._test)
         snes.setMonitor(self._monitor)
@@ -186,7 +188,7 @@ class Newton:
     def _linearise(self, snes: Any, x: Any, matrix: Any, preconditioning: Any) -> None:
         started = time.perf_counter()
         self.system.linearise(x)
-        self.bordering.update()
+        self.preconditioner.update()
         matrix.assemble()
         self.seconds["set_up"] += time.perf_counter() - started
 
@@ -233,7 +235,7 @@ class Newton:
         self._snes.destroy()
         self._matrix.destroy()
         self._function.destroy()
-        self.bordering.destroy()
+        self.preconditioner.destroy()
 
 
 def _default_option(name: str, value: str) -> None:

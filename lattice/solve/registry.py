@@ -1,4 +1,4 @@
-"""The inner preconditioners by the name a job file chooses."""
+"""The preconditioners by the name a job file chooses."""
 
 from __future__ import annotations
 
@@ -6,15 +6,20 @@ from importlib import import_module
 from typing import TYPE_CHECKING, Any, Protocol
 
 if TYPE_CHECKING:
+    from collections.abc import Callable
+
     from lattice.system.system import System
 
-_PLACES = {
+
+_FIELD_INVERSES = {
     "direct": "lattice.solve.direct:Direct",
     "patches": "lattice.solve.patches:Patches",
 }
+_BORDERED = {"coarse": "lattice.solve.coarse:TwoLevel"}
+NAMES = (*_FIELD_INVERSES, *_BORDERED)
 
 
-class Preconditioner(Protocol):
+class FieldInverse(Protocol):
     """An approximate inverse of the field part of the Jacobian.
 
     Attributes
@@ -39,8 +44,51 @@ class Preconditioner(Protocol):
         """Free everything PETSc holds. Collective."""
 
 
-def make_preconditioner(name: str, system: System, options: Any) -> Preconditioner:
-    """Return the named preconditioner for a system; `options` is the job's solve section."""
-    module, _, kind = _PLACES[name].partition(":")
-    made: Preconditioner = getattr(import_module(module), kind)(system, options)
+class Preconditioner(Protocol):
+    """An approximate inverse of the whole bordered Jacobian; methods as of `FieldInverse`."""
+
+    def update(self) -> None:
+        """Set up for the system's point of linearisation. Collective."""
+
+    def apply(self, r: Any, y: Any) -> None:
+        """Set the vector of unknowns `y` to the approximate inverse times `r`. Collective."""
+
+    def apply_transpose(self, r: Any, y: Any) -> None:
+        """Set `y` to the transposed approximate inverse times `r`. Collective."""
+
+    def destroy(self) -> None:
+        """Free everything PETSc holds. Collective."""
+
+
+def make_preconditioner(
+    name: str, system: System, options: Any, report: Callable[[str], None] | None = None
+) -> Preconditioner:
+    """Return the named preconditioner for a system.
+
+    Collective.
+
+    Parameters
+    ----------
+    name : str
+        One of `NAMES`.
+    system : System
+    options : object
+        The job's solve section.
+    report : callable, optional
+        Takes lines for the log: what was chosen, and why.
+    """
+    from lattice.solve.bordering import Bordering
+
+    if name in _FIELD_INVERSES:
+        return Bordering(system, _load(_FIELD_INVERSES[name])(system, options))
+    made: Preconditioner = _load(_BORDERED[name])(system, options, report or _silent)
     return made
+
+
+def _load(place: str) -> Any:
+    module, _, kind = place.partition(":")
+    return getattr(import_module(module), kind)
+
+
+def _silent(text: str) -> None:
+    pass

@@ -105,7 +105,7 @@ class _Run:
         x = self._begin()
         self.newton = Newton(
             self.system,
-            make_preconditioner(self.job.solve.preconditioner, self.system, self.job.solve),
+            make_preconditioner(self.job.solve.preconditioner, self.system, self.job.solve, self.report),
             self.job.solve,
             self.stop,
             self._after_step,

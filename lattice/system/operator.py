@@ -156,6 +156,11 @@ class FieldOperator:
         """View the padded block of the point of linearisation. Not collective."""
         return self.blocks.padded(self._point)
 
+    def copy_point(self, out: Any) -> None:
+        """Set a field vector to the point of linearisation. Not collective."""
+        inner = tuple(slice(h, h + n) for h, n in zip(self.blocks.halos, self.blocks.block.shape, strict=True))
+        self.blocks.owned(out)[...] = self.padded_point()[inner]
+
     def component_means(self, u: Any) -> Array:
         """Return the mean of every component over all nodes, on every rank."""
         local = self.blocks.owned(u).reshape(-1, self.blocks.components).sum(axis=0)

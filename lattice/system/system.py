@@ -78,7 +78,7 @@ class System:
         """Set a vector of unknowns from this rank's field and the scalars' values."""
         self.values.update(values)
         numbers = [self.values[u.name] * self.root_size / u.unit for u in self.unknowns]
-        self._store(x, owned.reshape(-1), np.array(numbers))
+        self.store(x, owned.reshape(-1), np.array(numbers))
 
     def field_of(self, x: Any) -> Array:
         """Return a copy of this rank's part of the field, shape (levels, rows, columns, components)."""
@@ -97,7 +97,8 @@ class System:
         numbers: Array = self.comm.bcast(None if part is None else np.array(part), root=self.comm.size - 1)
         return numbers
 
-    def _store(self, x: Any, owned: Array, border: Array) -> None:
+    def store(self, x: Any, owned: Array, border: Array) -> None:
+        """Set a vector of unknowns from this rank's flat field and the border part."""
         array = x.getArray()
         array[: self.blocks.owned_size] = owned
         if self.last:
@@ -112,7 +113,7 @@ class System:
         field = self._load_field(x)
         values = self.values_of(x)
         self.operator.residual(field, values, self._field_out)
-        self._store(out, self._field_out.getArray(readonly=1), self._conditions(field))
+        self.store(out, self._field_out.getArray(readonly=1), self._conditions(field))
 
     def _conditions(self, field: Any) -> Array:
         """Return sqrt(N) times every condition."""
@@ -177,18 +178,18 @@ class System:
         self.operator.tangent(field, self._field_out)
         for column, z in zip(self.columns, border, strict=True):
             self._field_out.axpy(float(z), column)
-        self._store(out, self._field_out.getArray(readonly=1), self.border_rows(field))
+        self.store(out, self._field_out.getArray(readonly=1), self.border_rows(field))
 
     def adjoint(self, w: Any, out: Any) -> None:
         """Set `out` to the transpose of the bordered Jacobian times `w`."""
         field, border = self._load_field(w), self.border_of(w)
         self.operator.adjoint(field, self._field_out)
         for unknown, z in zip(self.unknowns, border, strict=True):
-            self._add_row(unknown.condition, float(z), self._field_out)
+            self.add_row(unknown.condition, float(z), self._field_out)
         array = field.getArray(readonly=1)
         local = np.array([column.getArray(readonly=1) @ array for column in self.columns])
         products = self.comm.allreduce(local) if self.columns else local
-        self._store(out, self._field_out.getArray(readonly=1), products)
+        self.store(out, self._field_out.getArray(readonly=1), products)
 
     def border_rows(self, field: Any) -> Array:
         """Return the border rows of the Jacobian times a field vector, on every rank."""
@@ -201,7 +202,7 @@ class System:
             rows.append(self.root_size * means[index] if kind == "mean" else phases[unknown.condition])
         return np.array(rows)
 
-    def _add_row(self, condition: str, z: float, field: Any) -> None:
+    def add_row(self, condition: str, z: float, field: Any) -> None:
         """Add z times a border row, as a field, to a field vector."""
         kind, _, which = condition.partition("_")
         if kind == "mean":
@@ -209,6 +210,21 @@ class System:
             owned[..., self.law.components.index(which)] += z * self.root_size / self.lattice.nodes
         else:
             field.axpy(z / self.root_size, self._templates[condition])
+
+    def use_templates(self, templates: Mapping[str, Any]) -> None:
+        """Take over the phase templates of another lattice, already on this one; offsets stay zero.
+
+        For a system that serves linear solves only. Collective.
+        """
+        for condition, template in templates.items():
+            if condition not in self._templates:
+                self._templates[condition] = self.blocks.vector()
+            template.copy(self._templates[condition])
+
+    @property
+    def templates(self) -> Mapping[str, Any]:
+        """Field vectors of all phase conditions, by condition."""
+        return self._templates
 
     def template(self, condition: str) -> Any:
         """Return the field vector of a phase condition, of root mean square 1."""
