@@ -166,7 +166,8 @@ def adjoint_form(law: Law) -> Form:
 def scalar_form(law: Law, name: str) -> Form:
     """Return the form of dR/d(scalar) for a length or any scalar of the expressions.
 
-    The period is not among them: it only scales the time differences.
+    The period is not among them: it only scales the time differences. With a length its nodes move:
+    a coordinate x changes at the rate x/length.
     """
     residual = residual_form(law)
     outputs = []
@@ -176,7 +177,7 @@ def scalar_form(law: Law, name: str) -> Form:
             length = sympy.Symbol(name, real=True)
             derived = differentiate(
                 o.expression,
-                lambda symbol: sympy.Integer(0),
+                lambda symbol, axis=axis, length=length: symbol / length * int(symbol == (X, Y)[axis]),
                 lambda atom, axis=axis, length=length: -atom.args[1 + axis] / length * atom,
             )
         else:
