@@ -70,9 +70,14 @@ def make_form(
     """Return a form whose expressions are sums with constant factors pulled out of every `Deriv`."""
     varying = {symbol for field in fields for symbol in field} | {X, Y}
     normal = tuple(
-        Output(normalise(o.expression, varying), o.evolving, o.differenced) for o in outputs
+        Output(normalise(_without_sech(o.expression), varying), o.evolving, o.differenced) for o in outputs
     )
     return Form(name, kind, fields, normal, scalars, law.dimensions)
+
+
+def _without_sech(expression: sympy.Expr) -> sympy.Expr:
+    """Write sech as 1/cosh: NumPy and Python's math module have no sech."""
+    return expression.replace(sympy.sech, lambda argument: 1 / sympy.cosh(argument))
 
 
 def normalise(expression: sympy.Expr, varying: set[sympy.Symbol]) -> sympy.Expr:
