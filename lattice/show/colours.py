@@ -24,9 +24,9 @@ if TYPE_CHECKING:
 
 Colours = npt.NDArray[np.float64]
 
-LIGHT, DARK = 0.97, 0.36
+LIGHT, DARK = 0.97, 0.40
 """Oklab lightness of the centre and of both ends."""
-CHROMA = 0.135
+CHROMA = 0.145
 """Largest chroma, reached at two thirds of the amplitude; more would leave the sRGB colours."""
 HUES = (258.0, 40.0)
 """Hue angles in degrees of the negative and the positive end."""
@@ -60,7 +60,7 @@ def diverging_colours(shades: int = 257) -> Colours:
     amplitude = np.linspace(-1.0, 1.0, shades)
     strength = np.abs(amplitude)
     hue = np.radians(np.where(amplitude < 0.0, HUES[0], HUES[1]))
-    chroma = CHROMA * np.sin(np.pi * np.minimum(0.75 * strength, 0.6))
+    chroma = CHROMA * np.sin(0.75 * np.pi * strength)
     lightness = LIGHT + (DARK - LIGHT) * strength
     return oklab_to_srgb(np.stack([lightness, chroma * np.cos(hue), chroma * np.sin(hue)], axis=-1))
 

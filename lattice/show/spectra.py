@@ -21,6 +21,8 @@ SAMPLE_VALUES = 2**27
 """Values read for one spectrum; larger fields are sampled in evenly spaced batches."""
 TOLERATED_ERROR = 0.1
 """Relative error of a first derivative up to which a mode counts as carried by the differences."""
+ROUNDING = 1e-28
+"""Fluctuating energy in units of the mean's below which it is rounding error: (1e-14)**2."""
 
 
 @dataclass(frozen=True)
@@ -51,8 +53,10 @@ class Spectrum:
     def last_third(self) -> float:
         """Share of the fluctuating energy in the last third of the wavenumbers; NaN for a constant."""
         total = float(self.energy[1:].sum())
+        if total <= ROUNDING * float(self.energy[0]):
+            return math.nan
         start = math.ceil(2 * (len(self.energy) - 1) / 3)
-        return float(self.energy[max(1, start) :].sum()) / total if total > 0.0 else math.nan
+        return float(self.energy[max(1, start) :].sum()) / total
 
 
 def spectrum(file: StateFile, component: str, axis: str) -> Spectrum:
