@@ -42,6 +42,8 @@ class StopFlag:
             signal.signal(number, handler if handler is not None else signal.SIG_DFL)
 
     def _remember(self, number: int, frame: FrameType | None) -> None:
+        if number == signal.SIGINT and self._seen:
+            raise KeyboardInterrupt  # asked twice: at once, without waiting for the next step
         self._seen = number
 
     def poll(self) -> bool:
