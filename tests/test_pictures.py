@@ -24,8 +24,6 @@ from lattice.show.pictures import (
     DOTS_PER_INCH,
     PictureOptions,
     draw,
-    parse_cut,
-    parse_size,
     picture_format,
     plot_state,
 )
@@ -324,18 +322,6 @@ def test_an_impossible_wish_is_refused(options: dict[str, Any], message: str, tm
         plot_state(path, tmp_path / "s.png", PictureOptions(**options))
     assert message in str(caught.value)
     assert not (tmp_path / "s.png").exists()
-
-
-@pytest.mark.parametrize("text", ["8", "8x", "axb", "2x9", "8x900", "nanx5"])
-def test_a_size_that_is_none_is_refused(text: str) -> None:
-    with pytest.raises(InputError, match="--size"):
-        parse_size(text)
-
-
-@pytest.mark.parametrize("text", ["t", "t=", "t=now", "=3=4"])
-def test_a_cut_that_is_none_is_refused(text: str) -> None:
-    with pytest.raises(InputError, match="--cut"):
-        parse_cut([text])
 
 
 @pytest.mark.parametrize(("form", "start"), [("png", b"\x89PNG"), ("pdf", b"%PDF-"), ("svg", b"<?xml")])

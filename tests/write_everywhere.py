@@ -61,7 +61,7 @@ def main(folder: Path) -> None:
     comm = MPI.COMM_WORLD
     # Small slabs, so that these small fields need many of them.
     writing.SLAB_BYTES = 40_000
-    ways = ["auto", "root"] + (["collective"] if comm.size > 1 and h5py.get_config().mpi else [])
+    ways = ["root"] + (["collective"] if comm.size > 1 and h5py.get_config().mpi else [])
     hashes, faults = {}, []
     for name, lattice in LATTICES.items():
         block = my_block(lattice, comm)

@@ -8,7 +8,7 @@ from __future__ import annotations
 
 import math
 import os
-from collections.abc import Mapping, Sequence
+from collections.abc import Mapping
 from dataclasses import dataclass, field
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -126,42 +126,6 @@ def picture_format(out: str | os.PathLike[str], wanted: str | None) -> str:
     if form not in FORMATS:
         raise InputError(f"must be one of {', '.join(FORMATS)}, got {form!r}", key="--format")
     return form
-
-
-def parse_cut(texts: Sequence[str]) -> dict[str, float]:
-    """Return the cuts of options such as `t=3.5`.
-
-    Examples
-    --------
-    >>> parse_cut(["t=3.5", "y=0"])
-    {'t': 3.5, 'y': 0.0}
-    """
-    cuts = {}
-    for text in texts:
-        axis, _, value = text.partition("=")
-        try:
-            cuts[axis.strip()] = float(value)
-        except ValueError:
-            raise InputError(f"must look like t=3.5, got {text!r}", key="--cut") from None
-    return cuts
-
-
-def parse_size(text: str) -> tuple[float, float]:
-    """Return width and height in inches of an option such as `8x6`.
-
-    Examples
-    --------
-    >>> parse_size("8x6.5")
-    (8.0, 6.5)
-    """
-    width, _, height = text.partition("x")
-    try:
-        size = (float(width), float(height))
-    except ValueError:
-        raise InputError(f"must look like 8x6, in inches, got {text!r}", key="--size") from None
-    if not all(4.0 <= inches <= 60.0 for inches in size):
-        raise InputError(f"must be between 4 and 60 inches each way, got {text!r}", key="--size")
-    return size
 
 
 def _components(meta: StateMeta, wanted: str | None) -> tuple[str, ...]:

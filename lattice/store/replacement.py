@@ -29,7 +29,6 @@ def reserve(partial: Path) -> None:
     descriptor = os.open(partial, os.O_RDWR)
     try:
         os.posix_fallocate(descriptor, 0, os.fstat(descriptor).st_size)
-        os.fsync(descriptor)
     finally:
         os.close(descriptor)
 

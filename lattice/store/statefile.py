@@ -43,6 +43,8 @@ if TYPE_CHECKING:
 Field = npt.NDArray[np.float64]
 SLAB_BYTES = 2**25
 """Bytes of a slab when a field is read level by level."""
+COLLECTIVE_FROM = 2**25
+"""Bytes of a field from which on parallel HDF5 may pay; below, opening and checking cost more (measured)."""
 
 
 @dataclass(frozen=True)
@@ -170,7 +172,7 @@ def write_state(
         The ranks that hold the field.
     way : str
         "collective" writes with parallel HDF5, "root" slab by slab through rank 0 in bounded
-        memory; "auto" takes the first where h5py has it and there are several ranks.
+        memory; "auto" takes the first for a large field on several ranks where h5py has it.
 
     Raises
     ------
@@ -186,7 +188,7 @@ def write_state(
     partial = comm.bcast(partial_path(target) if comm.rank == 0 else None)
     try:
         _on_root(comm, _create, partial, target, record)
-        fill = fill_collectively if _collective(way, comm) else fill_through_root
+        fill = fill_collectively if _collective(way, record, comm) else fill_through_root
         fill(partial, owned, block, record, comm)
         _on_root(comm, publish, partial, target)
     except LatticeError as error:
@@ -196,12 +198,13 @@ def write_state(
         raise LatticeError(f"{failure}: {error}{kept}") from error
 
 
-def _collective(way: str, comm: MPI.Intracomm) -> bool:
+def _collective(way: str, meta: StateMeta, comm: MPI.Intracomm) -> bool:
     import h5py
 
     if way != "auto":
         return way == "collective"
-    return comm.size > 1 and bool(comm.allreduce(int(h5py.get_config().mpi)) == comm.size)
+    small = 8 * meta.lattice.nodes * len(meta.components) < COLLECTIVE_FROM
+    return comm.size > 1 and not small and bool(comm.allreduce(int(h5py.get_config().mpi)) == comm.size)
 
 
 def _create(partial: Path, target: Path, meta: StateMeta) -> None:
