@@ -107,6 +107,9 @@ COSTLY = {
     "expansion at top": "u_t + (u_x + v_x + u + v + 1)**30*(u + v_xx)**2 = 0",
     "expansion of expansion": "u_t + ((((u + 1)**5 + v)**5 + u)**5)_x = 0",
     "sums of products": "u_t + (" + "*".join(["(u + v + 1)"] * 30) + ")_x = 0",
+    "whole power by logarithm": "u_t + u*exp(1e9*log(9)) = 0",
+    "whole power by logarithm, later": "u_t + lap(exp((u**8 + 1e9)*log(9))) = 0",
+    "periods of a long argument": "u_t + cosh((((1 + (v + v_xx)**16)*(sech(y)*(pi + u_x)))_xx)) = 0",
     "only blanks": " " * 3999,
     "blanks": " " * 1_000_000,
 }

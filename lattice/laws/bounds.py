@@ -12,13 +12,17 @@ from collections.abc import Callable
 import sympy
 
 from lattice.errors import FormulaError
-from lattice.laws.calculus import Fields
+from lattice.laws.calculus import Fields, count_terms
 from lattice.laws.law import Deriv, X, Y
 from lattice.laws.names import FUNCTIONS
 
 POWER_AT_MOST = 32
 BITS_AT_MOST = 2000
 NUMBER_AT_MOST = 1e100
+# SymPy looks for periods and signs in the argument of a function, at a cost that grows fast with its size.
+ARGUMENT_TERMS_AT_MOST = 12
+ARGUMENT_PARTS_AT_MOST = 100
+UNCERTAIN_PARTS_AT_MOST = 20
 
 _FUNCTIONS: dict[str, Callable[..., sympy.Expr]] = {name: getattr(sympy, name) for name in FUNCTIONS}
 _NUMERIC: dict[type, Callable[[float], float]] = {
@@ -31,6 +35,7 @@ _NUMERIC: dict[type, Callable[[float], float]] = {
     sympy.sinh: math.sinh,
     sympy.cosh: math.cosh,
 }
+_HYPERBOLIC = ("tanh", "sech", "sinh", "cosh")
 _SMOOTH = (*_NUMERIC, Deriv)
 
 
@@ -74,9 +79,25 @@ def apply(name: str, argument: sympy.Expr) -> sympy.Expr:
 
     SymPy may compare numbers while it simplifies, to as many digits as that takes: numbers are sized first.
     """
+    _check_argument(name, argument)
     if not argument.free_symbols:
         as_float(argument)
     return smooth(_FUNCTIONS[name](argument))
+
+
+def _check_argument(name: str, argument: sympy.Expr) -> None:
+    parts = sum(1 for _ in sympy.preorder_traversal(argument))
+    if parts > ARGUMENT_PARTS_AT_MOST or count_terms(argument) > ARGUMENT_TERMS_AT_MOST:
+        raise FormulaError(
+            f"the argument of a function must multiply out into at most {ARGUMENT_TERMS_AT_MOST} terms; "
+            f"simplify what {name} is taken of"
+        )
+    if name in _HYPERBOLIC and parts > UNCERTAIN_PARTS_AT_MOST and not argument.is_real:
+        # SymPy then takes the argument apart into real and imaginary parts, at any cost.
+        raise FormulaError(f"{name} must be taken of a short or certainly real argument; simplify it")
+    if name == "exp" and argument.has(sympy.log):
+        # SymPy turns exp(10**9*log(9)) into the whole number 9**(10**9), now or when it multiplies out later.
+        raise FormulaError("exp( ) must not be taken of log( ); write a power")
 
 
 def smooth(value: sympy.Expr) -> sympy.Expr:

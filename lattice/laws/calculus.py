@@ -14,8 +14,8 @@ import sympy
 from lattice.errors import FormulaError
 from lattice.laws.law import Deriv, X, Y
 
-# Room for every published law by a wide margin, yet expanded in a fraction of a second.
-TERMS_AT_MOST = 400
+# Room for every published law by a wide margin, yet worked on in seconds at most.
+TERMS_AT_MOST = 200
 
 Fields = Set[sympy.Symbol]
 

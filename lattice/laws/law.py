@@ -24,6 +24,10 @@ class Deriv(sympy.Function):  # type: ignore[misc]
 
     nargs = 3
 
+    def _eval_is_real(self) -> bool:
+        """Tell SymPy that it is real, as components are; else it takes functions of it apart."""
+        return True
+
 
 @dataclass(frozen=True)
 class Equation:
