@@ -68,7 +68,7 @@ def diverging_colours(shades: int = 257) -> Colours:
 def oklab_to_srgb(lab: Colours) -> Colours:
     """Convert Oklab colours, last axis (lightness, a, b), to sRGB in 0..1."""
     linear = (lab @ _FROM_LAB.T) ** 3 @ _TO_LINEAR.T
-    clipped = np.clip(linear, 0.0, 1.0)
+    bounded = np.clip(linear, 0.0, 1.0)
     # [2]: linear below 0.0031308, a power law above.
-    srgb: Colours = np.where(clipped <= 0.0031308, 12.92 * clipped, 1.055 * clipped ** (1 / 2.4) - 0.055)
+    srgb: Colours = np.where(bounded <= 0.0031308, 12.92 * bounded, 1.055 * bounded ** (1 / 2.4) - 0.055)
     return srgb
