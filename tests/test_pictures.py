@@ -350,6 +350,7 @@ def test_a_description_fits_the_terminal_and_cautions(kind: str, tmp_path: Path)
     text = describe_state(stored(tmp_path / "s.h5", kind, versions={"a library": "1.2.3 " * 40}))
     # The path on the first line may be of any length.
     assert max(len(line) for line in text.splitlines()[1:]) <= 100
+    assert "steps         1 nonlinear" in text, "step 0 is the start"
     assert "no certificate" in text and "design decision" in text
     assert "* drift_x" in text and "  nu " in text
     assert ("* period" in text) == (KINDS[kind][0].nt > 1)

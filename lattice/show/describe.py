@@ -103,7 +103,8 @@ def _outcome(meta: StateMeta) -> list[str]:
     lines = _row("outcome", meta.outcome or "unknown") + _row("residual", residual_text(meta))
     mean = "not computed" if not math.isfinite(meta.mean_square) else _number(meta.mean_square)
     lines += _row("mean square", mean)
-    return lines + _row("steps", f"{len(meta.history)} nonlinear")
+    steps = sum(entry.get("step", 0) > 0 for entry in meta.history)
+    return lines + _row("steps", f"{steps} nonlinear" if steps else "none")
 
 
 def _origin(meta: StateMeta) -> list[str]:
