@@ -102,8 +102,13 @@ def field_symbols(law: Law, field: str) -> tuple[sympy.Symbol, ...]:
 
 def scalar_names(law: Law) -> tuple[str, ...]:
     """Return every scalar that may stand in the law's expressions, in a fixed order."""
+    return (*(p.name for p in law.parameters), *frame_names(law), *(f"source_{c}" for c in sourced(law)))
+
+
+def frame_names(law: Law) -> tuple[str, ...]:
+    """Return the scalars of the frame in which a state repeats; all are 0 at rest."""
     drifts = [f"drift_{axis}" for axis in "xy"[: law.dimensions] if law.symmetries.homogeneous[axis]]
-    return (*(p.name for p in law.parameters), *drifts, *(f"source_{c}" for c in sourced(law)))
+    return (*drifts, *(("rotation",) if law.rotating_pair else ()))
 
 
 def sourced(law: Law) -> tuple[str, ...]:
@@ -113,7 +118,10 @@ def sourced(law: Law) -> tuple[str, ...]:
 
 
 def residual_form(law: Law) -> Form:
-    """Return the form of R = D u + M (G(u) - drift . grad u - source), constraints at the nodes."""
+    """Return the form of R = D u + M (G(u) + frame - source), constraints at the nodes.
+
+    The frame's terms are `-drift . grad u` and, for the rotating pair (a, b), `rotation * (-b, a)`.
+    """
     state = field_symbols(law, "u")
     outputs = []
     for equation, symbol in zip(law.equations, state, strict=True):
@@ -127,8 +135,16 @@ def residual_form(law: Law) -> Form:
 
 
 def _frame(law: Law, symbol: sympy.Symbol) -> sympy.Expr:
-    """Return the terms -cx u_x - cy u_y of a frame that moves with the drift."""
+    """Return the terms of a component in the frame that moves with the drift and turns with the rotation.
+
+    In the frame of the laboratory the state is `R(rotation*t) u(t, x - drift*t)`, where R turns (a, b)
+    from a towards b.
+    """
     total = sympy.Integer(0)
+    if law.rotating_pair:
+        first, second = (sympy.Symbol(name, real=True) for name in law.rotating_pair)
+        generator = {first: -second, second: first}.get(symbol, sympy.Integer(0))
+        total += sympy.Symbol("rotation", real=True) * generator
     for axis, orders in (("x", (1, 0)), ("y", (0, 1)))[: law.dimensions]:
         if law.symmetries.homogeneous[axis]:
             total -= sympy.Symbol(f"drift_{axis}", real=True) * Deriv(symbol, *orders)

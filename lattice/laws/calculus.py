@@ -6,7 +6,7 @@ sits directly inside another one; sums are taken apart.
 
 from __future__ import annotations
 
-from collections.abc import Set
+from collections.abc import Mapping, Set
 from math import comb
 
 import sympy
@@ -135,19 +135,36 @@ def vary(expression: sympy.Expr, field: sympy.Symbol, fields: Fields) -> sympy.E
     >>> vary(Deriv(u**2, 1, 0) / 2 + u**3, u, {u})
     3*u**2 + Deriv(u, 1, 0)
     """
-    terms = (t for t in sympy.Add.make_args(expression) if field in t.free_symbols)
-    return sympy.Add(*(_vary_term(term, field, fields) for term in terms))
+    return vary_along(expression, {field: sympy.Integer(1)}, fields)
 
 
-def _vary_term(term: sympy.Expr, field: sympy.Symbol, fields: Fields) -> sympy.Expr:
+def vary_along(
+    expression: sympy.Expr, changes: Mapping[sympy.Symbol, sympy.Expr], fields: Fields
+) -> sympy.Expr:
+    """Return the rate at which `expression` changes when the components change at the rates `changes`.
+
+    Examples
+    --------
+    >>> from lattice.laws.law import symbol
+    >>> u, v = symbol("u"), symbol("v")
+    >>> vary_along(Deriv(u, 1, 0) * v, {u: -v, v: u}, {u, v})
+    u*Deriv(u, 1, 0) - v*Deriv(v, 1, 0)
+    """
+    terms = (t for t in sympy.Add.make_args(expression) if t.free_symbols & changes.keys())
+    return sympy.Add(*(_vary_term(term, changes, fields) for term in terms))
+
+
+def _vary_term(
+    term: sympy.Expr, changes: Mapping[sympy.Symbol, sympy.Expr], fields: Fields
+) -> sympy.Expr:
     if isinstance(term, Deriv):
         inner, a, b = term.args
-        return differentiate(vary(inner, field, fields), int(a), int(b), fields)
+        return differentiate(vary_along(inner, changes, fields), int(a), int(b), fields)
     stand_ins = {part: sympy.Dummy(real=True) for part in _outermost_derivatives(term)}
     plain = term.xreplace(stand_ins)
     back = {dummy: part for part, dummy in stand_ins.items()}
-    changes = [(field, sympy.Integer(1)), *((d, vary(part, field, fields)) for part, d in stand_ins.items())]
-    total = sympy.Add(*(sympy.diff(plain, by) * change for by, change in changes if change != 0))
+    rates = {**changes, **{dummy: vary_along(part, changes, fields) for part, dummy in stand_ins.items()}}
+    total = sympy.Add(*(sympy.diff(plain, by) * rate for by, rate in rates.items() if rate != 0))
     return total.xreplace(back)
 
 

@@ -114,7 +114,7 @@ def symmetry_lines(law: Law) -> list[str]:
     from lattice.laws.symmetry import symmetries_at
 
     found = law.symmetries
-    lines = list(_continuous(found))
+    lines = [*_continuous(found), *_turning(law)]
     lines += [f"unchanged by {_in_words(r, law.components)}" for r in found.reflections]
     special = symmetries_at(law, law.defaults)
     zeros = " and ".join(f"{p.name} = 0" for p in law.parameters if p.default == 0.0)
@@ -137,6 +137,12 @@ def _continuous(found: Symmetries) -> Iterator[str]:
         yield f"a constant may be added to {name} at each time"
     if found.galilean:
         yield "a constant added to a field only makes the state drift along x (Galilean invariance)"
+
+
+def _turning(law: Law) -> Iterator[str]:
+    for pair in law.symmetries.rotations:
+        may = ": a state may turn, and rotation may be free" if pair == law.rotating_pair else ""
+        yield f"({', '.join(pair)}) may be turned by any angle{may}"
 
 
 def _in_words(reflection: Reflection, components: Sequence[str]) -> str:

@@ -85,6 +85,9 @@ class Symmetries:
         time a constant may be added to them.
     reflections : tuple of Reflection
         Every combination (other than the identity) that leaves the equations unchanged.
+    rotations : tuple of tuple of (str, str)
+        Pairs (a, b) of evolving components such that turning all of (a, b) by one angle only turns their
+        equations: the real and imaginary parts of an amplitude whose phase is free.
     galilean : bool
         True where adding a constant V to one component is undone by a frame that moves in x with a
         velocity proportional to V.
@@ -95,6 +98,7 @@ class Symmetries:
     shiftable: tuple[str, ...]
     gauge: tuple[str, ...]
     reflections: tuple[Reflection, ...]
+    rotations: tuple[tuple[str, str], ...] = ()
     galilean: bool = False
 
 
@@ -141,3 +145,13 @@ class Law:
     def evolving(self) -> tuple[bool, ...]:
         """For every component whether its equation has a time derivative."""
         return tuple(e.evolving for e in self.equations)
+
+    @property
+    def rotating_pair(self) -> tuple[str, str] | None:
+        """The pair (a, b) of a frame that turns, the first there is; None where no state can turn.
+
+        Where a constant may be added to a component, the centre of the rotation is arbitrary: such pairs
+        are left out. Later pairs keep their angle.
+        """
+        fixed = (p for p in self.symmetries.rotations if not {*p} & {*self.symmetries.shiftable})
+        return next(fixed, None)

@@ -12,7 +12,7 @@ from lattice.errors import InputError
 
 FUNCTIONS = ("sin", "cos", "exp", "log", "sqrt", "tanh", "sech", "sinh", "cosh")
 COORDINATES = ("x", "y")
-SCALARS = ("period", "length_x", "length_y", "drift_x", "drift_y")
+SCALARS = ("period", "length_x", "length_y", "drift_x", "drift_y", "rotation")
 RESERVED = (*FUNCTIONS, *COORDINATES, *SCALARS, "lap", "pi", "t")
 
 COMPONENTS_AT_MOST = 8

@@ -10,12 +10,12 @@ from __future__ import annotations
 
 from collections.abc import Iterator, Mapping, Sequence
 from functools import reduce
-from itertools import product
+from itertools import combinations, product
 from operator import xor
 
 import sympy
 
-from lattice.laws.calculus import Fields, multiply_out, rebuild, vary
+from lattice.laws.calculus import Fields, TooManyTerms, multiply_out, rebuild, vary, vary_along
 from lattice.laws.law import Deriv, Equation, Law, Reflection, Symmetries, X, Y, symbol
 
 
@@ -43,6 +43,7 @@ def find_symmetries(
         shiftable=tuple(e.component for e in equations if e.evolving and e.component in invariant),
         gauge=tuple(e.component for e in equations if not e.evolving and e.component in invariant),
         reflections=tuple(_reflections(equations, dimensions)),
+        rotations=tuple(_rotations(equations, fields)),
         galilean=any(
             _galilean(equations, e.component, changes[e.component]) for e in equations if e.evolving
         ),
@@ -82,6 +83,32 @@ def _galilean(equations: Sequence[Equation], name: str, changes: Mapping[str, sy
         return False
     gains = {e.component: rate * Deriv(symbol(e.component), 1, 0) if e.evolving else 0 for e in equations}
     return all(multiply_out(changes[component] - gain) == 0 for component, gain in gains.items())
+
+
+# -- rotations ----------------------------------------------------------------------------------------
+
+
+def _rotations(equations: Sequence[Equation], fields: Fields) -> Iterator[tuple[str, str]]:
+    """Yield the pairs of evolving components that may be turned, on the lattice as in the continuum.
+
+    A law whose terms would multiply out into too many is taken to have none.
+    """
+    for first, second in combinations((e for e in equations if e.evolving), 2):
+        try:
+            if _turns(equations, first, second, fields):
+                yield first.component, second.component
+        except TooManyTerms:
+            continue
+
+
+def _turns(equations: Sequence[Equation], first: Equation, second: Equation, fields: Fields) -> bool:
+    """Tell whether the rates a -> -b, b -> a only turn the equations of the two, likewise."""
+    a, b = symbol(first.component), symbol(second.component)
+    wanted = {first.component: -second.expression, second.component: first.expression}
+    return all(
+        multiply_out(vary_along(e.expression, {a: -b, b: a}, fields) - wanted.get(e.component, 0)) == 0
+        for e in equations
+    )
 
 
 # -- conserved mean -----------------------------------------------------------------------------------

@@ -16,9 +16,11 @@ from numpy.typing import NDArray
 
 from lattice.errors import LatticeError
 from lattice.geometry.lattice import Lattice
+from lattice.kernels.forms import frame_names
 from lattice.laws.law import Law
 from lattice.system.operator import FieldOperator
-from lattice.system.unknowns import Values, pair_unknowns
+from lattice.system.phases import check_independence, flat_start
+from lattice.system.unknowns import FRAME, Values, pair_unknowns
 
 if TYPE_CHECKING:
     from mpi4py import MPI
@@ -36,7 +38,7 @@ class System:
     law : Law
     lattice : Lattice
     values : mapping of str to float
-        Every scalar by name; the free ones at their first guess.
+        Every scalar by name; the free ones at their first guess. Drifts and rotation are 0 where absent.
     free : sequence of str
         Names of the free scalars; sources of open means are added.
     means : mapping of str to float
@@ -54,8 +56,8 @@ class System:
         comm: MPI.Comm,
     ) -> None:
         self.law, self.lattice, self.comm = law, lattice, comm
-        self.values: Values = dict(values)
-        self.unknowns = pair_unknowns(law, lattice, free, values)
+        self.values: Values = {**dict.fromkeys(frame_names(law), 0.0), **values}
+        self.unknowns = pair_unknowns(law, lattice, free, self.values)
         self.means = dict(means)
         self.operator = FieldOperator(law, lattice, comm)
         self.blocks = self.operator.blocks
@@ -145,7 +147,8 @@ class System:
         Raises
         ------
         LatticeError
-            If the field at `x` does not vary along an axis whose phase is a condition.
+            If the field at `x` does not vary along a phase that is a condition, or if two of them change it
+            in the same way.
         """
         field = self._load_field(x)
         self.operator.linearise(field, self.values_of(x))
@@ -153,16 +156,20 @@ class System:
             if unknown.condition.startswith("phase") and unknown.condition not in self._templates:
                 self._templates[unknown.condition] = self.blocks.vector()
         for condition, template in self._templates.items():
-            axis = condition.removeprefix("phase_")
-            if axis == "t":
+            if condition == "phase_t":
                 self.operator.rate(template)
             else:
-                self.operator.by_scalar(f"drift_{axis}", template)
+                self.operator.by_scalar(FRAME[condition], template)
             size = template.norm() / self.root_size
             if not size > 1e-12:
-                raise LatticeError(_flat_start(axis, [u.name for u in self.unknowns if u.condition == condition]))
+                raise LatticeError(flat_start(condition, self._named(condition)))
             template.scale(1.0 / size)
+        check_independence({c: (self._named(c), t) for c, t in self._templates.items()}, self.comm)
         self._offsets = self._phase_products(field)
+
+    def _named(self, condition: str) -> str:
+        """Return the unknown that a condition fixes."""
+        return next(u.name for u in self.unknowns if u.condition == condition)
 
     def linearise(self, x: Any) -> None:
         """Fix the point of the Jacobian and compute its border columns."""
@@ -235,17 +242,3 @@ class System:
         for vector in (*self.columns, *self._templates.values(), self._field_in, self._field_out):
             vector.destroy()
         self.operator.destroy()
-
-
-def _flat_start(axis: str, names: list[str]) -> str:
-    """Return the message for a field that does not vary along an axis whose phase is needed."""
-    free = " and ".join(names)
-    if axis == "t":
-        return (
-            f"the field does not change in time, so {free} cannot be solved for: it is a steady state in this "
-            "frame; set lattice.nt = 1, or start from a field that changes in time"
-        )
-    return (
-        f"the field does not vary along {axis}, so {free} cannot be solved for; remove it from solve.free, or "
-        f"start from a field that varies along {axis}"
-    )

@@ -1,11 +1,13 @@
 """The unknown scalars of a problem and the condition that fixes each.
 
-Where a state lies in time and along a homogeneous axis is arbitrary; a phase condition fixes it and
-leaves room for one free scalar. A mean that the law leaves open is given and leaves room for a source.
+Where a state lies in time and along a homogeneous axis is arbitrary, and so is the angle of a pair of
+components that may be turned; a phase condition fixes each and leaves room for one free scalar. A mean
+that the law leaves open is given and leaves room for a source.
 """
 
 from __future__ import annotations
 
+import math
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 
@@ -15,6 +17,9 @@ from lattice.kernels.forms import sourced
 from lattice.laws.law import Law
 
 Values = dict[str, float]
+
+FRAME = {"phase_x": "drift_x", "phase_y": "drift_y", "phase_rotation": "rotation"}
+"""The scalar of the frame that moves a state along each phase but that in time."""
 
 
 @dataclass(frozen=True)
@@ -26,7 +31,7 @@ class Unknown:
     name : str
         The scalar.
     condition : str
-        "phase_t", "phase_x", "phase_y" or "mean_<component>".
+        "phase_t", "phase_x", "phase_y", "phase_rotation" or "mean_<component>".
     unit : float
         Size of a relative change of one: the scalar's unknown is `sqrt(N) * scalar / unit`, so that a
         relative change costs as much as the same change at each of the N unknowns of the field.
@@ -49,7 +54,8 @@ def pair_unknowns(
     """
     phases = ["phase_t"] if lattice.nt > 1 else []
     phases += [f"phase_{axis}" for axis in "xy"[: law.dimensions] if law.symmetries.homogeneous[axis]]
-    own = {"period": "phase_t", "drift_x": "phase_x", "drift_y": "phase_y"}
+    phases += ["phase_rotation"] if law.rotating_pair else []
+    own = {"period": "phase_t", **{name: phase for phase, name in FRAME.items()}}
     asked = [name for name in free if not name.startswith("source_")]
     paired = {name: own[name] for name in asked if own.get(name) in phases}
     left = [phase for phase in phases if phase not in paired.values()]
@@ -57,7 +63,8 @@ def pair_unknowns(
         if name not in paired:
             if not left:
                 raise InputError(
-                    f"at most {len(phases)} scalars besides sources can be free here, got {len(asked)}; hold one",
+                    f"at most {len(phases)} scalars besides sources can be free here, got {len(asked)}; "
+                    "hold one",
                     key="solve.free",
                 )
             paired[name] = left.pop(0)
@@ -69,7 +76,8 @@ def pair_unknowns(
 def _unit(name: str, values: Mapping[str, float]) -> float:
     """Return the size a relative change of a scalar refers to."""
     value = abs(values[name])
-    if name.startswith("drift_"):
-        axis = name.removeprefix("drift_")
-        return max(value, values[f"length_{axis}"] / values["period"] if values["period"] != 1.0 else 1.0)
+    if name in FRAME.values():
+        _, _, axis = name.partition("_")
+        whole = values[f"length_{axis}"] if axis else 2.0 * math.pi
+        return max(value, whole / values["period"] if values["period"] != 1.0 else 1.0)
     return value if value > 0 else 1.0
