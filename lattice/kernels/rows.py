@@ -14,7 +14,7 @@ Point = tuple[int, int, int]
 def row_points(form: Form, scheme: Scheme) -> tuple[tuple[Point, ...], ...]:
     """Return for every output the (dy, dx, component) its expressions couple to, in order.
 
-    An evolving output couples to them on each of the scheme's levels, and its own node is among them.
+    An evolving output couples to them on each of the scheme's levels. The diagonal is always among them.
     """
     return tuple(tuple(texts) for texts in _Coefficients(form, scheme).points)
 
@@ -26,10 +26,8 @@ class _Coefficients:
         self.emitter = Emitter(form, scheme)
         self.direction = {symbol: c for c, symbol in enumerate(form.fields[1])}
         self.points: list[dict[Point, list[str]]] = []
-        for output in form.outputs:
-            found: dict[Point, list[str]] = {}
-            if output.evolving and output.differenced is not None:
-                found[0, 0, self.direction[output.differenced]] = []
+        for c, output in enumerate(form.outputs):
+            found: dict[Point, list[str]] = {(0, 0, c): []}  # a time difference or a pin may be added to it
             self._collect(output.expression, 0, 0, [], found)
             self.points.append(dict(sorted(found.items())))
 
