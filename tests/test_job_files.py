@@ -26,7 +26,7 @@ from lattice.job.schema import START_MODELS, Job
 from lattice.job.unknowns import scalar_names
 from lattice.job.writer import job_to_toml
 from lattice.laws.law import Parameter
-from lattice.solve.registry import _PLACES
+from lattice.solve.registry import NAMES
 from lattice.starts import STARTS
 
 ROOT = Path(__file__).resolve().parents[1]
@@ -286,7 +286,7 @@ def test_what_is_free_by_default_suits_the_law(tmp_path: Path) -> None:
         "film": ("period", "drift_x"),
         "film-2d": ("period", "drift_x", "drift_y"),
         "shear": ("period", "drift_x"),
-        "waves": ("period", "drift_x"),
+        "waves": ("period", "drift_x", "rotation"),
         "own": ("period",),
     }
 
@@ -445,7 +445,7 @@ def test_a_rank_count_that_does_not_divide_is_told_the_next_that_fits(tmp_path: 
 
 def test_every_start_and_preconditioner_is_named_once_everywhere() -> None:
     assert set(START_KINDS) == set(START_MODELS) == set(STARTS)
-    assert set(PRECONDITIONERS) == set(_PLACES)
+    assert set(PRECONDITIONERS) == set(NAMES)
 
 
 def test_the_reference_lists_every_key_with_a_meaning() -> None:

@@ -19,7 +19,7 @@ from lattice.geometry.block import Block
 from lattice.geometry.lattice import Lattice
 from lattice.laws.catalogue import load_law, read_law
 from lattice.starts import STARTS
-from lattice.starts.drift import drift_of_slice, drift_that_aligns
+from lattice.starts.frame import frame_of_slice, frame_that_aligns
 from lattice.starts.interpolation import Interpolator, interpolation_matrix
 from lattice.starts.march import blend_weight, samples_in
 from lattice.starts.options import ArrayOptions, MarchOptions, StateOptions, WaveOptions, WavesOptions
@@ -161,9 +161,9 @@ def test_window_of_a_drifting_wave_is_steady_in_its_frame():
     stepper = Stepper(law, (1, nx), (1.0, length), {}, 0.005)
     first = stepper.to_spectrum(wave[None, :, None])
     last = stepper.advance(first, time)
-    aligned = drift_that_aligns(stepper.modes, first, last, time, ("x",))
+    aligned = frame_that_aligns(stepper.modes, first, last, time, ("x",))
     assert aligned["drift_x"] == pytest.approx(speed, abs=1e-6)
-    moving = drift_of_slice(stepper.modes, first, stepper.operator.rate(first), ("x",))
+    moving = frame_of_slice(stepper.modes, first, stepper.operator.rate(first), {}, ("drift_x",))
     assert moving["drift_x"] == pytest.approx(speed, abs=1e-9)
 
 
@@ -189,11 +189,11 @@ def test_drift_is_found_along_both_axes():
     slope = np.cos(TURN * x) + np.sin(TURN * (2 * x - y)) + 0.5 * np.cos(TURN * 2 * y)
     first = stepper.to_spectrum(slope[..., None])
     last = stepper.advance(first, 2.0)
-    aligned = drift_that_aligns(stepper.modes, first, last, 2.0, ("x", "y"))
+    aligned = frame_that_aligns(stepper.modes, first, last, 2.0, ("x", "y"))
     assert aligned == pytest.approx({"drift_x": 0.3, "drift_y": -0.7}, abs=1e-12)
-    only = drift_that_aligns(stepper.modes, first, stepper.modes.shift(last, 0.0, -1.4), 2.0, ("x",))
+    only = frame_that_aligns(stepper.modes, first, stepper.modes.shift(last, 0.0, -1.4), 2.0, ("x",))
     assert only == pytest.approx({"drift_x": 0.3}, abs=1e-12)
-    moving = drift_of_slice(stepper.modes, first, stepper.operator.rate(first), ("x", "y"))
+    moving = frame_of_slice(stepper.modes, first, stepper.operator.rate(first), {}, ("drift_x", "drift_y"))
     assert moving == pytest.approx({"drift_x": 0.3, "drift_y": -0.7}, abs=1e-12)
 
 

@@ -92,6 +92,11 @@ def _judge_box(job: Job, law: Law, findings: Findings) -> None:
                 f"must be 0: the law depends on {axis}, so no state can drift along {axis}, got {drift};"
                 " remove it",
             )
+    if box.rotation and law.rotating_pair is None:
+        findings.refuse(
+            "box.rotation",
+            f"must be 0: the law has no pair of components that may be turned, got {box.rotation}; remove it",
+        )
 
 
 def judge_forcing(job: Job, law: Law, findings: Findings) -> None:
@@ -221,6 +226,11 @@ def _judge_march(start: MarchStart, job: Job, law: Law, findings: Findings) -> N
                 f"must name axes along which the law is the same everywhere"
                 f" ({listed(homogeneous_axes(law))}), got '{axis}'; remove it",
             )
+    if start.match_rotation and law.rotating_pair is None:
+        findings.refuse(
+            "start.match_rotation",
+            "must be false: the law has no pair of components that may be turned; remove it",
+        )
     if start.dt is not None and job.box.period is not None and start.dt > job.box.period:
         findings.refuse(
             "start.dt", f"must be <= box.period = {job.box.period}, got {start.dt}; shorten the time step"

@@ -70,6 +70,7 @@ def _judge_stored(job: Job, law: Law, meta: StateMeta, findings: Findings) -> No
 
 def _box_from(job: Job, law: Law, meta: StateMeta) -> Any:
     names = [f"{kind}_{axis}" for axis in axes(law) for kind in ("length", "drift")]
+    names += ["rotation"] if law.rotating_pair else []
     if job.lattice.nt > 1:
         names.append("period")
     missing = {n: meta.values[n] for n in names if getattr(job.box, n) is None and n in meta.values}
@@ -86,17 +87,22 @@ def _law_from(job: Job, law: Law, meta: StateMeta) -> Any:
 def fill_in(job: Job, law: Law, file: Path) -> Job:
     """Return the job with every remaining default written out."""
     means = dict.fromkeys(open_means(law), 0.0) | job.solve.mean
-    free = job.solve.free if job.solve.free is not None else default_free(law, job.lattice.nt)
+    free = job.solve.free if job.solve.free is not None else default_free(law, job.lattice.nt, means)
     named = tuple(name for name in free if not name.startswith("source_"))
     return changed(
         job,
         law=_law_filled(job, law),
-        box=changed(job.box, **{f"drift_{a}": getattr(job.box, f"drift_{a}") or 0.0 for a in axes(law)}),
+        box=_box_filled(job, law),
         lattice=_lattice_filled(job, law),
         solve=changed(job.solve, free=named, mean=means),
         start=_start_filled(job, law, means, free),
         output=changed(job.output, folder=job.output.folder or f"runs/{file.stem}"),
     )
+
+
+def _box_filled(job: Job, law: Law) -> Any:
+    names = [f"drift_{axis}" for axis in axes(law)] + (["rotation"] if law.rotating_pair else [])
+    return changed(job.box, **{name: getattr(job.box, name) or 0.0 for name in names})
 
 
 def _law_filled(job: Job, law: Law) -> Any:
@@ -121,5 +127,7 @@ def _start_filled(job: Job, law: Law, means: dict[str, float], free: tuple[str, 
         return changed(filled, modes=modes)
     if filled.match_drift is None:
         guessed = (axis for axis in axes(law) if getattr(job.box, f"drift_{axis}") is None)
-        return changed(filled, match_drift=tuple(axis for axis in guessed if f"drift_{axis}" in free))
+        filled = changed(filled, match_drift=tuple(axis for axis in guessed if f"drift_{axis}" in free))
+    if filled.match_rotation is None:
+        filled = changed(filled, match_rotation="rotation" in free and job.box.rotation is None)
     return filled

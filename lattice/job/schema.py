@@ -88,7 +88,7 @@ class LawSection(Section):
 
 
 class BoxSection(Section):
-    """The periodic box and the velocity of the frame in which the state repeats."""
+    """The periodic box and the motion of the frame in which the state repeats."""
 
     period: Positive | None = _key(
         "period in time; first guess where it is free; absent for `lattice.nt = 1`",
@@ -103,6 +103,12 @@ class BoxSection(Section):
         "velocity in x of the frame in which the state repeats", None, shown="0, or a stored start's"
     )
     drift_y: float | None = _key("the same in y", None, shown="0, or a stored start's")
+    rotation: float | None = _key(
+        "radians per unit of time by which this frame turns, for a law with a pair of components that may be"
+        " turned: from the first towards the second",
+        None,
+        shown="0, or a stored start's",
+    )
 
 
 class LatticeSection(Section):
@@ -130,9 +136,10 @@ class SolveSection(Section):
 
     free: tuple[Name, ...] | None = _key(
         "scalars to solve for: `period`, `length_x`, `length_y`, `drift_x`, `drift_y`,"
-        " `source_<component>` or a parameter of the law",
+        " `rotation`, `source_<component>` or a parameter of the law",
         None,
-        shown="`period` where `nt > 1`, and the drift along every axis the law does not single out",
+        shown="`period` where `nt > 1`, the drift along every axis the law does not single out, and"
+        " `rotation` where components may be turned",
     )
     mean: dict[str, float] = _key(
         "given mean of a component whose mean the law leaves open", {}, shown="0 for each"
@@ -172,6 +179,11 @@ class MarchStart(Section):
         "axes along which the drift is chosen so that the window's end fits its start",
         None,
         shown="axes whose drift is free and not given in [box]",
+    )
+    match_rotation: bool | None = _key(
+        "choose the rotation, too, so that the window's end fits its start",
+        None,
+        shown="true where the rotation is free and not given in [box]",
     )
     shape: tuple[Count, ...] | None = _key(
         "nodes of the marcher, `[nx]` or `[ny, nx]`",

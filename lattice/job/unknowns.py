@@ -1,7 +1,8 @@
 """Which scalars of a job are free, and whether the set can be solved for.
 
-Where a state sits in time and along a homogeneous axis is arbitrary: each such freedom gives one
-condition (a phase), and each phase fixes one free scalar. A mean that the law leaves open is given by
+Where a state sits in time and along a homogeneous axis is arbitrary, and so is the angle of a pair of
+components that may be turned: each such freedom gives one condition (a phase), and each phase fixes one
+free scalar. A mean that the law leaves open is given by
 the job and fixes a uniform source, which is always free and need not be named.
 """
 
@@ -12,6 +13,8 @@ from typing import TYPE_CHECKING
 from lattice.job.problems import Findings, did_you_mean, listed
 
 if TYPE_CHECKING:
+    from collections.abc import Mapping
+
     from lattice.job.schema import Job
     from lattice.laws.law import Law
 
@@ -38,15 +41,32 @@ def scalar_names(law: Law) -> list[str]:
         "period",
         *(f"length_{axis}" for axis in axes(law)),
         *(f"drift_{axis}" for axis in axes(law)),
+        *(["rotation"] if law.rotating_pair else []),
         *(f"source_{component}" for component in open_means(law)),
         *law.defaults,
     ]
 
 
-def default_free(law: Law, nt: int) -> tuple[str, ...]:
-    """Return what is free where the job does not say."""
-    drifts = tuple(f"drift_{axis}" for axis in homogeneous_axes(law))
-    return ("period", *drifts) if nt > 1 else drifts
+def frame_scalars(law: Law) -> list[str]:
+    """Return the scalars of the frame in which a state repeats and that the law lets be free."""
+    drifts = [f"drift_{axis}" for axis in homogeneous_axes(law)]
+    return [*drifts, "rotation"] if law.rotating_pair else drifts
+
+
+def is_frame_scalar(name: str) -> bool:
+    """Tell whether a scalar moves or turns the frame."""
+    return name.startswith("drift_") or name == "rotation"
+
+
+def default_free(law: Law, nt: int, means: Mapping[str, float]) -> tuple[str, ...]:
+    """Return what is free where the job does not say, for given means."""
+    frame = [name for name in frame_scalars(law) if name != "rotation" or not mean_that_turns(law, means)]
+    return ("period", *frame) if nt > 1 else tuple(frame)
+
+
+def mean_that_turns(law: Law, means: Mapping[str, float]) -> str:
+    """Return the component whose given mean would turn with the frame, which must rest then, or nothing."""
+    return next((c for c in law.rotating_pair or () if means.get(c, 0.0) != 0.0), "")
 
 
 def first_values(job: Job, law: Law) -> dict[str, float]:
@@ -60,6 +80,8 @@ def first_values(job: Job, law: Law) -> dict[str, float]:
         values[f"length_{axis}"] = _given(job, f"length_{axis}")
     for axis in axes(law):
         values[f"drift_{axis}"] = float(getattr(job.box, f"drift_{axis}") or 0.0)
+    if law.rotating_pair:
+        values["rotation"] = float(job.box.rotation or 0.0)
     values.update({f"source_{component}": 0.0 for component in open_means(law)})
     return {**values, **law.defaults, **job.law.parameter_values()}
 
@@ -85,7 +107,12 @@ def judge_free(job: Job, law: Law, findings: Findings) -> None:
 
 
 def _judge_name(name: str, job: Job, law: Law, findings: Findings) -> None:
-    reason = _period_reason(name, job) or _drift_reason(name, law) or _source_reason(name, law)
+    reason = (
+        _period_reason(name, job)
+        or _drift_reason(name, law)
+        or _rotation_reason(name, job, law)
+        or _source_reason(name, law)
+    )
     known = scalar_names(law)
     if reason:
         findings.refuse("solve.free", reason)
@@ -119,6 +146,20 @@ def _drift_reason(name: str, law: Law) -> str:
     return ""
 
 
+def _rotation_reason(name: str, job: Job, law: Law) -> str:
+    if name != "rotation":
+        return ""
+    if law.rotating_pair is None:
+        return "must not name rotation: the law has no pair of components that may be turned; remove it"
+    component = mean_that_turns(law, job.solve.mean)
+    if component:
+        return (
+            f"must not name rotation: the given mean of {component} is not 0 and would turn with the state;"
+            " remove it or the mean"
+        )
+    return ""
+
+
 def _source_reason(name: str, law: Law) -> str:
     if not name.startswith("source_"):
         return ""
@@ -136,8 +177,8 @@ def _source_reason(name: str, law: Law) -> str:
 def _judge_count(free: tuple[str, ...], job: Job, law: Law, findings: Findings) -> None:
     """Compare the free scalars with the phases that can fix them."""
     periodic = job.lattice.nt > 1
-    drifts = [name for name in free if name.startswith("drift_")]
-    others = [name for name in free if not name.startswith(("drift_", "source_"))]
+    frame = [name for name in free if is_frame_scalar(name)]
+    others = [name for name in free if name not in frame and not name.startswith("source_")]
     if periodic and not others:
         lengths = listed(f"length_{axis}" for axis in axes(law))
         findings.refuse(
@@ -146,24 +187,36 @@ def _judge_count(free: tuple[str, ...], job: Job, law: Law, findings: Findings) 
             f" add period (or one of {lengths}, or a parameter)",
         )
         return
-    phases = int(periodic) + len(homogeneous_axes(law))
-    if len(drifts) + len(others) > phases:
+    phases = int(periodic) + len(frame_scalars(law))
+    if len(frame) + len(others) > phases:
         findings.refuse(
             "solve.free",
-            f"must name at most {phases} scalar(s) besides sources here, got {listed(drifts + others)}:"
+            f"must name at most {phases} scalar(s) besides sources here, got {listed(frame + others)}:"
             f" {_phase_text(periodic, law)} can fix no more; hold one of them",
         )
         return
-    held = [f"drift_{axis}" for axis in homogeneous_axes(law) if f"drift_{axis}" not in free]
-    if held and len(drifts) + len(others) < phases:
+    if len(frame) + len(others) < phases:
+        _warn_of_held(free, job, law, findings)
+
+
+def _warn_of_held(free: tuple[str, ...], job: Job, law: Law, findings: Findings) -> None:
+    drifts = [f"drift_{axis}" for axis in homogeneous_axes(law) if f"drift_{axis}" not in free]
+    if drifts:
         findings.warn(
-            f"{listed(held)} is held although the law is the same all along that axis: right for a wave"
+            f"{listed(drifts)} is held although the law is the same all along that axis: right for a wave"
             " followed in the resting frame or a state kept in place by a reflection; otherwise add it to"
             " solve.free"
+        )
+    if law.rotating_pair and "rotation" not in free and not mean_that_turns(law, job.solve.mean):
+        findings.warn(
+            f"rotation is held although ({listed(law.rotating_pair)}) may be turned by any angle: right for a"
+            " plane wave that is followed by its drift or period, or a state kept from turning by a"
+            " reflection; otherwise add it to solve.free"
         )
 
 
 def _phase_text(periodic: bool, law: Law) -> str:
     phases = ["the phase in time"] if periodic else []
     phases += [f"the phase in {axis}" for axis in homogeneous_axes(law)]
+    phases += [f"the angle of ({listed(law.rotating_pair)})"] if law.rotating_pair else []
     return " and ".join(phases) or "a steady state, which nothing shifts,"

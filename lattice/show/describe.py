@@ -30,6 +30,7 @@ MEANINGS = {
     "length_y": "length of the box in y",
     "drift_x": "velocity of the frame in x",
     "drift_y": "velocity of the frame in y",
+    "rotation": "radians per unit of time by which the frame turns",
 }
 
 

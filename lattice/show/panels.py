@@ -30,7 +30,14 @@ HIGH_LAST_THIRD = 1e-4
 """Share of the last third of a spectrum above which its panel asks for more nodes (common practice)."""
 LINE_COLOURS = ("#0b5cad", "#d1490c", "#2a8a57", "#7a4fb0")
 GOOD, BAD, FAINT = "#1b6e3c", "#b3261e", "#666666"
-SYMBOLS = {"period": "T", "length_x": "L_x", "length_y": "L_y", "drift_x": "c_x", "drift_y": "c_y"}
+SYMBOLS = {
+    "period": "T",
+    "length_x": "L_x",
+    "length_y": "L_y",
+    "drift_x": "c_x",
+    "drift_y": "c_y",
+    "rotation": r"\Omega",
+}
 SPECTRUM_LABELS = {"t": r"frequency $\omega$", "y": "wavenumber $k_y$", "x": "wavenumber $k_x$"}
 
 STYLE: dict[str, Any] = {

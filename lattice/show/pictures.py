@@ -295,8 +295,10 @@ def _draw_maps(file: StateFile, components: tuple[str, ...], size: tuple[float, 
 
 
 def _kind(meta: StateMeta) -> str:
-    drifting = any(meta.values.get(name, 0.0) != 0.0 for name in ("drift_x", "drift_y"))
-    return "travelling wave, in its own frame" if drifting else "steady state"
+    if any(meta.values.get(name, 0.0) != 0.0 for name in ("drift_x", "drift_y")):
+        return "travelling wave, in its own frame"
+    turning = meta.values.get("rotation", 0.0) != 0.0
+    return "rotating wave, in its own frame" if turning else "steady state"
 
 
 def _draw_cut(file: StateFile, components: tuple[str, ...], options: PictureOptions) -> Figure:

@@ -1,10 +1,10 @@
 """Start from a march: spin a law up from noise, cut a window of one period, make it periodic.
 
-The window is the flow from the end of the spin-up on, seen in the frame of the drift:
-`u(t, x) = u_lab(t, x + cx*t)`. Over the first fraction `blend` of the period a smooth weight mixes it
-with its own continuation one period later, `v(t) = w u(t) + (1 - w) u(t + T)`, so that `v` is as smooth
-across the seam as elsewhere. Rank 0 marches and hands out one slice at a time; every rank keeps its own
-part. The field is the same, bit for bit, on any number of ranks.
+The window is the flow from the end of the spin-up on, seen in the frame of drift and rotation:
+`u(t, x) = R(-rotation*t) u_lab(t, x + cx*t)`. Over the first fraction `blend` of the period a smooth
+weight mixes it with its own continuation one period later, `v(t) = w u(t) + (1 - w) u(t + T)`, so that
+`v` is as smooth across the seam as elsewhere. Rank 0 marches and hands out one slice at a time; every
+rank keeps its own part. The field is the same, bit for bit, on any number of ranks.
 """
 
 from __future__ import annotations
@@ -21,7 +21,7 @@ from lattice.errors import InputError
 from lattice.geometry.block import Block
 from lattice.geometry.lattice import Lattice
 from lattice.laws.law import Law
-from lattice.starts.drift import drift_of_slice, drift_that_aligns
+from lattice.starts.frame import MeanTurn, Pair, frame_of_slice, frame_that_aligns, turned
 from lattice.starts.noise import random_spectrum
 from lattice.starts.options import MarchOptions, Report, silent
 from lattice.starts.stepper import Stepper, Values, settle, suggest_dt
@@ -61,7 +61,7 @@ def march(
     lattice : Lattice
         Levels and nodes the window is sampled at. `nt = 1` takes the last slice of the march.
     values : dict of str to float
-        Period, lengths, drifts and parameters.
+        Period, lengths, drifts, rotation and parameters.
     law : Law
         Any law the marcher takes.
     block : Block
@@ -74,7 +74,8 @@ def march(
     owned : ndarray, shape block.shape + (components,)
         Without halo.
     values : dict of str to float
-        With the drifts along `match_drift`, and the sources that hold the means the law lets run.
+        With the drifts along `match_drift`, the rotation where `match_rotation`, and the sources that hold
+        the means the law lets run.
 
     Raises
     ------
@@ -125,18 +126,21 @@ class _Marcher:
         self._told = monotonic()
 
     def prepare(self) -> Values:
-        """Spin up and find the drifts and sources of the window; return these."""
+        """Spin up and find the frame and the sources of the window; return these."""
         self.axes = _matched_axes(self.start, self.law)
+        self.matched = tuple(f"drift_{axis}" for axis in self.axes)
+        self.matched += ("rotation",) if _matched_rotation(self.start, self.law) else ()
         self.stepper = self._stepper()
         self.spectrum = self._spin_up(self._noise())
-        self.drift = {name: self.values.get(name, 0.0) for name in ("drift_x", "drift_y")}
+        self.frame = {name: self.values.get(name, 0.0) for name in ("drift_x", "drift_y", "rotation")}
+        self.pair = self._pair()
         self.running: dict[int, float] = {}
         wandering = _wandering(self.law)
-        if self.lattice.nt > 1 and (self.axes or wandering):
+        if self.lattice.nt > 1 and (self.matched or wandering):
             self._compare_ends(wandering)
         elif self.lattice.nt == 1:
             self._look_at_slice(wandering)
-        found = {f"drift_{axis}": self.drift[f"drift_{axis}"] for axis in self.axes}
+        found = {name: self.frame[name] for name in self.matched}
         found |= {f"source_{self._name(row)}": -slope for row, slope in self.running.items()}
         self._tell_of_window(found)
         return found
@@ -150,13 +154,23 @@ class _Marcher:
             if sample:
                 spectrum = self.stepper.advance(spectrum, spacing)
             time = sample * spacing
-            seen = self.stepper.modes.shift(
-                spectrum, self.drift["drift_x"] * time, self.drift["drift_y"] * time
-            )
+            seen = self._seen(spectrum, time, self.frame)
             for row, slope in self.running.items():
                 seen[row, 0, 0] -= offsets[row] + slope * time
             yield self.stepper.to_field(seen, (self.lattice.ny, self.lattice.nx))
             self._tell(f"march: window {time:.4g} of {(samples - 1) * spacing:.4g}")
+
+    def _seen(self, spectrum: Complex, time: float, frame: Values) -> Complex:
+        """Return a slice as it is seen after `time` in a frame of given drift and rotation."""
+        shifted = self.stepper.modes.shift(spectrum, frame["drift_x"] * time, frame["drift_y"] * time)
+        return turned(shifted, self.pair, -frame["rotation"] * time)
+
+    def _pair(self) -> Pair | None:
+        """Return the marcher's rows of the law's rotating pair."""
+        if self.law.rotating_pair is None:
+            return None
+        a, b = (self.law.components.index(name) for name in self.law.rotating_pair)
+        return self.stepper.operator.evolving.index(a), self.stepper.operator.evolving.index(b)
 
     def _stepper(self) -> Stepper:
         lengths = (self.values.get("length_y", 1.0), self.values["length_x"])
@@ -184,21 +198,35 @@ class _Marcher:
         return spectrum
 
     def _compare_ends(self, wandering: list[int]) -> None:
-        """Find the drifts and the slopes of wandering means from the window's two ends."""
-        first, last = self.spectrum, self.stepper.advance(self.spectrum, self.period)
+        """Find the frame and the slopes of wandering means from the window's two ends."""
+        first, last, turn = self.spectrum, *self._window_end()
         for row in wandering:
             self.running[row] = float((last - first)[row, 0, 0].real) / self.period
-        if self.axes:
-            given = [0.0 if axis in self.axes else self.drift[f"drift_{axis}"] * self.period for axis in "xy"]
-            back = self.stepper.modes.shift(last, *given)
-            self.drift.update(drift_that_aligns(self.stepper.modes, first, back, self.period, self.axes))
+        if self.matched:
+            back = self._seen(last, self.period, self.frame | dict.fromkeys(self.matched, 0.0))
+            modes, pair = self.stepper.modes, turn.pair if turn else None
+            self.frame.update(frame_that_aligns(modes, first, back, self.period, self.axes, pair))
+        if turn:
+            self.frame["rotation"] = turn.with_whole_turns(self.frame, self.period)
+
+    def _window_end(self) -> tuple[Complex, MeanTurn | None]:
+        """Return the spectrum one period on, and how fast it turned where the rotation is looked for."""
+        if self.pair is None or "rotation" not in self.matched:
+            return self.stepper.advance(self.spectrum, self.period), None
+        spectrum, turn = self.spectrum, MeanTurn(self.stepper.modes, self.pair)
+        for _ in range(self.lattice.nt):
+            turn.look(spectrum, self.stepper.operator.rate(spectrum))
+            spectrum = self.stepper.advance(spectrum, self.period / self.lattice.nt)
+        return spectrum, turn
 
     def _look_at_slice(self, wandering: list[int]) -> None:
         rate = self.stepper.operator.rate(self.spectrum)
         for row in wandering:
             self.running[row] = float(rate[row, 0, 0].real)
-        if self.axes:
-            self.drift.update(drift_of_slice(self.stepper.modes, self.spectrum, rate, self.axes))
+        if self.matched:
+            held = {name: value for name, value in self.frame.items() if name not in self.matched}
+            modes, pair = self.stepper.modes, self.pair
+            self.frame.update(frame_of_slice(modes, self.spectrum, rate, held, self.matched, pair))
 
     def _tell_of_window(self, found: Values) -> None:
         dt = self.stepper.dt
@@ -243,6 +271,15 @@ def _matched_axes(start: MarchOptions, law: Law) -> tuple[str, ...]:
                 f"'{axis}'; remove it"
             )
     return axes
+
+
+def _matched_rotation(start: MarchOptions, law: Law) -> bool:
+    if start.match_rotation and law.rotating_pair is None:
+        raise InputError(
+            f"start.match_rotation must be false: law {law.name} has no pair of components that may be "
+            "turned; remove it"
+        )
+    return bool(start.match_rotation)
 
 
 def _wandering(law: Law) -> list[int]:

@@ -39,6 +39,8 @@ class MarchOptions:
     match_drift : sequence of str
         Axes ("x", "y") along which the drift is chosen so that the end of the window fits its start; for
         `nt = 1` so that the slice moves most nearly as a whole.
+    match_rotation : bool
+        Whether the rotation is chosen so, too.
     """
 
     seed: int = 0
@@ -49,6 +51,7 @@ class MarchOptions:
     blend: float = 0.3
     shape: Sequence[int] | None = None
     match_drift: Sequence[str] | None = ()
+    match_rotation: bool | None = False
 
 
 @dataclass(frozen=True)

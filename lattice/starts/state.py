@@ -24,7 +24,7 @@ if TYPE_CHECKING:
 
 Real = NDArray[np.float64]
 
-SCALARS = ("period", "length_x", "length_y", "drift_x", "drift_y")
+SCALARS = ("period", "length_x", "length_y", "drift_x", "drift_y", "rotation")
 
 
 def state(
