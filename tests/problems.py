@@ -19,6 +19,8 @@ from lattice.kernels.forms import Form, sourced
 from lattice.kernels.scheme import Scheme, make_scheme
 from lattice.laws.catalogue import law_names, load_law, read_law
 from lattice.laws.law import Law
+from lattice.solve.petsc import start_petsc
+from lattice.system.system import System
 
 Array = NDArray[np.float64]
 TURN = 2.0 * np.pi
@@ -134,3 +136,40 @@ def run_text(loop: Loop, out: Array, *fields: Array) -> Array:
 def relative(found: Array, wanted: Array) -> float:
     """Return the largest difference over the largest wanted value (or one)."""
     return float(np.abs(found - wanted).max() / max(1.0, np.abs(wanted).max()))
+
+
+def free_of(law: Law, lattice: Lattice, usual: bool) -> tuple[str, ...]:
+    """Return as many scalars as the law's phases can fix: the usual ones, or a length and parameters."""
+    frame = [n for n in forms.scalar_names(law) if n.startswith("drift_") or n == "rotation"]
+    phases = len(frame) + (lattice.nt > 1)
+    if usual:
+        return (*(["period"] if lattice.nt > 1 else []), *frame)[:phases]
+    other = ["length_x", *(p.name for p in law.parameters), *frame, "period", "length_y"]
+    return tuple(other[:phases])
+
+
+def system_of(name: str, steady: bool = False, usual: bool = True, order: int = 2) -> System:
+    """Return a system on one rank with every phase condition in use."""
+    from mpi4py import MPI
+
+    start_petsc([])
+    law = law_of(name)
+    lattice = lattice_of(law, steady, order)
+    return System(law, lattice, values_of(law), free_of(law, lattice, usual), {}, MPI.COMM_SELF)
+
+
+def random_unknowns(system: System, seed: int, size: float = 0.3) -> Any:
+    """Return a vector of unknowns at a random field and the system's values."""
+    x = system.vector()
+    system.pack(random_field(system.law, system.lattice, seed, size)[system.blocks.block.slices], {}, x)
+    return x
+
+
+def random_direction(system: System, seed: int) -> Any:
+    """Return a vector of random numbers, those of the scalars as large as the field's norm."""
+    rng = np.random.default_rng(seed)
+    v = system.vector()
+    field = rng.uniform(-0.3, 0.3, (*system.lattice.shape, system.blocks.components))
+    border = rng.uniform(-0.3, 0.3, len(system.unknowns)) * system.root_size
+    system.store(v, field[system.blocks.block.slices].reshape(-1), border)
+    return v
