@@ -3,6 +3,8 @@
 from __future__ import annotations
 
 PRECONDITIONERS: dict[str, str] = {
+    "auto": "`direct` for small boxes, else `coarse`; the log says which and why",
+    "coarse": "the law solved on a coarse lattice, then one smoothing; right for large boxes",
     "direct": "the whole lattice Jacobian factorised by sparse LU; right for small boxes",
     "patches": "overlapping blocks of the lattice, each factorised on its own",
 }

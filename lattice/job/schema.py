@@ -131,6 +131,27 @@ class PatchesSection(Section):
     overlap: int = _key("nodes by which a patch reaches into its neighbours", 4, ge=0)
 
 
+class CoarseSection(Section):
+    """The `coarse` preconditioner's second level and its smoother."""
+
+    nt: Count | None = _key("levels of the coarse lattice", None, shown="from the state's spectrum and the law")
+    nx: Count | None = _key("nodes in x of the coarse lattice", None, shown="the same")
+    ny: Count | None = _key("nodes in y of the coarse lattice", None, shown="the same")
+    order: Literal[4, 6, 8] | None = _key(
+        "order of the space differences on the coarse lattice", None, shown="8 in one space dimension, 6 in two"
+    )
+    solver: Literal["direct", "patches"] = _key(
+        "how the coarse lattice is solved: `direct` LU, or `patches` where that does not fit (see [solve.patches])",
+        "direct",
+    )
+    smoother: Literal["auto", "spectral", "slabs"] = _key(
+        "what acts on waves the coarse lattice lacks; `auto` compares the law's coefficients there", "auto"
+    )
+    shift: float = _key("added to the spectral smoother's symbol", 1.0, ge=0)
+    slabs: Count | None = _key("number of slabs of time levels", None, shown="one a rank, at least 4")
+    slab_overlap: int = _key("levels by which a slab reaches into its neighbours", 2, ge=0)
+
+
 class SolveSection(Section):
     """What is free, how the equations are solved, when to stop."""
 
@@ -145,7 +166,7 @@ class SolveSection(Section):
         "given mean of a component whose mean the law leaves open", {}, shown="0 for each"
     )
     preconditioner: Name = _key(
-        "; ".join(f"`{name}`: {text}" for name, text in PRECONDITIONERS.items()), "direct"
+        "; ".join(f"`{name}`: {text}" for name, text in PRECONDITIONERS.items()), "auto"
     )
     residual_rms: Positive = _key("stop when the root mean square residual is at most this", 1e-10)
     newton_steps: int = _key("largest number of Newton steps", 40, ge=0)
@@ -159,6 +180,7 @@ class SolveSection(Section):
     linear_iterations: Count = _key("largest number of iterations of one linear solve", 500)
     line_search: bool = _key("shorten a step that does not lower the residual", True)
     patches: PatchesSection = _key("the `patches` preconditioner's blocks", PatchesSection())
+    coarse: CoarseSection = _key("the `coarse` preconditioner's levels", CoarseSection())
 
 
 class MarchStart(Section):

@@ -1,102 +1,146 @@
 """The `coarse` preconditioner: two levels, multiplicative.
 
 First the bordered system of the law re-discretised on a coarse lattice that still carries the active
-modes, solved exactly (or by patches); then one smoothing of what is left. The scalars are solved for on
-the coarse lattice only. Transfer is by truncated Fourier spectra in all axes.
+modes, solved by LU or by patches; then one smoothing of what is left. The scalars are solved for on the
+coarse lattice only. Transfer is by truncated Fourier spectra in all axes.
 """
 
 from __future__ import annotations
 
 from collections.abc import Callable
-from typing import TYPE_CHECKING, Any
-
-import numpy as np
+from typing import TYPE_CHECKING, Any, Protocol
 
 from lattice.solve.bordering import Bordering
+from lattice.solve.coarse_lattice import Choice, choose
+from lattice.solve.coarse_solver import PatchedCoarse
 from lattice.solve.direct import Direct
-from lattice.solve.spectral_smoother import SpectralSmoother
+from lattice.solve.smoothers import SlabSmoother, SpectralSmoother
 from lattice.spectral.transfer import Transfer
+from lattice.spectral.transform import Transform
 from lattice.system.constant_part import ConstantPart
 from lattice.system.system import System
+from lattice.system.timing import event
 
 if TYPE_CHECKING:
-    from lattice.geometry.lattice import Lattice
+    from lattice.solve.registry import Preconditioner
+
+
+class Smoother(Protocol):
+    """An approximate inverse of the field part that is good at what the coarse lattice does not carry."""
+
+    def update(self) -> None:
+        """Set up for the system's point of linearisation. Collective."""
+
+    def apply(self, r: Any, y: Any) -> None:
+        """Set the field vector `y` to the smoother times `r`. Collective."""
+
+    def apply_transpose(self, r: Any, y: Any) -> None:
+        """Set `y` to the transposed smoother times `r`. Collective."""
+
+    def destroy(self) -> None:
+        """Free everything PETSc holds. Collective."""
 
 
 class TwoLevel:
     """The two-level preconditioner of a bordered system.
 
-    Collective, as all methods.
+    Collective, as all methods. The coarse lattice and the smoother are chosen at the first `update`.
 
     Parameters
     ----------
     system : System
         On the fine lattice.
     options : object
-        The job's solve section.
+        The job's solve section; `options.coarse` says what is not to be chosen.
     report : callable
         Takes lines for the log.
     """
 
     def __init__(self, system: System, options: Any, report: Callable[[str], None]) -> None:
         self.system, self.options, self.report = system, options, report
-        lattice = self._choose_lattice()
-        free = [u.name for u in system.unknowns if not u.condition.startswith("mean")]
-        self.coarse = System(system.law, lattice, system.values, free, system.means, system.comm)
-        self.transfer = Transfer(system.blocks, self.coarse.blocks, self._midpoint_rows())
-        self.solver = Bordering(self.coarse, Direct(self.coarse))
+        self.transform = Transform(system.blocks)
         self.constant = ConstantPart(system.operator)
-        self.smoother = SpectralSmoother(system, self.transfer.fine, self.constant, options.shift)
-        self.ratio = self.coarse.root_size / system.root_size
-        self._x, self._r = self.coarse.vector(), self.coarse.vector()
-        self._y = self.coarse.vector()
-        self._small, self._field, self._other = self.coarse.blocks.vector(), system.blocks.vector(), system.blocks.vector()
+        self._field, self._other = system.blocks.vector(), system.blocks.vector()
         self._work, self._rest = system.vector(), system.vector()
-
-    def _choose_lattice(self) -> Lattice:
-        return self.options.coarse_lattice
-
-    def _midpoint_rows(self) -> tuple[bool, ...]:
-        steady = self.system.lattice.nt == 1
-        return tuple(e.evolving and not steady for e in self.system.law.equations)
+        self._made: list[Any] = []
 
     def update(self) -> None:
-        """Restrict the point of linearisation, factorise the coarse Jacobian, invert the symbols."""
+        """Restrict the point of linearisation, set up the coarse solver and the smoother."""
+        self.constant.update()
+        if not self._made:
+            choice = choose(self.system, self.transform, self.constant, self.options.coarse)
+            self.report(choice.reason)
+            self._build(choice)
+        with event("coarse set-up"):
+            self._restrict_point()
+            self.solver.update()
+        with event("smoother set-up"):
+            self.smoother.update()
+
+    def _build(self, choice: Choice) -> None:
+        """Make the coarse system, the transfer and the smoother."""
+        system, options = self.system, self.options.coarse
+        free = [u.name for u in system.unknowns if not u.condition.startswith("mean")]
+        self.coarse = System(system.law, choice.lattice, system.values, free, system.means, system.comm)
+        self.coarse.unknowns = system.unknowns  # the same units of the scalars on both levels
+        self.coarse_transform = Transform(self.coarse.blocks)
+        steady = system.lattice.nt == 1
+        midpoint = tuple(e.evolving and not steady for e in system.law.equations)
+        self.transfer = Transfer(self.transform, self.coarse_transform, midpoint)
+        self.solver = self._make_solver()
+        self.smoother = self._make_smoother(choice.smoother)
+        self.ratio = self.coarse.root_size / system.root_size
+        self._x, self._r, self._y = self.coarse.vector(), self.coarse.vector(), self.coarse.vector()
+        self._small = self.coarse.blocks.vector()
+        self._made = [
+            *(self._x, self._r, self._y, self._small),
+            *(self.smoother, self.solver, self.transfer, self.coarse_transform, self.coarse),
+        ]
+        assert options is not None
+
+    def _make_solver(self) -> Preconditioner:
+        if self.options.coarse.solver == "patches":
+            return PatchedCoarse(self.coarse, self.options)
+        return Bordering(self.coarse, Direct(self.coarse, prefix="coarse_"))
+
+    def _make_smoother(self, name: str) -> Smoother:
+        options = self.options.coarse
+        if name == "slabs":
+            return SlabSmoother(self.system, options.slabs, options.slab_overlap, self.report)
+        return SpectralSmoother(self.transform, self.constant, options.shift)
+
+    def _restrict_point(self) -> None:
+        """Linearise the coarse system about the restricted point, with the restricted phase conditions."""
         operator = self.system.operator
         operator.copy_point(self._field)
         self.transfer.restrict(self._field, self._small, rows=False)
-        self._match_units()
         self.coarse.pack(self.coarse.blocks.owned(self._small), operator.values, self._x)
         for condition, template in self.system.templates.items():
             self.transfer.restrict(template, self._small, rows=False)
             self.coarse.use_templates({condition: self._small})
         self.coarse.linearise(self._x)
-        self.solver.update()
-        self.constant.update()
-        self.smoother.update()
-
-    def _match_units(self) -> None:
-        """Measure the coarse scalars in the fine system's units."""
-        self.coarse.unknowns = self.system.unknowns
 
     def _down(self, r: Any, out: Any, rows: bool) -> None:
         """Restrict a vector of unknowns."""
-        self._field.getArray()[:] = r.getArray(readonly=1)[: self.system.blocks.owned_size]
-        self.transfer.restrict(self._field, self._small, rows)
-        border = self.system.border_of(r) * self.ratio
-        self.coarse.store(out, self._small.getArray(readonly=1), border)
+        with event("transfer"):
+            self._field.getArray()[:] = r.getArray(readonly=1)[: self.system.blocks.owned_size]
+            self.transfer.restrict(self._field, self._small, rows)
+            border = self.system.border_of(r) * self.ratio
+            self.coarse.store(out, self._small.getArray(readonly=1), border)
 
     def _up(self, r: Any, out: Any, rows: bool) -> None:
         """Prolong a vector of unknowns."""
-        self._small.getArray()[:] = r.getArray(readonly=1)[: self.coarse.blocks.owned_size]
-        self.transfer.prolong(self._small, self._field, rows)
-        border = self.coarse.border_of(r) / self.ratio
-        self.system.store(out, self._field.getArray(readonly=1), border)
+        with event("transfer"):
+            self._small.getArray()[:] = r.getArray(readonly=1)[: self.coarse.blocks.owned_size]
+            self.transfer.prolong(self._small, self._field, rows)
+            border = self.coarse.border_of(r) / self.ratio
+            self.system.store(out, self._field.getArray(readonly=1), border)
 
     def apply(self, r: Any, y: Any) -> None:
         """Set `y` to the coarse correction of `r`, smoothed once."""
         self._down(r, self._r, rows=True)
-        self.solver.apply(self._r, self._y)
+        with event("coarse solve"):
+            self.solver.apply(self._r, self._y)
         self._up(self._y, y, rows=False)
         self.system.tangent(y, self._work)
         self._work.aypx(-1.0, r)
@@ -109,7 +153,8 @@ class TwoLevel:
         self.system.adjoint(self._rest, self._work)
         self._work.aypx(-1.0, r)
         self._down(self._work, self._r, rows=False)
-        self.solver.apply_transpose(self._r, self._y)
+        with event("coarse solve"):
+            self.solver.apply_transpose(self._r, self._y)
         self._up(self._y, y, rows=True)
         y.axpy(1.0, self._rest)
 
@@ -117,14 +162,11 @@ class TwoLevel:
         """Add the smoothed field part of `r` to `y`."""
         owned = self.system.blocks.owned_size
         self._field.getArray()[:] = r.getArray(readonly=1)[:owned]
-        smooth(self._field, self._other)
+        with event("smoother"):
+            smooth(self._field, self._other)
         y.getArray()[:owned] += self._other.getArray(readonly=1)
 
     def destroy(self) -> None:
         """Free both levels."""
-        for vector in (self._x, self._r, self._y, self._small, self._field, self._other, self._work, self._rest):
-            vector.destroy()
-        self.smoother.destroy()
-        self.solver.destroy()
-        self.transfer.destroy()
-        self.coarse.destroy()
+        for item in (*self._made, self._field, self._other, self._work, self._rest, self.transform):
+            item.destroy()

@@ -63,7 +63,7 @@ class Factorisation:
             if status["INFOG(1)"] not in WORKSPACE_CODES:
                 break
         self.destroy()
-        raise FactorisationError(_explain(status), status)
+        raise FactorisationError(_explain(status, self.prefix), status)
 
     def _attempt(self, matrix: Any, relaxation: int) -> dict[str, int]:
         from petsc4py import PETSc
@@ -115,12 +115,12 @@ def _mumps_status(pc: Any) -> dict[str, int]:
     return status | {"ICNTL(14)": int(factor.getMumpsIcntl(14))}
 
 
-def _explain(status: dict[str, int]) -> str:
+def _explain(status: dict[str, int], prefix: str) -> str:
     code = status["INFOG(1)"]
     estimate = f"{status['INFOG(17)']} MB in all, {status['INFOG(16)']} MB on the fullest rank"
     numbers = f"MUMPS INFOG(1) = {code}, INFOG(2) = {status['INFOG(2)']}"
     if code in WORKSPACE_CODES:
-        advice = f"its workspace was still too small at {status['ICNTL(14)']} percent extra; try '-- -direct_mat_mumps_icntl_14 400'"
+        advice = f"its workspace was still too small at {status['ICNTL(14)']} percent extra; try '-- -{prefix}mat_mumps_icntl_14 400'"
     elif code in (-13, -19):
         advice = f"memory ran out (estimate {estimate}); use more ranks or nodes, a smaller lattice, or another preconditioner"
     elif code == -10:
@@ -138,12 +138,14 @@ class Direct:
     system : System
     options : object
         The job's solve section; nothing of it is used here.
+    prefix : str
+        Of its options in PETSc's database.
     """
 
-    def __init__(self, system: System, options: Any = None) -> None:
+    def __init__(self, system: System, options: Any = None, prefix: str = "direct_") -> None:
         self.system = system
         self._assembled = AssembledJacobian(system.operator)
-        self._lu = Factorisation("direct_", system.comm)
+        self._lu = Factorisation(prefix, system.comm)
         self.pins: list[tuple[int, float]] = []
 
     def update(self) -> None:
@@ -177,9 +179,8 @@ def choose_pins(system: System, matrix: Any) -> list[tuple[int, float]]:
     The near-null vectors of the phases are the state's derivatives; each is reduced by those before it at
     their pins, as in Gaussian elimination with pivoting. Collective.
     """
-    diagonal = matrix.getDiagonal()
-    size = diagonal.norm() / system.root_size
-    diagonal.destroy()
+    # Not the diagonal's size: it is zero throughout for a law of odd derivatives only.
+    size = matrix.norm() / system.root_size
     chosen: list[tuple[int, Any]] = []
     for unknown in system.unknowns:
         candidate = _near_null(system, unknown.condition)

@@ -13,10 +13,13 @@ if TYPE_CHECKING:
 
 _FIELD_INVERSES = {
     "direct": "lattice.solve.direct:Direct",
-    "patches": "lattice.solve.patches:Patches",
+    "patches": "lattice.solve.patches:RankPatches",
 }
 _BORDERED = {"coarse": "lattice.solve.coarse:TwoLevel"}
-NAMES = (*_FIELD_INVERSES, *_BORDERED)
+NAMES = (*_FIELD_INVERSES, *_BORDERED, "auto")
+DIRECT_UNKNOWNS = {1: 30_000, 2: 12_000}
+"""Most unknowns, by space dimensions, for which `auto` takes `direct`: there one LU of the whole lattice
+costs seconds and well under 1 GB (fill grows with the dimension)."""
 
 
 class FieldInverse(Protocol):
@@ -79,10 +82,23 @@ def make_preconditioner(
     """
     from lattice.solve.bordering import Bordering
 
+    if name == "auto":
+        name = choose_preconditioner(system, report or _silent)
     if name in _FIELD_INVERSES:
         return Bordering(system, _load(_FIELD_INVERSES[name])(system, options))
     made: Preconditioner = _load(_BORDERED[name])(system, options, report or _silent)
     return made
+
+
+def choose_preconditioner(system: System, report: Callable[[str], None]) -> str:
+    """Return "direct" for a box that one LU serves, "coarse" otherwise, and report why."""
+    size, most = system.blocks.size, DIRECT_UNKNOWNS[system.law.dimensions]
+    steady = system.lattice.nt == 1
+    if size <= most or steady:
+        report(f"preconditioner direct: {size} unknowns{', one level' if steady else f', at most {most}'}")
+        return "direct"
+    report(f"preconditioner coarse: {size} unknowns, more than {most}")
+    return "coarse"
 
 
 def _load(place: str) -> Any:

@@ -12,7 +12,6 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from lattice.geometry.blocks import Blocks
 from lattice.spectral.transform import Complex, Transform, part_bounds
 
 
@@ -23,15 +22,15 @@ class Transfer:
 
     Parameters
     ----------
-    fine, coarse : Blocks
-        On the same communicator, with the same axes and components; the coarse lattice has no more nodes
-        in any axis.
+    fine, coarse : Transform
+        Of lattices on the same communicator, with the same axes and components; the coarse one has no more
+        nodes in any axis. They stay the caller's.
     evolving : sequence of bool
         For every component whether its rows lie at the midpoints.
     """
 
-    def __init__(self, fine: Blocks, coarse: Blocks, evolving: tuple[bool, ...]) -> None:
-        self.fine, self.coarse = Transform(fine), Transform(coarse)
+    def __init__(self, fine: Transform, coarse: Transform, evolving: tuple[bool, ...]) -> None:
+        self.fine, self.coarse = fine, coarse
         self._shift = self._half_steps(evolving)
         self._copy = _SpectrumCopy(self.fine, self.coarse)
         self._small, self._large = self.coarse.empty_spectrum(), self.fine.empty_spectrum()
@@ -61,10 +60,8 @@ class Transfer:
         self.fine.backward(self._large, out)
 
     def destroy(self) -> None:
-        """Free transforms and scatters. Collective."""
+        """Free scatters. Collective."""
         self._copy.destroy()
-        self.fine.destroy()
-        self.coarse.destroy()
 
 
 class _SpectrumCopy:

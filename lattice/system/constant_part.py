@@ -177,14 +177,28 @@ class ConstantPart:
         return d / step, m
 
     def fluctuating_size(self, wavenumber: float) -> float:
-        """Return the size of what the constant part leaves out, at a wavenumber: max over outputs."""
-        sizes = np.zeros(len(self.form.outputs))
-        for term in self.terms:
-            product = np.prod([abs(self.means[f]) + self.fluctuations[f] for f in term.factors])
-            mean = np.prod([abs(self.means[f]) for f in term.factors])
-            sizes[term.output] += (product - mean) * wavenumber**term.order
-        return float(sizes.max())
+        """Return the largest fluctuating part an evolving row has in its own component, at a wavenumber."""
+        return max(self._own_size(c, wavenumber)[1] for c in self._evolving())
 
+    def constant_size(self, wavenumber: float) -> float:
+        """Return the smallest constant part an evolving row has in its own component, at a wavenumber."""
+        return min(self._own_size(c, wavenumber)[0] for c in self._evolving())
+
+    def _evolving(self) -> list[int]:
+        return [c for c, equation in enumerate(self.operator.law.equations) if equation.evolving]
+
+    def _own_size(self, component: int, wavenumber: float) -> tuple[float, float]:
+        """Return sizes of the constant and the fluctuating part, for the wave along x."""
+        constant, fluctuating = 0.0 + 0.0j, 0.0
+        for term in self.terms:
+            if (term.output, term.component) != (component, component):
+                continue
+            mean = complex(np.prod([self.means[f] for f in term.factors]))
+            full = np.prod([abs(self.means[f]) + self.fluctuations[f] for f in term.factors])
+            fluctuating += float(full - abs(mean)) * wavenumber**term.order
+            if not any(b for _, b in term.derivatives):
+                constant += mean * (1j * wavenumber) ** term.order
+        return abs(constant.real), fluctuating
 
 def _stencil_symbol(stencil: dict[tuple[int, int], float], angle: Real, place: int) -> Complex:
     total = sum((w * np.exp(1j * offset[place] * angle) for offset, w in stencil.items()), 0.0 + 0.0j)

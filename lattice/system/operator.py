@@ -19,6 +19,7 @@ from lattice.kernels import forms
 from lattice.kernels.build import Geometry, Kernel
 from lattice.kernels.scheme import make_scheme
 from lattice.laws.law import Law
+from lattice.system.timing import event
 
 if TYPE_CHECKING:
     from mpi4py import MPI
@@ -106,14 +107,15 @@ class FieldOperator:
         """Set `out` to the residual of the field vector `u`."""
         kernel = self.kernel("residual")
         kernel.prepare(self.geometry(values), values)
-        self.blocks.exchange(u, self._other)
-        self._apply(kernel, out, [self._other])
+        self._exchange(u, self._other)
+        with event("residual"):
+            self._apply(kernel, out, [self._other])
         self._add_gauge(u, out)
 
     def linearise(self, u: Any, values: Mapping[str, float]) -> None:
         """Fix the point about which `tangent`, `adjoint`, `rate`, `by_scalar` and `rows` act."""
         self.values = dict(values)
-        self.blocks.exchange(u, self._point)
+        self._exchange(u, self._point)
         geometry = self.geometry(values)
         for name, kernel in self._kernels.items():
             if name != "residual":
@@ -121,19 +123,21 @@ class FieldOperator:
 
     def tangent(self, v: Any, out: Any) -> None:
         """Set `out` to J v."""
-        self.blocks.exchange(v, self._other)
-        self._apply(self.kernel("tangent"), out, [self._point, self._other])
+        self._exchange(v, self._other)
+        with event("tangent"):
+            self._apply(self.kernel("tangent"), out, [self._point, self._other])
         self._add_gauge(v, out)
 
     def adjoint(self, w: Any, out: Any) -> None:
         """Set `out` to J^T w."""
-        self.blocks.exchange(w, self._other)
-        self._apply(self.kernel("adjoint"), out, [self._point, self._other])
+        self._exchange(w, self._other)
+        with event("adjoint"):
+            self._apply(self.kernel("adjoint"), out, [self._point, self._other])
         self._add_gauge(w, out)
 
     def curvature(self, v: Any, out: Any) -> None:
         """Set `out` to the second derivative of the residual along v, twice."""
-        self.blocks.exchange(v, self._other)
+        self._exchange(v, self._other)
         self._apply(self.kernel("curvature"), out, [self._point, self._other])
 
     def rate(self, out: Any) -> None:
@@ -175,6 +179,10 @@ class FieldOperator:
         self._levels.Allreduce(local, total)
         means: Array = total / (self.lattice.ny * self.lattice.nx)
         return means
+
+    def _exchange(self, field: Any, padded: Any) -> None:
+        with event("halo"):
+            self.blocks.exchange(field, padded)
 
     def _add_gauge(self, u: Any, out: Any) -> None:
         for component in self._gauge:

@@ -1,0 +1,98 @@
+"""The coarse level solved by an inner Krylov method on overlapping patches, where its LU does not fit."""
+
+from __future__ import annotations
+
+from typing import TYPE_CHECKING, Any
+
+from lattice.errors import LatticeError
+from lattice.solve.bordering import Bordering
+from lattice.solve.patches import Patches, block_patches
+
+if TYPE_CHECKING:
+    from lattice.system.system import System
+
+RTOL, MOST = 1e-2, 200
+"""Of the inner solve; the outer method is flexible, so it may vary."""
+
+
+class _Tangent:
+    def __init__(self, system: System) -> None:
+        self.system = system
+
+    def mult(self, matrix: Any, v: Any, out: Any) -> None:
+        self.system.tangent(v, out)
+
+    def multTranspose(self, matrix: Any, w: Any, out: Any) -> None:  # noqa: N802 - petsc4py's name
+        self.system.adjoint(w, out)
+
+
+class _PC:
+    def __init__(self, bordering: Bordering) -> None:
+        self.bordering = bordering
+
+    def apply(self, pc: Any, r: Any, y: Any) -> None:
+        self.bordering.apply(r, y)
+
+    def applyTranspose(self, pc: Any, r: Any, y: Any) -> None:  # noqa: N802 - petsc4py's name
+        self.bordering.apply_transpose(r, y)
+
+
+class PatchedCoarse:
+    """GMRES on the coarse bordered system, preconditioned by patches; options prefix `coarse_`.
+
+    Collective. It is not a fixed linear map: its transpose is one up to the inner tolerance only.
+
+    Parameters
+    ----------
+    system : System
+        The coarse one.
+    options : object
+        The job's solve section; `options.patches` sizes the patches.
+    """
+
+    def __init__(self, system: System, options: Any) -> None:
+        from petsc4py import PETSc
+
+        self.system = system
+        self._bordering = Bordering(system, Patches(system, block_patches(system, options.patches), "coarse_patches_"))
+        vector = system.vector()
+        size = (vector.getLocalSize(), vector.getSize())
+        vector.destroy()
+        self._matrix = PETSc.Mat().createPython((size, size), _Tangent(system), comm=system.comm)
+        self._matrix.setUp()
+        self._ksp = ksp = PETSc.KSP().create(system.comm)
+        ksp.setOptionsPrefix("coarse_")
+        ksp.setOperators(self._matrix)
+        ksp.setType("gmres")
+        ksp.setPCSide(PETSc.PC.Side.RIGHT)
+        ksp.setTolerances(rtol=RTOL, max_it=MOST)
+        ksp.setGMRESRestart(MOST)
+        ksp.getPC().setType("python")
+        ksp.getPC().setPythonContext(_PC(self._bordering))
+        ksp.setFromOptions()
+
+    def update(self) -> None:
+        """Factorise the patches at the coarse point. Collective."""
+        self._bordering.update()
+        self._matrix.assemble()
+
+    def apply(self, r: Any, y: Any) -> None:
+        """Set `y` to the approximate coarse solution for `r`. Collective."""
+        self._ksp.solve(r, y)
+        self._check()
+
+    def apply_transpose(self, r: Any, y: Any) -> None:
+        """Set `y` to the approximate solution of the transposed coarse system. Collective."""
+        self._ksp.solveTranspose(r, y)
+        self._check()
+
+    def _check(self) -> None:
+        reason = self._ksp.getConvergedReason()
+        if reason < 0 and reason != -3:  # at the most iterations the outer method goes on with what there is
+            raise LatticeError(f"the patched coarse solve failed (PETSc KSP reason {reason}); use solver = 'direct'")
+
+    def destroy(self) -> None:
+        """Free everything. Collective."""
+        self._ksp.destroy()
+        self._matrix.destroy()
+        self._bordering.destroy()
