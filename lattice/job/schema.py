@@ -179,6 +179,9 @@ class SolveSection(Section):
     )
     linear_iterations: Count = _key("largest number of iterations of one linear solve", 500)
     line_search: bool = _key("shorten a step that does not lower the residual", True)
+    nested: int = _key(
+        "number of coarser lattices, each with half the nodes per axis, that are solved first", 0, ge=0, le=4
+    )
     patches: PatchesSection = _key("the `patches` preconditioner's blocks", PatchesSection())
     coarse: CoarseSection = _key("the `coarse` preconditioner's levels", CoarseSection())
 

@@ -5,7 +5,7 @@ from __future__ import annotations
 import math
 import time
 from collections.abc import Callable, Sequence
-from dataclasses import asdict, dataclass
+from dataclasses import asdict, dataclass, replace
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
@@ -13,17 +13,21 @@ import numpy as np
 from numpy.typing import NDArray
 
 from lattice.errors import LatticeError
+from lattice.geometry.lattice import Lattice
 from lattice.show.progress import header, step_line
 from lattice.solve.newton import Newton, NewtonResult, Step
 from lattice.solve.petsc import start_petsc
 from lattice.solve.registry import make_preconditioner
 from lattice.solve.stop import StopFlag
+from lattice.spectral.transfer import Transfer
+from lattice.spectral.transform import Transform
 from lattice.starts import STARTS
 from lattice.store.runfolder import RunFolder, Summary, peak_memory_mb
 from lattice.store.statefile import write_state
 from lattice.store.statemeta import StateMeta
 from lattice.store.versions import versions
 from lattice.system.system import System
+from lattice.system.unknowns import Values
 
 if TYPE_CHECKING:
     from mpi4py import MPI
@@ -100,47 +104,82 @@ class _Run:
         self.residual_max = self.mean_square = math.nan
         self.system: System
         self.newton: Newton
+        self._coarser: tuple[System, NDArray[np.float64], Values] | None = None
 
     def go(self) -> Outcome:
-        x = self._begin()
-        self.newton = Newton(
-            self.system,
-            make_preconditioner(self.job.solve.preconditioner, self.system, self.job.solve, self.report),
-            self.job.solve,
-            self.stop,
-            self._after_step,
-        )
+        """Solve on every lattice of the nest, the job's own last."""
+        lattices = nested_lattices(self.lattice, self.job.solve.nested)
+        for lattice in lattices[:-1]:
+            self.report(f"nested iteration: {_shape(lattice)} nodes first")
+            x = self._begin(lattice)
+            outcome = self._solve(x, last=False)
+            if outcome is not None:
+                return outcome
+        outcome = self._solve(self._begin(self.lattice), last=True)
+        assert outcome is not None
+        return outcome
+
+    def _solve(self, x: Any, last: bool) -> Outcome | None:
+        """Solve on one lattice; return the outcome if the run ends there."""
+        began, options = time.perf_counter(), self.job.solve
+        made = make_preconditioner(options.preconditioner, self.system, options, self.report)
+        self.newton = Newton(self.system, made, options, self.stop, self._after_step)
+        self.report(header([u.name for u in self.system.unknowns]))
         try:
             result = self.newton.solve(x)
-            return self._finish(x, result)
+            if last or not result.converged:
+                return self._finish(x, result)
+            spent = time.perf_counter() - began
+            self.seconds[f"nested {_shape(self.system.lattice)}"] = spent
+            self.report(f"{_shape(self.system.lattice)} nodes took {spent:.1f} s and {result.linear_iterations} linear iterations")
+            self._coarser = (self.system, self.system.field_of(x), self.system.values_of(x))
+            return None
         finally:
             self.newton.destroy()
             x.destroy()
-            self.system.destroy()
+            if last:
+                self.system.destroy()
 
-    def _begin(self) -> Any:
-        """Make the system and its start; return the vector of unknowns."""
+    def _begin(self, lattice: Lattice) -> Any:
+        """Make the system of a lattice and its start; return the vector of unknowns."""
         job, comm = self.job, self.comm
-        self.system = System(
-            self.law, self.lattice, job.make_values(), job.solve.free or (), job.solve.mean, comm
-        )
-        lattice, unknowns = self.lattice, self.system.blocks.size + len(self.system.unknowns)
+        values = job.make_values()
+        self.system = System(self.law, lattice, values, job.solve.free or (), job.solve.mean, comm)
+        unknowns = self.system.blocks.size + len(self.system.unknowns)
         grid = " x ".join(str(p) for p in self.system.blocks.grid)
         self.report(
-            f"{self.law.title or self.law.name}: {unknowns} unknowns on {lattice.nt} x {lattice.ny} x {lattice.nx} "
-            f"nodes (t, y, x), {comm.size} rank(s) as {grid}"
+            f"{self.law.title or self.law.name}: {unknowns} unknowns on {_shape(lattice)} nodes, "
+            f"{comm.size} rank(s) as {grid} (t, y, x)"
         )
-        start = STARTS[job.start.kind]
-        owned, values = start(
-            job.start, lattice, job.make_values(), self.law, self.system.blocks.block, comm, self.report
-        )
+        owned, values = self._refine() if self._coarser else self._start(lattice)
         x = self.system.vector()
         self.system.pack(owned, values, x)
         self.system.set_reference(x)
-        self.seconds["start"] = time.perf_counter() - self.began
-        self.report(f"start '{job.start.kind}' took {self.seconds['start']:.1f} s")
-        self.report(header([u.name for u in self.system.unknowns]))
         return x
+
+    def _start(self, lattice: Lattice) -> tuple[NDArray[np.float64], Values]:
+        job, began = self.job, time.perf_counter()
+        owned, values = STARTS[job.start.kind](
+            job.start, lattice, job.make_values(), self.law, self.system.blocks.block, self.comm, self.report
+        )
+        self.seconds["start"] = time.perf_counter() - began
+        self.report(f"start '{job.start.kind}' took {self.seconds['start']:.1f} s")
+        return owned, values
+
+    def _refine(self) -> tuple[NDArray[np.float64], Values]:
+        """Return the field solved on the coarser lattice, interpolated spectrally, and free the coarser one."""
+        assert self._coarser is not None
+        system, owned, values = self._coarser
+        coarse, fine = Transform(system.blocks), Transform(self.system.blocks)
+        transfer = Transfer(fine, coarse, (False,) * len(self.law.components))
+        small, large = system.blocks.vector(), self.system.blocks.vector()
+        system.blocks.owned(small)[...] = owned
+        transfer.prolong(small, large, rows=False)
+        refined = self.system.blocks.owned(large).copy()
+        for item in (transfer, coarse, fine, small, large, system):
+            item.destroy()
+        self._coarser = None
+        return refined, values
 
     def _after_step(self, step: Step, x: Any) -> None:
         """Report a step, append it to the folder and write the state."""
@@ -176,12 +215,12 @@ class _Run:
         field = x.getArray(readonly=1)[:count]
         self.residual_max = self.comm.allreduce(float(np.abs(residual).max()), op=MPI.MAX)
         square = self.comm.allreduce(float(field @ field))
-        self.mean_square = square / self.lattice.nodes
+        self.mean_square = square / self.system.lattice.nodes
 
     def _write(self, x: Any, outcome: str) -> None:
         meta = StateMeta.of_law(
             self.law,
-            self.lattice,
+            self.system.lattice,
             self.system.values_of(x),
             free=tuple(u.name for u in self.system.unknowns),
             residual_rms=self.history[-1]["residual_rms"],
@@ -217,7 +256,7 @@ class _Run:
             outcome=outcome,
             reason=result.reason,
             law=self.law.name,
-            lattice=self.lattice,
+            lattice=self.system.lattice,
             unknowns=self.system.blocks.size + len(self.system.unknowns),
             residual_rms=self.history[-1]["residual_rms"],
             residual_max=self.residual_max,
@@ -246,6 +285,26 @@ class _Run:
             plot_state(self.files.state, self.files.picture)
         except LatticeError as error:
             self.report(f"no picture: {error}")
+
+
+def nested_lattices(lattice: Lattice, count: int) -> list[Lattice]:
+    """Return the lattices of a nested iteration, coarsest first: each has half the nodes of the next.
+
+    Examples
+    --------
+    >>> [level.shape for level in nested_lattices(Lattice(nt=64, ny=1, nx=100), 1)]
+    [(32, 1, 50), (64, 1, 100)]
+    """
+    nest = [lattice]
+    for _ in range(count):
+        finer = nest[0]
+        halves = {name: max(1, getattr(finer, name) // 2) for name in ("nt", "ny", "nx")}
+        nest.insert(0, replace(finer, **halves))
+    return nest
+
+
+def _shape(lattice: Lattice) -> str:
+    return " x ".join(str(n) for n, axis in zip(lattice.shape, "tyx", strict=True) if n > 1 or axis == "x")
 
 
 def _words(summary: Summary) -> str:
