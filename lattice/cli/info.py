@@ -9,6 +9,7 @@ from pathlib import Path
 def add_arguments(parser: argparse.ArgumentParser) -> None:
     """Add this command's arguments."""
     parser.add_argument("state", metavar="STATE", type=Path, help="a state file, or the folder of a run")
+    parser.add_argument("--json", action="store_true", help="print everything as JSON, for a script")
 
 
 def run(options: argparse.Namespace) -> int:
@@ -16,7 +17,7 @@ def run(options: argparse.Namespace) -> int:
     from lattice.cli.paths import state_path
 
     state = state_path(options.state)
-    from lattice.show.describe import describe_state
+    from lattice.show.describe import describe_state, state_json
 
-    print(describe_state(state).rstrip())
+    print((state_json if options.json else describe_state)(state).rstrip())
     return 0
