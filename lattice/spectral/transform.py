@@ -6,6 +6,7 @@ mpi4py-fft; no rank gathers a field. Spectra keep the real transform's half of t
 
 from __future__ import annotations
 
+import itertools
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -42,14 +43,20 @@ class Transform:
 
         self.blocks = blocks
         self.shape = tuple(blocks.lattice.shape[a] for a in blocks.axes)
-        if blocks.comm.size > 1 and (len(self.shape) < 2 or blocks.comm.size > min(self.shape[:-1])):
+        own = tuple(blocks.grid[a] for a in blocks.axes)
+        grid = pencil_grid(blocks.comm.size, self.shape, own)
+        if grid is None:
             raise InputError(
                 f"{blocks.comm.size} ranks cannot share the transforms of a lattice of {self.shape} nodes; use "
-                f"at most {min(self.shape[:-1], default=1)} ranks or solve.preconditioner = 'direct'",
+                f"another number of them, at most {most_pencils(self.shape)}, or solve.preconditioner = "
+                "'direct'",
                 key="ranks",
             )
         axes = tuple(range(len(self.shape)))
-        self._plan = PFFT(blocks.comm, (*self.shape, blocks.components), axes=axes, dtype=float)
+        # The grid is given: left to itself, the plan may split the axis of the components, too.
+        self._plan = PFFT(
+            blocks.comm, (*self.shape, blocks.components), axes=axes, dtype=float, grid=(*grid, 1)
+        )
         self._real = np.empty(self._plan.forward.input_array.shape)
         self._spectrum = np.empty(self._plan.forward.output_array.shape, dtype=complex)
         self._mover = _Mover(blocks, self._plan.local_slice(False)[:-1])
@@ -154,6 +161,43 @@ class _Mover:
         if self._scatter is not None:
             self._scatter.destroy()
             self._pencil.destroy()
+
+
+def pencil_grid(ranks: int, shape: tuple[int, ...], blocks: tuple[int, ...]) -> tuple[int, ...] | None:
+    """Return how many ranks share each axis of pencils that are whole along the last; None if none fits.
+
+    The grid of the blocks where it fits, so that nothing needs to be moved; else the most even one.
+
+    Examples
+    --------
+    >>> pencil_grid(4, (24, 30), (2, 2)), pencil_grid(4, (16, 12, 12), (1, 4, 1)), pencil_grid(7, (6, 30), ())
+    ((4, 1), (1, 4, 1), None)
+    """
+    fits = [g for g in _pencil_grids(ranks, len(shape)) if _fits(g, _most_parts(shape))]
+    return blocks if blocks in fits else min(fits, key=lambda g: (max(g), g), default=None)
+
+
+def most_pencils(shape: tuple[int, ...]) -> int:
+    """Return the largest number of ranks for which there is a grid of pencils."""
+    return int(np.prod(_most_parts(shape), dtype=int))
+
+
+def _pencil_grids(ranks: int, axes: int) -> list[tuple[int, ...]]:
+    if axes == 1:
+        return [(1,)] if ranks == 1 else []
+    if axes == 2:
+        return [(ranks, 1)]
+    return [(p, ranks // p, 1) for p in range(1, ranks + 1) if ranks % p == 0]
+
+
+def _fits(grid: tuple[int, ...], most: list[int]) -> bool:
+    return all(parts <= limit for parts, limit in zip(grid[:-1], most, strict=True))
+
+
+def _most_parts(shape: tuple[int, ...]) -> list[int]:
+    """Return for every axis but the last how many ranks may share it: later they share the next one."""
+    sizes = (*shape[:-1], shape[-1] // 2 + 1)
+    return [min(pair) for pair in itertools.pairwise(sizes)]
 
 
 def part_bounds(transform: Transform, comm: MPI.Comm) -> list[tuple[tuple[int, int], ...]]:
