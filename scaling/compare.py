@@ -49,13 +49,16 @@ def measure(size: str, method: str) -> dict[str, Any]:
     names = ("length", "period", "dx", "dt")
     system, x = window_system(case["law"], *(case[n] for n in names), MPI.COMM_WORLD)
     before = _peak_mb()
-    if method == "newton_krylov":
-        row = _scipy_step(system, x)
-    else:
-        row = _petsc_step(size, method, system, x)
+    scipy = method == "newton_krylov"
+    row = _scipy_step(system, x) if scipy else _petsc_step(size, method, system, x)
     return {
-        "size": size, "method": method, "unknowns": x.getSize(), "nodes": list(system.lattice.shape), **row,
-        "memory_before_mb": before, "peak_memory_mb": _peak_mb(),
+        "size": size,
+        "method": method,
+        "unknowns": x.getSize(),
+        "nodes": list(system.lattice.shape),
+        **row,
+        "memory_before_mb": before,
+        "peak_memory_mb": _peak_mb(),
     }
 
 
@@ -80,8 +83,11 @@ def _petsc_step(size: str, method: str, system: Any, x: Any) -> dict[str, Any]:
     assert result is not None
     why = "" if result.converged else f"not at {RTOL:g} after {result.iterations} iterations"
     return {
-        "converged": result.converged, "why": why, "iterations": result.iterations,
-        "set_up_seconds": result.set_up, "solve_seconds": result.solve,
+        "converged": result.converged,
+        "why": why,
+        "iterations": result.iterations,
+        "set_up_seconds": result.set_up,
+        "solve_seconds": result.solve,
         "seconds": result.set_up + result.solve,
     }
 
@@ -107,7 +113,13 @@ def _scipy_step(system: Any, x: Any) -> dict[str, Any]:
     found = start
     try:
         scipy.optimize.newton_krylov(
-            residual, start, iter=1, inner_rtol=RTOL, inner_maxiter=MOST, line_search=None, f_tol=1e-12,
+            residual,
+            start,
+            iter=1,
+            inner_rtol=RTOL,
+            inner_maxiter=MOST,
+            line_search=None,
+            f_tol=1e-12,
             callback=lambda u, r: None,
         )
     except scipy.optimize.NoConvergence as error:
@@ -116,12 +128,15 @@ def _scipy_step(system: Any, x: Any) -> dict[str, Any]:
         return {"converged": False, "why": f"SciPy: {error}", "residual_calls": calls}
     seconds = time.perf_counter() - began
     left = float(np.linalg.norm(residual(found)))
-    # The exact step of this start raises or lowers the residual as Newton does; what shows failure is that the
-    # inner solve stops at its iteration limit, which is many residual calls.
+    # The step may raise or lower the residual, as Newton's does; what shows failure is that the inner solve
+    # stops at its iteration limit, which is many residual calls.
     limited = calls > MOST
     return {
-        "converged": not limited, "why": f"inner solve at its limit, {calls} residual calls" if limited else "",
-        "residual_calls": calls, "residual_ratio": left / first, "seconds": seconds,
+        "converged": not limited,
+        "why": f"inner solve at its limit, {calls} residual calls" if limited else "",
+        "residual_calls": calls,
+        "residual_ratio": left / first,
+        "seconds": seconds,
     }
 
 
@@ -131,7 +146,9 @@ def _peak_mb() -> float:
 
 def main() -> int:
     """Run every method on every size in a process of its own; print a table and write JSON."""
-    parser = argparse.ArgumentParser(description=__doc__, formatter_class=argparse.RawDescriptionHelpFormatter)
+    parser = argparse.ArgumentParser(
+        description=__doc__, formatter_class=argparse.RawDescriptionHelpFormatter
+    )
     parser.add_argument("--sizes", default="1d-230k,2d-70k")
     parser.add_argument("--methods", default=",".join(METHODS))
     parser.add_argument("--limit", type=float, default=900.0, help="seconds for one process")

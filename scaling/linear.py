@@ -24,8 +24,15 @@ class LinearResult:
 def solve_options(**coarse: Any) -> Any:
     """Return a solve section for a preconditioner; `coarse` overrides its coarse keys."""
     defaults: dict[str, Any] = {
-        "nt": None, "nx": None, "ny": None, "order": None, "solver": "direct", "smoother": "auto",
-        "shift": 1.0, "slabs": None, "slab_overlap": 2,
+        "nt": None,
+        "nx": None,
+        "ny": None,
+        "order": None,
+        "solver": "direct",
+        "smoother": "auto",
+        "shift": 1.0,
+        "slabs": None,
+        "slab_overlap": 2,
     }
     patches = SimpleNamespace(nt=None, ny=None, nx=None, overlap=4)
     return SimpleNamespace(coarse=SimpleNamespace(**(defaults | coarse)), patches=patches)
@@ -97,7 +104,9 @@ def newton_step(system: System, x: Any, made: Any, rtol: float, most: int = 300)
     set_up = time.perf_counter() - began
     right, step = system.vector(), system.vector()
     system.residual(x, right)
-    matrix = PETSc.Mat().createPython(((right.getLocalSize(), right.getSize()),) * 2, _Shell(system), system.comm)
+    matrix = PETSc.Mat().createPython(
+        ((right.getLocalSize(), right.getSize()),) * 2, _Shell(system), system.comm
+    )
     matrix.setUp()
     ksp = PETSc.KSP().create(system.comm)
     ksp.setOperators(matrix)

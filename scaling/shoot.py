@@ -62,7 +62,11 @@ def by_lattice(state: Any, field: Any) -> dict[str, Any]:
     system = System(law, meta.lattice, meta.values, free, {}, MPI.COMM_SELF)
     options = solve_options()
     options.__dict__.update(
-        residual_rms=1e-10, newton_steps=NEWTON_STEPS, linear_rtol=None, linear_iterations=300, line_search=True
+        residual_rms=1e-10,
+        newton_steps=NEWTON_STEPS,
+        linear_rtol=None,
+        linear_iterations=300,
+        line_search=True,
     )
     x = system.vector()
     system.pack(field, meta.values, x)
@@ -73,8 +77,10 @@ def by_lattice(state: Any, field: Any) -> dict[str, Any]:
         solver = Newton(system, made, options, stop, lambda step, at: None)
         result = solver.solve(x)
     return {
-        "converged": result.converged, "newton_steps": result.steps[-1].number,
-        "residual": result.steps[-1].residual_rms, "seconds": time.perf_counter() - began,
+        "converged": result.converged,
+        "newton_steps": result.steps[-1].number,
+        "residual": result.steps[-1].residual_rms,
+        "seconds": time.perf_counter() - began,
     }
 
 
@@ -120,7 +126,13 @@ def by_shooting(state: Any, field: Any, segments: int) -> dict[str, Any]:
     began, why, found = time.perf_counter(), "", first
     try:
         found = scipy.optimize.newton_krylov(
-            mismatch, first, method="gmres", inner_maxiter=INNER, maxiter=NEWTON_STEPS, f_tol=WANTED, line_search="armijo"
+            mismatch,
+            first,
+            method="gmres",
+            inner_maxiter=INNER,
+            maxiter=NEWTON_STEPS,
+            f_tol=WANTED,
+            line_search="armijo",
         )
     except scipy.optimize.NoConvergence as error:
         found, why = np.asarray(error.args[0]), f"not at {WANTED:g} after {NEWTON_STEPS} Newton steps"
@@ -131,14 +143,22 @@ def by_shooting(state: Any, field: Any, segments: int) -> dict[str, Any]:
         left = float(np.abs(mismatch(found)).max())
     except Exception:  # noqa: BLE001 - as above
         left = float("nan")
-    return {"converged": bool(left <= WANTED), "why": why, "marches": calls, "residual": left, "seconds": seconds}
+    return {
+        "converged": bool(left <= WANTED),
+        "why": why,
+        "marches": calls,
+        "residual": left,
+        "seconds": seconds,
+    }
 
 
 def main() -> int:
     """Try all states; print a table and write JSON."""
     from scaling.machine import describe
 
-    parser = argparse.ArgumentParser(description=__doc__, formatter_class=argparse.RawDescriptionHelpFormatter)
+    parser = argparse.ArgumentParser(
+        description=__doc__, formatter_class=argparse.RawDescriptionHelpFormatter
+    )
     parser.add_argument("states", nargs="+")
     parser.add_argument("--segments", default="1,4,16")
     parser.add_argument("--out", default="scaling/results/shoot.json")
@@ -150,7 +170,9 @@ def main() -> int:
         rows.append({"method": "lattice", **box, **by_lattice(state, field)})
         _print(rows[-1])
         for segments in (int(s) for s in options.segments.split(",")):
-            rows.append({"method": f"shooting, {segments} segment(s)", **box, **by_shooting(state, field, segments)})
+            rows.append(
+                {"method": f"shooting, {segments} segment(s)", **box, **by_shooting(state, field, segments)}
+            )
             _print(rows[-1])
     target = Path(options.out)
     target.parent.mkdir(parents=True, exist_ok=True)

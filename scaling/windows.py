@@ -17,12 +17,19 @@ def even(number: float) -> int:
     return max(8, 2 * round(number / 2))
 
 
-def window_lattice(dimensions: int, length: float, period: float, dx: float, dt: float, order: int = 4) -> Lattice:
+def window_lattice(
+    dimensions: int, length: float, period: float, dx: float, dt: float, order: int = 4
+) -> Lattice:
     """Return the lattice of a box with spacings as near as even counts allow."""
     nodes = even(length / dx)
     return Lattice(
-        nt=even(period / dt), ny=nodes if dimensions == 2 else 1, nx=nodes, dimensions=dimensions,
-        order_t=4, order_x=order, order_y=order,
+        nt=even(period / dt),
+        ny=nodes if dimensions == 2 else 1,
+        nx=nodes,
+        dimensions=dimensions,
+        order_t=4,
+        order_x=order,
+        order_y=order,
     )
 
 
@@ -42,7 +49,11 @@ def window_system(
     lattice = window_lattice(law.dimensions, length, period, dx, dt)
     axes = "xy"[: law.dimensions]
     values = {"period": period, **law.defaults, **(parameters or {})}
-    values |= {f"{kind}_{axis}": (length if kind == "length" else 0.0) for kind in ("length", "drift") for axis in axes}
+    values |= {
+        f"{kind}_{axis}": (length if kind == "length" else 0.0)
+        for kind in ("length", "drift")
+        for axis in axes
+    }
     values |= {f"source_{c}": 0.0 for c in law.components}
     free = ["period", *(f"drift_{axis}" for axis in axes if law.symmetries.homogeneous[axis])]
     if law.symmetries.rotations:

@@ -21,6 +21,7 @@ if TYPE_CHECKING:
     from mpi4py import MPI
 
 Array = NDArray[np.float64]
+Indices = NDArray[np.int64]
 
 
 def process_grid(ranks: int, lattice: Lattice, halo: int) -> tuple[int, int, int] | None:
@@ -80,7 +81,7 @@ class Blocks:
         Values per node.
     halo : int
         Width of the halo, the same in every axis.
-    comm : MPI.Comm
+    comm : MPI.Intracomm
 
     Raises
     ------
@@ -88,7 +89,7 @@ class Blocks:
         If the ranks cannot share the lattice.
     """
 
-    def __init__(self, lattice: Lattice, components: int, halo: int, comm: MPI.Comm) -> None:
+    def __init__(self, lattice: Lattice, components: int, halo: int, comm: MPI.Intracomm) -> None:
         from petsc4py import PETSc
 
         self.lattice, self.components, self.halo, self.comm = lattice, components, halo, comm
@@ -113,6 +114,7 @@ class Blocks:
             comm=comm,
         )
         self.block = self._own_block()
+        self._axis_ends = self._ends()
         self.padded_shape = self._padded_shape()
         self.shape = (*self.block.shape, components)
 
@@ -124,6 +126,13 @@ class Blocks:
         ranges.update(zip(reversed(self.axes), self.dm.getRanges(), strict=True))
         bounds = [int(bound) for axis in range(3) for bound in ranges[axis]]
         return Block(*bounds)
+
+    def _ends(self) -> list[Indices]:
+        """Return for every axis the first node behind each part of the grid of ranks."""
+        sizes: list[list[int]] = [[1], [1], [1]]
+        for axis, parts in zip(reversed(self.axes), self.dm.getOwnershipRanges(), strict=True):
+            sizes[axis] = [int(n) for n in parts]
+        return [np.cumsum(parts) for parts in sizes]
 
     def _padded_shape(self) -> tuple[int, int, int, int]:
         sizes = [1, 1, 1]
@@ -151,6 +160,23 @@ class Blocks:
         nodes = self.lattice.shape[axis]
         low = (self.block.y0, self.block.x0)[axis - 1] - self.halos[axis]
         return (low + np.arange(self.padded_shape[axis])) * (length / nodes)
+
+    def node_numbers(self, t: Indices, y: Indices, x: Indices) -> Indices:
+        """Return the places of nodes in PETSc's order of nodes, which goes rank by rank.
+
+        Not collective. Indices broadcast against each other and must lie inside the lattice.
+        """
+        starts, shape = [], []
+        for axis, index in enumerate((t, y, x)):
+            ends = self._axis_ends[axis]
+            part = np.searchsorted(ends, index, side="right")
+            sizes = np.diff(ends, prepend=0)
+            starts.append((part, np.asarray(index) - (ends - sizes)[part]))
+            shape.append(sizes)
+        (pt, dt), (py, dy), (px, dx) = starts
+        counts = shape[0][:, None, None] * shape[1][:, None] * shape[2]
+        before = (np.cumsum(counts.reshape(-1)) - counts.reshape(-1)).reshape(counts.shape)
+        return np.asarray(before[pt, py, px] + (dt * shape[1][py] + dy) * shape[2][px] + dx)
 
     def vector(self) -> Any:
         """Return a new field vector. Collective; the caller destroys it."""

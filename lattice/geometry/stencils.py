@@ -10,7 +10,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from fractions import Fraction
-from functools import lru_cache
+from functools import cache
 
 SPACE_ORDERS = (2, 4, 6, 8)
 TIME_ORDERS = (2, 4, 6)
@@ -61,7 +61,7 @@ def half_width(derivative: int, order: int) -> int:
     return 0 if derivative == 0 else (derivative + 1) // 2 + order // 2 - 1
 
 
-@lru_cache(maxsize=None)
+@cache
 def central(derivative: int, order: int) -> tuple[Fraction, ...]:
     """Return central weights for offsets `-half_width .. half_width`, unit spacing.
 
@@ -74,7 +74,7 @@ def central(derivative: int, order: int) -> tuple[Fraction, ...]:
     return weights(derivative, [Fraction(k) for k in range(-reach, reach + 1)], Fraction(0))
 
 
-@lru_cache(maxsize=None)
+@cache
 def staggered(derivative: int, order: int) -> tuple[Fraction, ...]:
     """Return weights at the midpoint -1/2 for offsets `-order/2 .. order/2 - 1`, unit spacing.
 

@@ -19,6 +19,10 @@ X, Y = sympy.Symbol("x", real=True), sympy.Symbol("y", real=True)
 LENGTHS = {"length_x": 0, "length_y": 1}
 
 
+BySymbol = Callable[[sympy.Symbol], sympy.Expr]
+ByAtom = Callable[[sympy.Expr], sympy.Expr]
+
+
 @dataclass(frozen=True)
 class Output:
     """One output component of a form.
@@ -64,7 +68,11 @@ class Form:
 
 
 def make_form(
-    law: Law, name: str, kind: str, fields: tuple[tuple[sympy.Symbol, ...], ...], outputs: list[Output],
+    law: Law,
+    name: str,
+    kind: str,
+    fields: tuple[tuple[sympy.Symbol, ...], ...],
+    outputs: list[Output],
     scalars: tuple[str, ...],
 ) -> Form:
     """Return a form whose expressions are sums with constant factors pulled out of every `Deriv`."""
@@ -191,24 +199,24 @@ def scalar_form(law: Law, name: str) -> Form:
     a coordinate x changes at the rate x/length.
     """
     residual = residual_form(law)
-    outputs = []
-    for o in residual.outputs:
-        if name in LENGTHS:
-            axis = LENGTHS[name]
-            length = sympy.Symbol(name, real=True)
-            derived = differentiate(
-                o.expression,
-                lambda symbol, axis=axis, length=length: symbol / length * int(symbol == (X, Y)[axis]),
-                lambda atom, axis=axis, length=length: -atom.args[1 + axis] / length * atom,
-            )
-        else:
-            wanted = sympy.Symbol(name, real=True)
-            derived = differentiate(
-                o.expression, lambda symbol, wanted=wanted: sympy.Integer(int(symbol == wanted)), None
-            )
-        outputs.append(Output(derived, o.evolving))
+    by_symbol, by_atom = _by_length(name) if name in LENGTHS else _by_name(name)
+    outputs = [Output(differentiate(o.expression, by_symbol, by_atom), o.evolving) for o in residual.outputs]
     scalars = (*residual.scalars, *LENGTHS)
     return make_form(law, f"by_{name}", "gather", residual.fields, outputs, scalars)
+
+
+def _by_name(name: str) -> tuple[BySymbol, ByAtom | None]:
+    wanted = sympy.Symbol(name, real=True)
+    return lambda symbol: sympy.Integer(int(symbol == wanted)), None
+
+
+def _by_length(name: str) -> tuple[BySymbol, ByAtom | None]:
+    axis, length = LENGTHS[name], sympy.Symbol(name, real=True)
+
+    def by_symbol(symbol: sympy.Symbol) -> sympy.Expr:
+        return symbol / length if symbol == (X, Y)[axis] else sympy.Integer(0)
+
+    return by_symbol, lambda atom: -atom.args[1 + axis] / length * atom
 
 
 def rate_form(law: Law) -> Form:
@@ -221,22 +229,14 @@ def rate_form(law: Law) -> Form:
     return make_form(law, "rate", "gather", (state,), outputs, ())
 
 
-def slope_form(law: Law, axis: str) -> Form:
-    """Return the form of the first derivative of every component along "x" or "y", at the nodes."""
-    state = field_symbols(law, "u")
-    orders = (1, 0) if axis == "x" else (0, 1)
-    outputs = [Output(Deriv(symbol, *orders), False) for symbol in state]
-    return make_form(law, f"slope_{axis}", "gather", (state,), outputs, ())
-
-
 def _along(expression: sympy.Expr, along: dict[sympy.Symbol, sympy.Symbol]) -> sympy.Expr:
     return differentiate(expression, lambda symbol: along.get(symbol, sympy.Integer(0)), None)
 
 
 def differentiate(
     expression: sympy.Expr,
-    of_symbol: Callable[[sympy.Symbol], sympy.Expr],
-    of_atom: Callable[[sympy.Expr], sympy.Expr] | None,
+    of_symbol: BySymbol,
+    of_atom: ByAtom | None,
 ) -> sympy.Expr:
     """Differentiate through `Deriv` by the chain rule.
 
@@ -288,9 +288,7 @@ def _outer_atoms(expression: sympy.Expr) -> list[sympy.Expr]:
     return sorted(found, key=sympy.default_sort_key)
 
 
-def _transpose(
-    expression: sympy.Expr, weight: sympy.Expr, totals: dict[sympy.Symbol, sympy.Expr]
-) -> None:
+def _transpose(expression: sympy.Expr, weight: sympy.Expr, totals: dict[sympy.Symbol, sympy.Expr]) -> None:
     """Add to `totals[v]` the transpose of an expression linear in the symbols v, applied to `weight`."""
     for term in sympy.Add.make_args(expression):
         linear = [f for f in sympy.Mul.make_args(term) if f.free_symbols & totals.keys()]

@@ -80,5 +80,8 @@ def space_stencil(a: int, b: int, order_x: int, order_y: int) -> dict[tuple[int,
     wx, wy = central(a, order_x), central(b, order_y)
     cx, cy = len(wx) // 2, len(wy) // 2
     return {
-        (j - cy, i - cx): float(q * p) for j, q in enumerate(wy) for i, p in enumerate(wx) if p != 0 and q != 0
+        (j - cy, i - cx): float(q * p)
+        for j, q in enumerate(wy)
+        for i, p in enumerate(wx)
+        if p != 0 and q != 0
     }

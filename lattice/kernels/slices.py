@@ -12,7 +12,7 @@ import numpy as np
 import sympy
 from numpy.typing import NDArray
 
-from lattice.kernels.forms import X, Y, Form
+from lattice.kernels.forms import Form, X, Y
 from lattice.kernels.scheme import Scheme, space_stencil, time_weights
 from lattice.laws.law import Deriv
 
@@ -108,12 +108,16 @@ def evaluate(
             out[..., c] = total[scheme.halo_t :][:levels] if form.kind == "gather" else total
             continue
         if form.kind == "gather":
-            total = sum(w * total[low + k :][:levels] for k, w in enumerate(midpoint))
+            parts = (w * total[low + k :][:levels] for k, w in enumerate(midpoint))
+            total = sum(parts, np.zeros(1))
         if output.differenced is not None:
             whole = fields[-1] if form.kind == "adjoint" else fields[_field_of(form, output.differenced)]
-            total = total + _time_difference(
-                whole[..., _component_of(form, output.differenced)], form.kind, scheme, difference, levels
-            )[:, scheme.halo_y :][:, :rows][:, :, scheme.halo_x :][:, :, :columns]
+            total = (
+                total
+                + _time_difference(
+                    whole[..., _component_of(form, output.differenced)], form.kind, scheme, difference, levels
+                )[:, scheme.halo_y :][:, :rows][:, :, scheme.halo_x :][:, :, :columns]
+            )
         out[..., c] = total
 
 
@@ -125,9 +129,7 @@ def _component_of(form: Form, symbol: sympy.Symbol) -> int:
     return form.fields[_field_of(form, symbol)].index(symbol)
 
 
-def _time_difference(
-    padded: Array, kind: str, scheme: Scheme, difference: list[float], levels: int
-) -> Array:
+def _time_difference(padded: Array, kind: str, scheme: Scheme, difference: list[float], levels: int) -> Array:
     """Return D u, or D^T w for an adjoint, on every padded row of the owned levels."""
     start = scheme.halo_t - scheme.below
     if kind == "adjoint":

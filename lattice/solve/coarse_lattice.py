@@ -87,22 +87,23 @@ def choose(system: System, transform: Transform, constant: ConstantPart, options
     gain = fine.nodes / coarse.nodes
     if gain < LEAST_GAIN:
         raise InputError(
-            f"must be 'direct' here: the coarse lattice that carries this state's modes, {_text(coarse)}, is hardly "
-            f"coarser than the lattice itself, {_text(fine)}; refine the lattice, give solve.coarse.nt and nx, or use "
-            "'direct'",
+            f"must be 'direct' here: the coarse lattice that carries this state's modes, {_text(coarse)}, is"
+            f" hardly coarser than the lattice itself, {_text(fine)}; refine the lattice, give"
+            " solve.coarse.nt and nx, or use 'direct'",
             key="solve.preconditioner",
         )
     beyond = max(_beyond(tails[name], n) for name, n in counts.items() if name in tails)
     why = (
         "beyond it the constant-coefficient part rules"
         if ruled
-        else f"at the lattice's largest wavenumber fluctuating coefficients are still {ratio_x:.2g} of the constant part"
+        else "at the lattice's largest wavenumber fluctuating coefficients are still"
+        f" {ratio_x:.2g} of the constant part"
     )
     return Choice(
         coarse,
         smoother,
-        f"coarse lattice {_text(coarse)} of order {order} for {_text(fine)}: {beyond:.1g} of the energy lies beyond its "
-        f"waves; smoother {smoother}: {why}",
+        f"coarse lattice {_text(coarse)} of order {order} for {_text(fine)}: {beyond:.1g} of the energy lies"
+        f" beyond its waves; smoother {smoother}: {why}",
     )
 
 
@@ -165,7 +166,9 @@ def _axis_count(
     return min(nodes, 2 * max(active, needed, 2))
 
 
-def _ratios(system: System, constant: ConstantPart) -> tuple[NDArray[np.float64], NDArray[np.float64], NDArray[np.float64]]:
+def _ratios(
+    system: System, constant: ConstantPart
+) -> tuple[NDArray[np.float64], NDArray[np.float64], NDArray[np.float64]]:
     """Return wavenumbers up to the lattice's largest, the fluctuating part and the constant part there."""
     spacing = system.operator.geometry(system.operator.values).dx
     waves = np.linspace(0.0, np.pi / spacing, 400)[1:]

@@ -22,7 +22,7 @@ class _Tangent:
     def mult(self, matrix: Any, v: Any, out: Any) -> None:
         self.system.tangent(v, out)
 
-    def multTranspose(self, matrix: Any, w: Any, out: Any) -> None:  # noqa: N802 - petsc4py's name
+    def multTranspose(self, matrix: Any, w: Any, out: Any) -> None:
         self.system.adjoint(w, out)
 
 
@@ -33,7 +33,7 @@ class _PC:
     def apply(self, pc: Any, r: Any, y: Any) -> None:
         self.bordering.apply(r, y)
 
-    def applyTranspose(self, pc: Any, r: Any, y: Any) -> None:  # noqa: N802 - petsc4py's name
+    def applyTranspose(self, pc: Any, r: Any, y: Any) -> None:
         self.bordering.apply_transpose(r, y)
 
 
@@ -54,7 +54,9 @@ class PatchedCoarse:
         from petsc4py import PETSc
 
         self.system = system
-        self._bordering = Bordering(system, Patches(system, block_patches(system, options.patches), "coarse_patches_"))
+        self._bordering = Bordering(
+            system, Patches(system, block_patches(system, options.patches), "coarse_patches_")
+        )
         vector = system.vector()
         size = (vector.getLocalSize(), vector.getSize())
         vector.destroy()
@@ -89,7 +91,9 @@ class PatchedCoarse:
     def _check(self) -> None:
         reason = self._ksp.getConvergedReason()
         if reason < 0 and reason != -3:  # at the most iterations the outer method goes on with what there is
-            raise LatticeError(f"the patched coarse solve failed (PETSc KSP reason {reason}); use solver = 'direct'")
+            raise LatticeError(
+                f"the patched coarse solve failed (PETSc KSP reason {reason}); use solver = 'direct'"
+            )
 
     def destroy(self) -> None:
         """Free everything. Collective."""

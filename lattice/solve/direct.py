@@ -120,11 +120,19 @@ def _explain(status: dict[str, int], prefix: str) -> str:
     estimate = f"{status['INFOG(17)']} MB in all, {status['INFOG(16)']} MB on the fullest rank"
     numbers = f"MUMPS INFOG(1) = {code}, INFOG(2) = {status['INFOG(2)']}"
     if code in WORKSPACE_CODES:
-        advice = f"its workspace was still too small at {status['ICNTL(14)']} percent extra; try '-- -{prefix}mat_mumps_icntl_14 400'"
+        advice = (
+            f"its workspace was still too small at {status['ICNTL(14)']} percent extra; try"
+            f" '-- -{prefix}mat_mumps_icntl_14 400'"
+        )
     elif code in (-13, -19):
-        advice = f"memory ran out (estimate {estimate}); use more ranks or nodes, a smaller lattice, or another preconditioner"
+        advice = (
+            f"memory ran out (estimate {estimate}); use more ranks or nodes, a smaller lattice, or another"
+            " preconditioner"
+        )
     elif code == -10:
-        advice = "the matrix is singular or not finite; start from another field or free the scalars that are held"
+        advice = (
+            "the matrix is singular or not finite; start from another field or free the scalars that are held"
+        )
     else:
         advice = f"see INFOG in the MUMPS users' guide (estimate {estimate})"
     return f"LU factorisation failed ({numbers}): {advice}"

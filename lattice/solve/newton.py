@@ -76,7 +76,7 @@ class _Jacobian:
     def mult(self, matrix: Any, v: Any, out: Any) -> None:
         self.system.tangent(v, out)
 
-    def multTranspose(self, matrix: Any, w: Any, out: Any) -> None:  # noqa: N802 - petsc4py's name
+    def multTranspose(self, matrix: Any, w: Any, out: Any) -> None:
         self.system.adjoint(w, out)
 
 
@@ -89,7 +89,7 @@ class _PythonPC:
     def apply(self, pc: Any, r: Any, y: Any) -> None:
         self.made.apply(r, y)
 
-    def applyTranspose(self, pc: Any, r: Any, y: Any) -> None:  # noqa: N802 - petsc4py's name
+    def applyTranspose(self, pc: Any, r: Any, y: Any) -> None:
         self.made.apply_transpose(r, y)
 
 

@@ -18,7 +18,9 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 from numpy.typing import NDArray
 
-from lattice.solve.direct import lu_package
+from lattice.errors import FactorisationError
+from lattice.solve.direct import Factorisation
+from lattice.store.agreement import raise_together
 from lattice.system.assembly import AssembledJacobian, rescale_gauge
 
 if TYPE_CHECKING:
@@ -80,90 +82,125 @@ def _cut(bounds: Span, size: int | None) -> list[Span]:
 class Patches:
     """Restricted additive Schwarz with LU on every patch.
 
+    Each patch solves for its own nodes and its overlap, and keeps the values of its own nodes; the
+    transpose takes the residual of its own nodes and keeps all values.
+
     Parameters
     ----------
     system : System
     patches : list of Patch
-        This rank's, at least one.
+        This rank's, at least one. Own nodes of all patches together are the lattice.
     prefix : str
         Of its options in PETSc's database; the patches' solvers have it with `sub_` appended.
     """
 
     def __init__(self, system: System, patches: list[Patch], prefix: str = "patches_") -> None:
-        self.system, self.patches, self.prefix = system, patches, prefix
-        self._assembled = AssembledJacobian(system.operator)
-        self._pc: Any = None
+        from mpi4py import MPI
+        from petsc4py import PETSc
+
+        self.system, self.patches = system, patches
         self.pins: list[tuple[int, float]] = []
+        self._assembled = AssembledJacobian(system.operator)
+        self._rows = [self._numbers(patch.spans, patch.overlaps) for patch in patches]
+        own = [self._numbers(patch.spans, (0, 0, 0)) for patch in patches]
+        self._masks = [np.isin(rows, mine) for rows, mine in zip(self._rows, own, strict=True)]
+        self._solvers = [Factorisation(f"{prefix}sub_", MPI.COMM_SELF) for _ in patches]
+        self._sets = [PETSc.IS().createGeneral(rows, comm=PETSc.COMM_SELF) for rows in self._rows]
+        self._right = [PETSc.Vec().createSeq(rows.size) for rows in self._rows]
+        self._left = [PETSc.Vec().createSeq(rows.size) for rows in self._rows]
+        self._gathered = PETSc.Vec().createSeq(sum(rows.size for rows in self._rows))
+        self._scatter = self._make_scatter()
+        self._matrices: list[Any] = []
+
+    def _make_scatter(self) -> Any:
+        """Return the scatter from a field vector to all of this rank's patches, one after another."""
+        from petsc4py import PETSc
+
+        rows = np.concatenate(self._rows)
+        source = PETSc.IS().createGeneral(rows, comm=PETSc.COMM_SELF)
+        target = PETSc.IS().createStride(rows.size, 0, 1, comm=PETSc.COMM_SELF)
+        field = self.system.blocks.vector()
+        scatter = PETSc.Scatter().create(field, source, self._gathered, target)
+        for item in (field, source, target):
+            item.destroy()
+        return scatter
 
     def update(self) -> None:
-        """Assemble and factorise every patch. Collective."""
+        """Assemble the Jacobian and factorise every patch. Collective.
+
+        Raises
+        ------
+        FactorisationError
+            On every rank, if a patch cannot be factorised on any.
+        """
         matrix = self._assembled.update()
-        if self._pc is None:
-            self._pc = self._make(matrix)
-        self._pc.setOperators(matrix)
-        self._pc.setUp()
+        for old in self._matrices:
+            old.destroy()
+        self._matrices = matrix.createSubMatrices(self._sets)
+        failure: FactorisationError | None = None
+        for solver, part in zip(self._solvers, self._matrices, strict=True):
+            try:
+                solver.factor(part)
+            except FactorisationError as error:
+                failure = error
+        raise_together(self.system.operator.comm, failure)
 
-    def _make(self, matrix: Any) -> Any:
+    def _numbers(self, spans: tuple[Span, Span, Span], overlaps: tuple[int, int, int]) -> NDArray[np.int32]:
+        """Return the numbers of a patch's unknowns in PETSc's order, wrapped around the axes, sorted."""
         from petsc4py import PETSc
 
-        pc = PETSc.PC().create(self.system.comm)
-        pc.setOptionsPrefix(self.prefix)
-        pc.setOperators(matrix)
-        pc.setType("asm")
-        pc.setASMType(PETSc.PC.ASMType.RESTRICT)
-        inner, outer = self._index_sets()
-        pc.setASMLocalSubdomains(len(outer), outer, inner)
-        options = PETSc.Options(f"{self.prefix}sub_")
-        package = lu_package(1)
-        defaults = {"ksp_type": "preonly", "pc_type": "lu", "pc_factor_mat_solver_type": package}
-        if package != "mumps":
-            defaults["pc_factor_shift_type"] = "nonzero"
-        for name, value in defaults.items():
-            if not options.hasName(name):
-                options.setValue(name, value)
-        pc.setFromOptions()
-        return pc
-
-    def _index_sets(self) -> tuple[list[Any], list[Any]]:
-        """Return PETSc index sets of this rank's patches without and with their overlap."""
-        from petsc4py import PETSc
-
-        inner, outer = [], []
-        ordering = self.system.blocks.dm.getAO()
-        for patch in self.patches:
-            for sets, overlaps in ((inner, (0, 0, 0)), (outer, patch.overlaps)):
-                natural = self._natural(patch.spans, overlaps).astype(PETSc.IntType)
-                rows = np.sort(ordering.app2petsc(natural))
-                sets.append(PETSc.IS().createGeneral(rows, comm=PETSc.COMM_SELF))
-        return inner, outer
-
-    def _natural(self, spans: tuple[Span, Span, Span], overlaps: tuple[int, int, int]) -> NDArray[np.int64]:
-        """Return the lattice-order numbers of all unknowns of a patch, wrapped around the axes."""
         axes = []
         for (low, high), reach, nodes in zip(spans, overlaps, self.system.lattice.shape, strict=True):
-            axes.append(np.unique(np.arange(low - reach, high + reach) % nodes) if nodes > 1 else np.zeros(1, int))
+            wrapped = np.unique(np.arange(low - reach, high + reach) % nodes)
+            axes.append(wrapped if nodes > 1 else np.zeros(1, dtype=int))
         t, y, x = np.ix_(*axes)
         components = self.system.blocks.components
-        nodes = (t * self.system.lattice.ny + y) * self.system.lattice.nx + x
-        return np.asarray((nodes[..., None] * components + np.arange(components)).reshape(-1))
+        places = self.system.blocks.node_numbers(t, y, x)
+        numbers = (places[..., None] * components + np.arange(components)).reshape(-1)
+        return np.sort(numbers).astype(PETSc.IntType)
 
     def apply(self, r: Any, y: Any) -> None:
         """Set `y` to the sum of all patch solves, each restricted to its own nodes. Collective."""
-        self._pc.apply(r, y)
+        self._solve(r, y, transpose=False)
         rescale_gauge(self.system.operator, y)
 
     def apply_transpose(self, r: Any, y: Any) -> None:
         """Set `y` to the transpose. Collective."""
         scaled = r.copy()
         rescale_gauge(self.system.operator, scaled)
-        self._pc.applyTranspose(scaled, y)
+        self._solve(scaled, y, transpose=True)
         scaled.destroy()
 
+    def _solve(self, r: Any, y: Any, transpose: bool) -> None:
+        from petsc4py import PETSc
+
+        self._scatter.begin(r, self._gathered)
+        self._scatter.end(r, self._gathered)
+        gathered = self._gathered.getArray()
+        first = 0
+        for right, left, mask, solver in zip(
+            self._right, self._left, self._masks, self._solvers, strict=True
+        ):
+            part = slice(first, first + mask.size)
+            right.getArray()[:] = gathered[part] * mask if transpose else gathered[part]
+            solver.solve(right, left, transpose)
+            found = left.getArray(readonly=1)
+            gathered[part] = found if transpose else found * mask
+            first += mask.size
+        del gathered
+        y.set(0.0)
+        add, back = PETSc.InsertMode.ADD_VALUES, PETSc.ScatterMode.REVERSE
+        self._scatter.begin(self._gathered, y, addv=add, mode=back)
+        self._scatter.end(self._gathered, y, addv=add, mode=back)
+
     def destroy(self) -> None:
-        """Free patches and matrix. Collective."""
-        if self._pc is not None:
-            self._pc.destroy()
-        self._assembled.destroy()
+        """Free factors, matrices and vectors. Collective."""
+        for item in (
+            *(self._solvers, self._matrices, self._sets, self._right, self._left),
+            *([self._gathered], [self._scatter], [self._assembled]),
+        ):
+            for part in item:
+                part.destroy()
 
 
 class RankPatches(Patches):

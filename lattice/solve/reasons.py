@@ -24,7 +24,8 @@ def nonlinear_text(reason: int) -> str:
 def linear_text(reason: int) -> str:
     """Return in words why a linear solve failed."""
     texts = {
-        -3: "it reached the largest number of iterations; raise solve.linear_iterations or change the preconditioner",
+        -3: "it reached the largest number of iterations; raise solve.linear_iterations or change the"
+        " preconditioner",
         -4: "it diverged",
         -5: "it broke down",
         -9: "its residual is not finite",

@@ -131,7 +131,10 @@ class _Run:
                 return self._finish(x, result)
             spent = time.perf_counter() - began
             self.seconds[f"nested {_shape(self.system.lattice)}"] = spent
-            self.report(f"{_shape(self.system.lattice)} nodes took {spent:.1f} s and {result.linear_iterations} linear iterations")
+            self.report(
+                f"{_shape(self.system.lattice)} nodes took {spent:.1f} s and"
+                f" {result.linear_iterations} linear iterations"
+            )
             self._coarser = (self.system, self.system.field_of(x), self.system.values_of(x))
             return None
         finally:
@@ -167,7 +170,7 @@ class _Run:
         return owned, values
 
     def _refine(self) -> tuple[NDArray[np.float64], Values]:
-        """Return the field solved on the coarser lattice, interpolated spectrally, and free the coarser one."""
+        """Return the field solved on the coarser lattice, interpolated; free the coarser system."""
         assert self._coarser is not None
         system, owned, values = self._coarser
         coarse, fine = Transform(system.blocks), Transform(self.system.blocks)
@@ -189,9 +192,7 @@ class _Run:
         memory = peak_memory_mb(self.comm)
         free = {u.name: values[u.name] for u in self.system.unknowns}
         elapsed = time.perf_counter() - self.began
-        self.report(
-            step_line(step.number, step.residual_rms, free, step.linear_iterations, elapsed, memory)
-        )
+        self.report(step_line(step.number, step.residual_rms, free, step.linear_iterations, elapsed, memory))
         entry = {
             "step": step.number,
             "residual_rms": step.residual_rms,

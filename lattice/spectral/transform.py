@@ -47,8 +47,8 @@ class Transform:
         grid = pencil_grid(blocks.comm.size, self.shape, own)
         if grid is None:
             raise InputError(
-                f"{blocks.comm.size} ranks cannot share the transforms of a lattice of {self.shape} nodes; use "
-                f"another number of them, at most {most_pencils(self.shape)}, or solve.preconditioner = "
+                f"{blocks.comm.size} ranks cannot share the transforms of a lattice of {self.shape} nodes;"
+                f" use another number of them, at most {most_pencils(self.shape)}, or solve.preconditioner = "
                 "'direct'",
                 key="ranks",
             )
@@ -63,7 +63,7 @@ class Transform:
 
     @property
     def spectral_slices(self) -> Slices:
-        """This rank's part of the spectrum, without the component axis."""
+        """Slices of the spectrum this rank holds, without the component axis."""
         return tuple(self._plan.local_slice(True)[:-1])
 
     def forward(self, field: Any) -> Complex:
@@ -118,13 +118,12 @@ class _Mover:
         from petsc4py import PETSc
 
         blocks = self.blocks
-        shape = [blocks.lattice.shape[a] for a in blocks.axes]
-        grid = np.ix_(*(np.arange(p.start, p.stop) for p in pencil))
-        nodes = np.zeros([p.stop - p.start for p in pencil], dtype=np.int64)
-        for axis, index in enumerate(grid):
-            nodes = nodes * shape[axis] + index
-        natural = (nodes[..., None] * blocks.components + np.arange(blocks.components)).reshape(-1)
-        rows = blocks.dm.getAO().app2petsc(natural.astype(PETSc.IntType))
+        ranges = [np.zeros(1, dtype=np.int64)] * 3
+        for axis, part in zip(blocks.axes, pencil, strict=True):
+            ranges[axis] = np.arange(part.start, part.stop)
+        nodes = blocks.node_numbers(*np.ix_(*ranges)).reshape(-1)
+        rows = nodes[:, None] * blocks.components + np.arange(blocks.components)
+        rows = rows.reshape(-1).astype(PETSc.IntType)
         self._pencil = PETSc.Vec().createMPI((rows.size, blocks.size), comm=blocks.comm)
         source = PETSc.IS().createGeneral(rows, comm=blocks.comm)
         field = blocks.vector()

@@ -101,8 +101,8 @@ class AssembledJacobian:
         local = (own[..., None] * components + offsets).astype(PETSc.IntType).reshape(-1)
         if local.size > np.iinfo(PETSc.IntType).max:
             raise InputError(
-                f"the assembled Jacobian has {local.size} nonzeros on one rank, more than this PETSc's indices "
-                f"can count; use more ranks or another preconditioner",
+                f"the assembled Jacobian has {local.size} nonzeros on one rank, more than this PETSc's"
+                " indices can count; use more ranks or another preconditioner",
                 key="solve.preconditioner",
             )
         table = self.blocks.dm.getLGMap().apply(local)
@@ -144,8 +144,8 @@ def check_overlap(operator: FieldOperator) -> None:
             continue
         if getattr(lattice, name) < needed:
             raise InputError(
-                f"must be at least {needed} for an assembled Jacobian of these orders, got {getattr(lattice, name)}; "
-                "raise it or lower the orders",
+                f"must be at least {needed} for an assembled Jacobian of these orders, got"
+                f" {getattr(lattice, name)}; raise it or lower the orders",
                 key=f"lattice.{name}",
             )
 

@@ -174,7 +174,7 @@ class ConstantPart:
         phases = [np.exp(1j * angle * (k - below)) for k in range(levels)]
         d = sum((w * p for w, p in zip(difference, phases, strict=True)), np.zeros(1, dtype=complex))
         m = sum((w * p for w, p in zip(midpoint, phases, strict=True)), np.zeros(1, dtype=complex))
-        return d / step, m
+        return np.asarray(d / step), np.asarray(m)
 
     def fluctuating_size(self, wavenumber: float) -> float:
         """Return the largest fluctuating part an evolving row has in its own component, at a wavenumber."""
@@ -199,6 +199,7 @@ class ConstantPart:
             if not any(b for _, b in term.derivatives):
                 constant += mean * (1j * wavenumber) ** term.order
         return abs(constant.real), fluctuating
+
 
 def _stencil_symbol(stencil: dict[tuple[int, int], float], angle: Real, place: int) -> Complex:
     total = sum((w * np.exp(1j * offset[place] * angle) for offset, w in stencil.items()), 0.0 + 0.0j)

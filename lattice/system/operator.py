@@ -28,7 +28,7 @@ Array = NDArray[np.float64]
 T = TypeVar("T")
 
 
-def build_once(comm: MPI.Comm, make: Callable[[], T]) -> T:
+def build_once(comm: MPI.Intracomm, make: Callable[[], T]) -> T:
     """Build generated code on one rank of every node first, so that the others find it in the cache.
 
     Collective.
@@ -52,10 +52,10 @@ class FieldOperator:
     ----------
     law : Law
     lattice : Lattice
-    comm : MPI.Comm
+    comm : MPI.Intracomm
     """
 
-    def __init__(self, law: Law, lattice: Lattice, comm: MPI.Comm) -> None:
+    def __init__(self, law: Law, lattice: Lattice, comm: MPI.Intracomm) -> None:
         self.law, self.lattice, self.comm = law, lattice, comm
         self.forms = {
             "residual": forms.residual_form(law),
@@ -80,15 +80,16 @@ class FieldOperator:
         """
         if name not in self._kernels:
             if name not in self.forms:
-                make_form = forms.curvature_form if name == "curvature" else self._scalar_form
-                self.forms[name] = make_form(self.law) if name == "curvature" else self._scalar_form(name)
+                self.forms[name] = self._later_form(name)
             form = self.forms[name]
             self._kernels[name] = build_once(self.comm, lambda: Kernel(form, self.scheme))
             if self.values:
                 self._kernels[name].prepare(self.geometry(self.values), self.values)
         return self._kernels[name]
 
-    def _scalar_form(self, name: str) -> forms.Form:
+    def _later_form(self, name: str) -> forms.Form:
+        if name == "curvature":
+            return forms.curvature_form(self.law)
         return forms.scalar_form(self.law, name.removeprefix("by_"))
 
     def geometry(self, values: Mapping[str, float]) -> Geometry:
@@ -162,7 +163,9 @@ class FieldOperator:
 
     def copy_point(self, out: Any) -> None:
         """Set a field vector to the point of linearisation. Not collective."""
-        inner = tuple(slice(h, h + n) for h, n in zip(self.blocks.halos, self.blocks.block.shape, strict=True))
+        inner = tuple(
+            slice(h, h + n) for h, n in zip(self.blocks.halos, self.blocks.block.shape, strict=True)
+        )
         self.blocks.owned(out)[...] = self.padded_point()[inner]
 
     def component_means(self, u: Any) -> Array:

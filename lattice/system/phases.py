@@ -24,7 +24,7 @@ MOVES = {
 }
 
 
-def check_independence(templates: Mapping[str, tuple[str, Any]], comm: MPI.Comm) -> None:
+def check_independence(templates: Mapping[str, tuple[str, Any]], comm: MPI.Intracomm) -> None:
     """Refuse phase templates that are linearly dependent, as those of a plane wave are.
 
     Collective.
@@ -33,7 +33,7 @@ def check_independence(templates: Mapping[str, tuple[str, Any]], comm: MPI.Comm)
     ----------
     templates : mapping of str to (str, PETSc.Vec)
         For every condition the unknown that it fixes and the template, of any size.
-    comm : MPI.Comm
+    comm : MPI.Intracomm
 
     Raises
     ------

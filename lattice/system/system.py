@@ -43,7 +43,7 @@ class System:
         Names of the free scalars; sources of open means are added.
     means : mapping of str to float
         Given mean of components whose mean is open; 0 where absent.
-    comm : MPI.Comm
+    comm : MPI.Intracomm
     """
 
     def __init__(
@@ -53,7 +53,7 @@ class System:
         values: Mapping[str, float],
         free: Sequence[str],
         means: Mapping[str, float],
-        comm: MPI.Comm,
+        comm: MPI.Intracomm,
     ) -> None:
         self.law, self.lattice, self.comm = law, lattice, comm
         self.values: Values = {**dict.fromkeys(frame_names(law), 0.0), **values}
@@ -90,7 +90,9 @@ class System:
     def values_of(self, x: Any) -> Values:
         """Return every scalar by name, on every rank."""
         numbers = self.border_of(x)
-        found = {u.name: float(z * u.unit / self.root_size) for u, z in zip(self.unknowns, numbers, strict=True)}
+        found = {
+            u.name: float(z * u.unit / self.root_size) for u, z in zip(self.unknowns, numbers, strict=True)
+        }
         return {**self.values, **found}
 
     def border_of(self, x: Any) -> Array:

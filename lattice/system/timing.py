@@ -2,11 +2,11 @@
 
 from __future__ import annotations
 
-from functools import lru_cache
+from functools import cache
 from typing import Any
 
 
-@lru_cache(maxsize=None)
+@cache
 def event(name: str) -> Any:
     """Return a PETSc log event to be used as a context manager."""
     from petsc4py import PETSc
