@@ -107,6 +107,27 @@ def is_oversubscribed(ranks: int) -> bool:
     return ranks > count_cores()
 
 
+RANKS_PER_CORE = 16
+"""Most ranks started on one core here: more only exhaust the machine's memory."""
+
+
+def check_crowd(ranks: int) -> None:
+    """Refuse far more ranks than this machine has cores.
+
+    Raises
+    ------
+    InputError
+        With the largest number that is started here.
+    """
+    most = RANKS_PER_CORE * count_cores()
+    if is_oversubscribed(ranks) and ranks > most:
+        raise InputError(
+            f"must be at most {most} on the {count_cores()} core(s) here, got {ranks}; use fewer, or submit the"
+            " job to a scheduler",
+            key="--ranks",
+        )
+
+
 def count_cores(folder: Path = Path("/sys/devices/system/cpu")) -> int:
     """Return the cores this process may use; threads that share one count once, as Open MPI counts."""
     usable = os.sched_getaffinity(0)

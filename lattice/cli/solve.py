@@ -92,8 +92,9 @@ def _check_petsc_options(given: list[str]) -> None:
 
 def _start_ranks(options: argparse.Namespace) -> int:
     """Judge the job here, so that a refusal costs no launch, then start the ranks."""
-    from lattice.cli.launch import find_launcher, is_oversubscribed, launch_command, run_ranks
+    from lattice.cli.launch import check_crowd, find_launcher, is_oversubscribed, launch_command, run_ranks
 
+    check_crowd(options.ranks)
     _read_job(options, options.ranks)
     launcher = find_launcher(options.launcher)
     if is_oversubscribed(options.ranks):
