@@ -51,7 +51,9 @@ format: setup
 	.venv/bin/ruff format
 
 bench: setup
-	for script in scaling/bench_*.py; do $(PYTHON) "$$script" || exit 1; done
+	$(PYTHON) -m scaling.kernels
+	$(PYTHON) -m scaling.flatness --quick
+	$(PYTHON) -m scaling.compare --sizes 1d-14k
 
 clean:
 	rm -rf .pytest_cache .mypy_cache .ruff_cache .hypothesis build dist *.egg-info

@@ -134,14 +134,19 @@ class PatchesSection(Section):
 class CoarseSection(Section):
     """The `coarse` preconditioner's second level and its smoother."""
 
-    nt: Count | None = _key("levels of the coarse lattice", None, shown="from the state's spectrum and the law")
+    nt: Count | None = _key(
+        "levels of the coarse lattice", None, shown="from the state's spectrum and the law"
+    )
     nx: Count | None = _key("nodes in x of the coarse lattice", None, shown="the same")
     ny: Count | None = _key("nodes in y of the coarse lattice", None, shown="the same")
     order: Literal[4, 6, 8] | None = _key(
-        "order of the space differences on the coarse lattice", None, shown="8 in one space dimension, 6 in two"
+        "order of the space differences on the coarse lattice",
+        None,
+        shown="8 in one space dimension, 6 in two",
     )
     solver: Literal["direct", "patches"] = _key(
-        "how the coarse lattice is solved: `direct` LU, or `patches` where that does not fit (see [solve.patches])",
+        "how the coarse lattice is solved: `direct` LU, or `patches` where that does not fit"
+        " (see [solve.patches])",
         "direct",
     )
     smoother: Literal["auto", "spectral", "slabs"] = _key(
