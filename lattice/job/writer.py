@@ -9,12 +9,25 @@ if TYPE_CHECKING:
 
 
 def job_to_toml(job: Job) -> str:
-    """Return the job as TOML text that `load_job` reads back to the same job."""
+    """Return the job as TOML text that `load_job` reads back to the same job.
+
+    Parameters
+    ----------
+    job : Job
+        As `load_job` returns it.
+
+    Returns
+    -------
+    str
+        Without the sections of preconditioners that are not chosen.
+    """
     import tomli_w
 
     tables = job.model_dump(exclude_none=True)
-    if job.solve.preconditioner != "patches":
-        del tables["solve"]["patches"]
+    if job.solve.preconditioner == "direct":
+        del tables["solve"]["patches"], tables["solve"]["coarse"]
+    elif job.solve.preconditioner == "patches":
+        del tables["solve"]["coarse"]
     return tomli_w.dumps(_plain(tables))
 
 
