@@ -154,9 +154,7 @@ def vary_along(
     return sympy.Add(*(_vary_term(term, changes, fields) for term in terms))
 
 
-def _vary_term(
-    term: sympy.Expr, changes: Mapping[sympy.Symbol, sympy.Expr], fields: Fields
-) -> sympy.Expr:
+def _vary_term(term: sympy.Expr, changes: Mapping[sympy.Symbol, sympy.Expr], fields: Fields) -> sympy.Expr:
     if isinstance(term, Deriv):
         inner, a, b = term.args
         return differentiate(vary_along(inner, changes, fields), int(a), int(b), fields)
