@@ -211,8 +211,9 @@ def check_halo(lattice: Lattice, halo: int) -> None:
     InputError
         Naming the axis, its nodes and the fewest that work.
     """
-    for name, nodes in zip(("nt", "ny", "nx"), _axes(lattice), strict=True):
-        if (nodes > 1 or name == "nx") and nodes < max(halo, 2):
+    present = (lattice.nt > 1, lattice.dimensions == 2, True)
+    for name, nodes, exists in zip(("nt", "ny", "nx"), _axes(lattice), present, strict=True):
+        if exists and nodes < max(halo, 2):
             raise InputError(
                 f"{name} = {nodes} is smaller than the halo of {max(halo, 2)} nodes that the orders of the "
                 f"differences need; raise {name} or lower the orders",

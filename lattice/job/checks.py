@@ -8,7 +8,7 @@ from typing import TYPE_CHECKING
 
 from lattice.job.choices import PRECONDITIONERS
 from lattice.job.problems import Findings, did_you_mean, listed
-from lattice.job.schema import ArrayStart, Job, MarchStart, PatchesSection, Wave, WavesStart
+from lattice.job.schema import ArrayStart, CoarseSection, Job, MarchStart, PatchesSection, Wave, WavesStart
 from lattice.job.unknowns import axes, homogeneous_axes, judge_free, open_means
 
 if TYPE_CHECKING:
@@ -157,22 +157,30 @@ def _judge_solve(job: Job, law: Law, findings: Findings) -> None:
             f"must be one of {listed(PRECONDITIONERS)}, got '{solve.preconditioner}'"
             f"{did_you_mean(solve.preconditioner, PRECONDITIONERS)}",
         )
-    if solve.preconditioner != "patches" and solve.patches != PatchesSection():
+    patched = solve.preconditioner == "patches" or solve.coarse.solver == "patches"
+    if not patched and solve.patches != PatchesSection():
         findings.refuse(
             "solve.patches",
             f"is for solve.preconditioner = 'patches', got '{solve.preconditioner}'; remove the table",
         )
-    _judge_patches(job, findings)
+    if solve.preconditioner in ("direct", "patches") and solve.coarse != CoarseSection():
+        findings.refuse(
+            "solve.coarse",
+            f"is for solve.preconditioner = 'coarse' or 'auto', got '{solve.preconditioner}'; remove the table",
+        )
+    _judge_sizes("patches", job, findings)
+    _judge_sizes("coarse", job, findings)
     for component in solve.mean:
         _judge_mean(f"solve.mean.{component}", component, law, findings)
 
 
-def _judge_patches(job: Job, findings: Findings) -> None:
+def _judge_sizes(table: str, job: Job, findings: Findings) -> None:
+    """Refuse patches or a coarse lattice with more nodes along an axis than the lattice."""
     for name in ("nt", "nx", "ny"):
-        size, nodes = getattr(job.solve.patches, name), getattr(job.lattice, name) or 1
+        size, nodes = getattr(getattr(job.solve, table), name), getattr(job.lattice, name) or 1
         if size is not None and size > nodes:
             findings.refuse(
-                f"solve.patches.{name}", f"must be <= lattice.{name} = {nodes}, got {size}; lower it"
+                f"solve.{table}.{name}", f"must be <= lattice.{name} = {nodes}, got {size}; lower it"
             )
 
 

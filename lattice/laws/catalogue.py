@@ -61,6 +61,15 @@ def _summary(path: Path) -> Summary:
 def load_law(name: str) -> Law:
     """Return a shipped law.
 
+    Parameters
+    ----------
+    name : str
+        One of `law_names`.
+
+    Returns
+    -------
+    Law
+
     Raises
     ------
     InputError

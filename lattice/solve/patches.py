@@ -203,60 +203,6 @@ class Patches:
                 part.destroy()
 
 
-class _Transposed:
-    """The transpose of the sum of patch solves: each takes its own nodes and adds to all it overlaps.
-
-    PETSc's own (3.18) restricts to what the rank owns, which is the transpose only where the patches are
-    the ranks' blocks.
-
-    Parameters
-    ----------
-    system : System
-    outer, inner : list of PETSc.IS
-        This rank's patches with and without their overlap, sorted.
-    """
-
-    def __init__(self, system: System, outer: list[Any], inner: list[Any]) -> None:
-        from petsc4py import PETSc
-
-        rows = [index.getIndices() for index in outer]
-        self._own = np.concatenate([np.isin(r, i.getIndices()) for r, i in zip(rows, inner, strict=True)])
-        self._ends = np.cumsum([0, *(r.size for r in rows)])
-        self._all = PETSc.Vec().createSeq(int(self._ends[-1]), comm=PETSc.COMM_SELF)
-        self._pairs = [
-            tuple(PETSc.Vec().createSeq(r.size, comm=PETSc.COMM_SELF) for _ in range(2)) for r in rows
-        ]
-        field = system.blocks.vector()
-        source = PETSc.IS().createGeneral(np.concatenate(rows), comm=PETSc.COMM_SELF)
-        self._scatter = PETSc.Scatter().create(field, source, self._all, None)
-        source.destroy()
-        field.destroy()
-
-    def apply(self, solvers: list[Any], r: Any, y: Any) -> None:
-        """Set `y` from the patches' solvers and the field vector `r`. Collective."""
-        from petsc4py import PETSc
-
-        self._scatter.begin(r, self._all)
-        self._scatter.end(r, self._all)
-        numbers = self._all.getArray()
-        numbers *= self._own
-        for k, (solver, (right, solved)) in enumerate(zip(solvers, self._pairs, strict=True)):
-            part = slice(self._ends[k], self._ends[k + 1])
-            right.getArray()[:] = numbers[part]
-            solver.solveTranspose(right, solved)
-            numbers[part] = solved.getArray(readonly=1)
-        y.set(0.0)
-        add, reverse = PETSc.InsertMode.ADD_VALUES, PETSc.ScatterMode.REVERSE
-        self._scatter.begin(self._all, y, addv=add, mode=reverse)
-        self._scatter.end(self._all, y, addv=add, mode=reverse)
-
-    def destroy(self) -> None:
-        """Free vectors and the scatter. Collective."""
-        for vector in (self._all, *(v for pair in self._pairs for v in pair)):
-            vector.destroy()
-        self._scatter.destroy()
-
-
 class RankPatches(Patches):
     """The `patches` preconditioner: each rank's block, or the smaller patches the job asks for."""
 

@@ -289,7 +289,23 @@ def read_whole(path: str | os.PathLike[str]) -> Field:
 
 
 def open_state(path: str | os.PathLike[str]) -> State:
-    """Read a whole state into memory: record, field and coordinates."""
+    """Read a whole state into memory: record, field and coordinates.
+
+    Parameters
+    ----------
+    path : path-like
+        A state file.
+
+    Returns
+    -------
+    State
+        `field` has shape (nt, ny, nx, components).
+
+    Raises
+    ------
+    StateFileError
+        If the file is missing, damaged, foreign or of a newer schema.
+    """
     with StateFile(path) as file:
         meta = file.meta
         rows = meta.coordinate("y") if meta.dimensions == 2 else np.zeros(1)
