@@ -14,7 +14,8 @@ from __future__ import annotations
 
 import math
 import time
-from collections.abc import Callable
+from collections.abc import Callable, Iterator
+from contextlib import contextmanager
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
@@ -142,18 +143,20 @@ class Newton:
         snes.setFunction(self._residual, self._function)
         snes.setJacobian(self._linearise, self._matrix, self._matrix)
         snes.setTolerances(max_it=options.newton_steps)
-        _default_option("snes_linesearch_type", "bt" if options.line_search else "basic")
         ksp = snes.getKSP()
         ksp.setType("fgmres")
         ksp.setTolerances(rtol=options.linear_rtol or FORCING, max_it=options.linear_iterations)
-        restart = min(options.linear_iterations, 100)
-        _default_option("ksp_gmres_restart", str(restart))
         if options.linear_rtol is None:
             snes.setUseEW(True, version=2, rtol_0=FORCING, rtol_max=FORCING)
         pc = ksp.getPC()
         pc.setType("python")
         pc.setPythonContext(_PythonPC(self.preconditioner))
-        snes.setFromOptions()
+        defaults = {
+            "snes_linesearch_type": "bt" if options.line_search else "basic",
+            "ksp_gmres_restart": str(min(options.linear_iterations, 100)),
+        }
+        with _default_options(defaults):
+            snes.setFromOptions()
         snes.setConvergenceTest(self._test)
         snes.setMonitor(self._monitor)
         ksp.setConvergenceTest(self._linear_test)
@@ -238,10 +241,17 @@ class Newton:
         self.preconditioner.destroy()
 
 
-def _default_option(name: str, value: str) -> None:
-    """Set a PETSc option unless the user has."""
+@contextmanager
+def _default_options(defaults: dict[str, str]) -> Iterator[None]:
+    """Set PETSc options that the user has not set, and take them out again: the next solve may differ."""
     from petsc4py import PETSc
 
     database = PETSc.Options()
-    if not database.hasName(name):
-        database.setValue(name, value)
+    added = [name for name in defaults if not database.hasName(name)]
+    for name in added:
+        database.setValue(name, defaults[name])
+    try:
+        yield
+    finally:
+        for name in added:
+            database.delValue(name)
