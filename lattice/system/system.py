@@ -163,6 +163,8 @@ class System:
             else:
                 self.operator.by_scalar(FRAME[condition], template)
             size = template.norm() / self.root_size
+            if not np.isfinite(size):
+                raise LatticeError("the field is not finite everywhere; start from another one")
             if not size > 1e-12:
                 raise LatticeError(flat_start(condition, self._named(condition)))
             template.scale(1.0 / size)
