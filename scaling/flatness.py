@@ -92,7 +92,7 @@ CASES: tuple[dict[str, Any], ...] = (
             "rtol": 1e-6,
             "parameters": {"Re": 40.0},
             "spin_up": 40.0,
-            "coarse": {"nt": round(t / 0.25), "nx": 16, "ny": 16, "order": 6, "slabs": n},
+            "coarse": {"nt": round(t / 0.25), "nx": 16, "ny": 16, "slabs": n},
         }
         for t, n in ((4.0, 4), (4.0, 8))
     ),

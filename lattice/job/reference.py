@@ -9,11 +9,13 @@ from typing import Annotated, Any, Literal, Union, get_args, get_origin
 from pydantic import BaseModel
 from pydantic.fields import FieldInfo
 
-from lattice.job.schema import START_MODELS, Job, PatchesSection, Wave
+from lattice.job.schema import START_MODELS, CoarseSection, Job, PatchesSection, Wave
 from lattice.job.wording import value_text
 
 HEADER = "| key | value | default | meaning |\n|---|---|---|---|"
 _PLAIN = {int: "integer", float: "number", str: "text", bool: "true or false"}
+_BELOW = {"solve": {"[solve.coarse]": CoarseSection, "[solve.patches]": PatchesSection}}
+"""Tables inside a section, which have a table of their own in the reference."""
 _BOUNDS = {"gt": ">", "ge": ">=", "lt": "<", "le": "<="}
 
 
@@ -23,7 +25,7 @@ def job_reference() -> str:
     for section, field in Job.model_fields.items():
         if section != "start":
             parts += [_table(f"[{section}]", _model_of(field.annotation))]
-            parts += [_table("[solve.patches]", PatchesSection)] if section == "solve" else []
+            parts += [_table(title, model) for title, model in _BELOW.get(section, {}).items()]
         else:
             parts += [_table(f'[start] with kind = "{kind}"', model) for kind, model in START_MODELS.items()]
             parts += [_table("[[start.modes]]", Wave)]
@@ -32,7 +34,9 @@ def job_reference() -> str:
 
 def _table(title: str, model: type[BaseModel]) -> str:
     rows = [
-        _row(name, field) for name, field in model.model_fields.items() if name not in ("kind", "patches")
+        _row(name, field)
+        for name, field in model.model_fields.items()
+        if name not in ("kind", "coarse", "patches")
     ]
     return "\n".join([f"`{title}`: {_first_line(model)}", "", HEADER, *rows])
 

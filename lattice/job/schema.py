@@ -142,7 +142,7 @@ class CoarseSection(Section):
     order: Literal[4, 6, 8] | None = _key(
         "order of the space differences on the coarse lattice",
         None,
-        shown="8 in one space dimension, 6 in two",
+        shown="8; 6 in two space dimensions with the spectral smoother",
     )
     solver: Literal["direct", "patches"] = _key(
         "how the coarse lattice is solved: `direct` LU, or `patches` where that does not fit"

@@ -50,14 +50,19 @@ def reach(expression: sympy.Expr, order_x: int, order_y: int) -> tuple[int, int]
     return max(x for x, _ in reaches), max(y for _, y in reaches)
 
 
+def widest(forms: Iterable[Form], order_x: int, order_y: int) -> tuple[int, int]:
+    """Return how many nodes the expressions of forms reach at most, in x and in y."""
+    reaches = [reach(o.expression, order_x, order_y) for form in forms for o in form.outputs]
+    return max(x for x, _ in reaches), max(y for _, y in reaches)
+
+
 def make_scheme(lattice: Lattice, forms: Iterable[Form]) -> Scheme:
     """Return the scheme of a lattice whose halo serves all given forms.
 
     The halo has one width in every axis that has one, as a PETSc DMDA has.
     """
-    reaches = [reach(o.expression, lattice.order_x, lattice.order_y) for f in forms for o in f.outputs]
     levels = lattice.order_t if lattice.nt > 1 else 1
-    width = max([levels // 2, *(x for x, _ in reaches), *(y for _, y in reaches)])
+    width = max(levels // 2, *widest(forms, lattice.order_x, lattice.order_y))
     return Scheme(
         levels,
         lattice.order_x,

@@ -16,6 +16,7 @@ from numpy.typing import NDArray
 
 from lattice.errors import InputError
 from lattice.geometry.lattice import Lattice
+from lattice.kernels.scheme import widest
 from lattice.spectral.transform import Transform
 from lattice.system.constant_part import ConstantPart
 
@@ -61,11 +62,12 @@ def choose(system: System, transform: Transform, constant: ConstantPart, options
     InputError
         If the fine lattice is itself too coarse for two levels.
     """
-    fine, order = system.lattice, options.order or (8 if system.law.dimensions == 1 else 6)
+    fine = system.lattice
     ratio_x, ruled = _ruling_wavenumber(system, constant)
     smoother = options.smoother if options.smoother != "auto" else ("spectral" if ruled else "slabs")
     if smoother == "slabs" and fine.nt < 8:
         smoother = "spectral"
+    order = options.order or (8 if system.law.dimensions == 1 or smoother == "slabs" else 6)
     tails = _axis_tails(system, transform)
     counts = {}
     for name, nodes in (("nt", fine.nt), ("ny", fine.ny), ("nx", fine.nx)):
@@ -76,10 +78,9 @@ def choose(system: System, transform: Transform, constant: ConstantPart, options
             counts[name] = min(asked, nodes)
         else:
             counts[name] = _axis_count(name, nodes, tails[name], smoother, system, constant, ratio_x)
-    reach = _reach(system, order)
     for name in ("nx", "ny"):
         if counts[name] > 1:
-            counts[name] = min(getattr(fine, name), max(counts[name], 2 * reach + 1))
+            counts[name] = min(getattr(fine, name), max(counts[name], _least_nodes(system, order)))
     order_t = min(6, max(fine.order_t, 4))
     coarse = replace(
         fine, nt=counts["nt"], ny=counts["ny"], nx=counts["nx"], order_t=order_t, order_x=order, order_y=order
@@ -116,12 +117,11 @@ def _text(lattice: Lattice) -> str:
     return " x ".join(str(n) for n in lattice.shape if n > 1)
 
 
-def _reach(system: System, order: int) -> int:
-    """Return how far the residual of the coarse lattice reaches: half its least number of nodes."""
-    from lattice.kernels.scheme import reach
-
-    forms = [system.operator.forms[name] for name in ("residual", "tangent", "adjoint")]
-    return max(max(reach(o.expression, order, order)) for form in forms for o in form.outputs)
+def _least_nodes(system: System, order: int) -> int:
+    """Return the fewest nodes along an axis on which an order can be assembled and its halo exchanged."""
+    forms = system.operator.forms
+    halo = max(widest([forms[name] for name in ("residual", "tangent", "adjoint")], order, order))
+    return max(halo, 2 * max(widest([forms["tangent"]], order, order)) + 1)
 
 
 def _axis_tails(system: System, transform: Transform) -> dict[str, NDArray[np.float64]]:

@@ -81,7 +81,10 @@ class Factorisation:
             pc.setFactorSolverType(self.package)
         if self.package == "mumps":
             pc.setFactorSetUpSolverType()
-            pc.getFactorMatrix().setMumpsIcntl(14, relaxation)
+            factor = pc.getFactorMatrix()
+            # PETSc gives it the prefix at a matrix's second factorisation only.
+            factor.setOptionsPrefix(self.prefix)
+            factor.setMumpsIcntl(14, relaxation)
         ksp.setFromOptions()
         ksp.setUp()
         return _mumps_status(pc) if self.package == "mumps" and pc.getFactorSolverType() == "mumps" else {}

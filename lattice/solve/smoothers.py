@@ -17,6 +17,8 @@ if TYPE_CHECKING:
 STALE = 0.02
 """Relative change of the field up to which slabs keep their factors: a smoother need not be exact."""
 LEAST_LEVELS = 4
+LARGEST_INVERSE = 1e8
+"""Largest number in the inverse of a mode's block, a time: beyond it the block counts as singular."""
 
 
 class SpectralSmoother:
@@ -39,8 +41,7 @@ class SpectralSmoother:
 
     def update(self) -> None:
         """Invert the symbols at the point of linearisation. Collective."""
-        symbol = self.constant.symbol(self.transform, self.shift)
-        self._inverse = 1.0 / symbol if symbol.shape[-1] == 1 else np.linalg.inv(symbol)
+        self._inverse = inverse_blocks(self.constant.symbol(self.transform, self.shift))
 
     def apply(self, r: Any, y: Any) -> None:
         """Set the field vector `y` to the smoother times `r`. Collective."""
@@ -60,6 +61,23 @@ class SpectralSmoother:
 
     def destroy(self) -> None:
         """Nothing of PETSc's is held; the transform is its owner's."""
+
+
+def inverse_blocks(symbol: Complex) -> Complex:
+    """Return the inverse of every mode's block, zero where it is singular: such modes are left alone.
+
+    Examples
+    --------
+    >>> inverse_blocks(np.array([[[2.0]], [[0.0]]])).ravel().tolist()
+    [0.5, 0.0]
+    """
+    determinant = np.linalg.det(symbol)
+    singular = determinant == 0.0
+    inverse = np.linalg.inv(np.where(singular[..., None, None], np.eye(symbol.shape[-1]), symbol))
+    # Rounding hides singular blocks; what it leaves of them multiplies by far more than any mode's inverse.
+    singular |= ~(np.abs(inverse).max(axis=(-1, -2)) < LARGEST_INVERSE)
+    inverse[singular] = 0.0
+    return np.asarray(inverse)
 
 
 class SlabSmoother:

@@ -13,6 +13,7 @@ from numpy.typing import NDArray
 
 from lattice.errors import InputError
 from lattice.kernels.build import Rows
+from lattice.kernels.scheme import widest
 from lattice.system.operator import FieldOperator, build_once
 
 GAUGE_PIN = 1e-7
@@ -137,8 +138,9 @@ def check_overlap(operator: FieldOperator) -> None:
     InputError
         Naming the axis and the fewest nodes that work.
     """
-    lattice, scheme = operator.lattice, operator.scheme
-    least = {"nt": scheme.levels, "ny": 2 * scheme.halo_y + 1, "nx": 2 * scheme.halo_x + 1}
+    lattice = operator.lattice
+    reach_x, reach_y = widest([operator.forms["tangent"]], lattice.order_x, lattice.order_y)
+    least = {"nt": operator.scheme.levels, "ny": 2 * reach_y + 1, "nx": 2 * reach_x + 1}
     for name, needed in least.items():
         if name == "nt" and lattice.nt == 1:
             continue
