@@ -122,8 +122,8 @@ def check_crowd(ranks: int) -> None:
     most = RANKS_PER_CORE * count_cores()
     if is_oversubscribed(ranks) and ranks > most:
         raise InputError(
-            f"must be at most {most} on the {count_cores()} core(s) here, got {ranks}; use fewer, or submit the"
-            " job to a scheduler",
+            f"must be at most {most} on the {count_cores()} core(s) here, got {ranks}; use fewer, or submit"
+            " the job to a scheduler",
             key="--ranks",
         )
 

@@ -166,7 +166,8 @@ def _judge_solve(job: Job, law: Law, findings: Findings) -> None:
     if solve.preconditioner in ("direct", "patches") and solve.coarse != CoarseSection():
         findings.refuse(
             "solve.coarse",
-            f"is for solve.preconditioner = 'coarse' or 'auto', got '{solve.preconditioner}'; remove the table",
+            f"is for solve.preconditioner = 'coarse' or 'auto', got '{solve.preconditioner}';"
+            " remove the table",
         )
     _judge_sizes("patches", job, findings)
     _judge_sizes("coarse", job, findings)
