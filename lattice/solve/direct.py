@@ -60,8 +60,8 @@ class Factorisation:
             status = self._attempt(matrix, relaxation)
             if status.get("INFOG(1)", 0) >= 0:
                 return
-            if status["INFOG(1)"] not in WORKSPACE_CODES:
-                break
+            if status["INFOG(1)"] not in WORKSPACE_CODES or status["ICNTL(14)"] != relaxation:
+                break  # a larger workspace is no cure, or the user's option sets it
         self.destroy()
         raise FactorisationError(_explain(status, self.prefix), status)
 
