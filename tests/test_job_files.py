@@ -22,7 +22,7 @@ from lattice.job.ranks import check_ranks
 from lattice.job.reader import load_job, load_job_with_cautions
 from lattice.job.reference import job_reference
 from lattice.job.resolution import resolution_cautions
-from lattice.job.schema import START_MODELS, Job
+from lattice.job.schema import START_MODELS, CoarseSection, Job, PatchesSection
 from lattice.job.unknowns import scalar_names
 from lattice.job.writer import job_to_toml
 from lattice.laws.law import Parameter
@@ -453,7 +453,9 @@ def test_the_reference_lists_every_key_with_a_meaning() -> None:
     cells = [[cell.strip() for cell in row.strip("|").split(" | ")] for row in rows]
     assert all(len(row) == 4 and all(row) for row in cells)
     listed = {row[0].strip("`") for row in cells}
-    assert listed >= {key for _, key in KEYS} - {"kind", "patches"}
+    tables = {"kind", "coarse", "patches"}
+    assert listed >= {key for _, key in KEYS} - tables
+    assert listed >= {*CoarseSection.model_fields, *PatchesSection.model_fields}
 
 
 README = ROOT / "README.md"

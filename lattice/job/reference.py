@@ -14,7 +14,9 @@ from lattice.job.wording import value_text
 
 HEADER = "| key | value | default | meaning |\n|---|---|---|---|"
 _PLAIN = {int: "integer", float: "number", str: "text", bool: "true or false"}
-_BELOW = {"solve": {"[solve.coarse]": CoarseSection, "[solve.patches]": PatchesSection}}
+_BELOW: dict[str, dict[str, type[BaseModel]]] = {
+    "solve": {"[solve.coarse]": CoarseSection, "[solve.patches]": PatchesSection}
+}
 """Tables inside a section, which have a table of their own in the reference."""
 _BOUNDS = {"gt": ">", "ge": ">=", "lt": "<", "le": "<="}
 
