@@ -169,6 +169,7 @@ def solve(folder: Path, case: str, preconditioner: str) -> dict[str, Any]:
     system.pack(start[system.blocks.block.slices], {}, x)
     system.set_reference(x)
     result = newton.solve(x)
+    transposed = adjoint_error(system, made)
     gathered = COMM.gather((system.blocks.block.slices, system.field_of(x)))
     values = system.values_of(x)
     if COMM.rank == 0:
@@ -181,12 +182,25 @@ def solve(folder: Path, case: str, preconditioner: str) -> dict[str, Any]:
     system.destroy()
     return {
         "converged": result.converged,
+        "adjoint": transposed,
         "reason": result.reason,
         "residuals": [step.residual_rms for step in result.steps],
         "iterations": [step.linear_iterations for step in result.steps],
         "values": values,
         "alike": len({(len(result.steps), str(values)) for values in COMM.allgather(values)}) == 1,
     }
+
+
+def adjoint_error(system: System, made: Any) -> float:
+    """Return how far <w, P r> is from <P^T w, r>, relative to the norms."""
+    r, w = random_direction(system, 8), random_direction(system, 9)
+    along, back = system.vector(), system.vector()
+    made.apply(r, along)
+    made.apply_transpose(w, back)
+    error = abs(w.dot(along) - back.dot(r)) / (w.norm() * along.norm() + back.norm() * r.norm())
+    for vector in (r, w, along, back):
+        vector.destroy()
+    return float(error)
 
 
 def film_case(folder: Path) -> tuple[str, Lattice, tuple[str, ...], dict[str, float], Array]:

@@ -31,7 +31,7 @@ OWN = {
     "nested": (("u_t + (u*(u+1)*u_x)_xx + a*(sin(u)*(1 + u_x)**2)_x = 0",), ("u",), 1),
     "functions": (("u_t + sqrt(1 + u**2)*u_xx + log(2 + cos(x)*u) = sech(u)/(1 + u**2)",), ("u",), 1),
     "places": (("u_t + (exp(cos(x))*(u**2*u_x + u))_x + tanh(a*u)*sin(x) = 0",), ("u",), 1),
-    "crossed": (("u_t + (cos(x - y)*u*u_y)_x + (u**2*u_xy)_y + u_xxyy = a*sin(y)**2",), ("u",), 2),
+    "crossed": (("u_t + (cos(x - y)*u*u_y)_x + (u**2*u_xy)_y + u_xxyy = a*sin(y)**2 - u",), ("u",), 2),
     "constrained": (("u_t + q*u_x + p_x = u_xx", "p - u*q_x - u**3 = 0", "q + q_xx - a*u_x*p = 0"),
                     ("u", "p", "q"), 1),
 }  # fmt: skip
