@@ -56,7 +56,9 @@ class System:
         comm: MPI.Intracomm,
     ) -> None:
         self.law, self.lattice, self.comm = law, lattice, comm
-        self.values: Values = {**dict.fromkeys(frame_names(law), 0.0), **values}
+        self.values: Values = dict(values)
+        for name in frame_names(law):
+            self.values.setdefault(name, 0.0)
         self.unknowns = pair_unknowns(law, lattice, free, self.values)
         self.means = dict(means)
         self.operator = FieldOperator(law, lattice, comm)
