@@ -36,6 +36,8 @@ if TYPE_CHECKING:
 
 Report = Callable[[str], None]
 CONVERGED, NOT_CONVERGED, INTERRUPTED = 0, 3, 4
+TRIVIAL = 1e-16
+"""Mean square below which a state is nothing but the rounding of zero."""
 
 
 @dataclass(frozen=True)
@@ -125,23 +127,27 @@ class _Run:
         made = make_preconditioner(options.preconditioner, self.system, options, self.report)
         self.newton = Newton(self.system, made, options, self.stop, self._after_step)
         self.report(header([u.name for u in self.system.unknowns]))
-        try:
-            result = self.newton.solve(x)
-            if last or not result.converged:
-                return self._finish(x, result)
-            spent = time.perf_counter() - began
-            self.seconds[f"nested {_shape(self.system.lattice)}"] = spent
-            self.report(
-                f"{_shape(self.system.lattice)} nodes took {spent:.1f} s and"
-                f" {result.linear_iterations} linear iterations"
-            )
-            self._coarser = (self.system, self.system.field_of(x), self.system.values_of(x))
-            return None
-        finally:
-            self.newton.destroy()
-            x.destroy()
-            if last:
-                self.system.destroy()
+        outcome = self._conclude(x, last, began)
+        # Freeing is collective: where one rank has failed, it would wait for the others for ever.
+        self.newton.destroy()
+        x.destroy()
+        if last:
+            self.system.destroy()
+        return outcome
+
+    def _conclude(self, x: Any, last: bool, began: float) -> Outcome | None:
+        """Solve, then finish the run or keep the state for the next lattice."""
+        result = self.newton.solve(x)
+        if last or not result.converged:
+            return self._finish(x, result)
+        spent = time.perf_counter() - began
+        self.seconds[f"nested {_shape(self.system.lattice)}"] = spent
+        self.report(
+            f"{_shape(self.system.lattice)} nodes took {spent:.1f} s and"
+            f" {result.linear_iterations} linear iterations"
+        )
+        self._coarser = (self.system, self.system.field_of(x), self.system.values_of(x))
+        return None
 
     def _begin(self, lattice: Lattice) -> Any:
         """Make the system of a lattice and its start; return the vector of unknowns."""
@@ -271,6 +277,8 @@ class _Run:
             versions=self.versions,
         )
         self.files.write_summary(summary)
+        if summary.mean_square < TRIVIAL:
+            self.report("caution: the state is zero everywhere; start from a field nearer to what you look for")
         if self.job.output.picture:
             self._draw()
         self.report(f"{outcome}: {result.reason}; {_words(summary)}; files in {self.files.path}")
