@@ -28,6 +28,7 @@ if TYPE_CHECKING:
 
 POLL_ITERATIONS = 10
 GROWTH_LIMIT = 1e4
+STALL_STEPS = 5
 FORCING = 1e-2
 """Loosest relative tolerance of a linear solve; a looser first step costs Newton steps."""
 
@@ -213,9 +214,18 @@ class Newton:
             return reasons.CONVERGED
         if self._steps and rms > GROWTH_LIMIT * self._steps[0].residual_rms:
             return -9
+        if self._stalls():
+            return reasons.STALLED
         if number >= snes.getTolerances()[3]:
             return reasons.STEP_LIMIT
         return reasons.STOPPED if self.stop.poll() else 0
+
+    def _stalls(self) -> bool:
+        """Tell whether the last steps together lowered the residual by less than one percent."""
+        if len(self._steps) <= STALL_STEPS:
+            return False
+        before = self._steps[-1 - STALL_STEPS].residual_rms
+        return min(step.residual_rms for step in self._steps[-STALL_STEPS:]) > 0.99 * before
 
     def _linear_test(self, ksp: Any, number: int, norm: float) -> int:
         if number == 0:

@@ -5,13 +5,13 @@ Only numbers that have the same meaning in every supported PETSc are told apart 
 
 from __future__ import annotations
 
-CONVERGED, STOPPED, STEP_LIMIT = 2, 5, -5
+CONVERGED, STOPPED, STEP_LIMIT, STALLED = 2, 5, -5, -6
 
 _TEXTS = {
     -3: "a linear solve failed",
     -4: "the residual is not finite",
     -5: "the largest number of Newton steps is used up",
-    -6: "the line search found no step that lowers the residual",
+    -6: "no step lowers the residual any more",
     -9: "the residual grows without bound",
 }
 
