@@ -36,7 +36,6 @@ from tests.problems import (
     random_direction,
     random_field,
     random_unknowns,
-    relative,
     values_of,
 )
 
@@ -68,14 +67,18 @@ def check_blocks() -> dict[str, Any]:
         blocks.owned(field)[...] = whole[blocks.block.slices]
         blocks.exchange(field, padded)
         wide = np.pad(whole, [*((h, h) for h in blocks.halos), (0, 0)], mode="wrap")
-        mine = tuple(slice(s.start, s.stop + 2 * h) for s, h in zip(blocks.block.slices, blocks.halos, strict=True))
+        mine = tuple(
+            slice(s.start, s.stop + 2 * h) for s, h in zip(blocks.block.slices, blocks.halos, strict=True)
+        )
         xs = (np.arange(mine[2].start, mine[2].stop) - blocks.halos[2]) * (3.0 / lattice.nx)
         found[name] = {
             "owned": [int(counts.min()), int(counts.max())],
             "ranks": int(np.prod(blocks.grid)),
             "halo": worst(float(np.abs(blocks.padded(padded) - wide[mine]).max())),
             "coordinates": worst(float(np.abs(blocks.coordinates(3.0, 2) - xs).max())),
-            "narrowest": -int(worst(-min(n for n, h in zip(blocks.block.shape, blocks.halos, strict=True) if h))),
+            "narrowest": -int(
+                worst(-min(n for n, h in zip(blocks.block.shape, blocks.halos, strict=True) if h))
+            ),
         }
         for vector in (field, padded):
             vector.destroy()

@@ -17,7 +17,6 @@ import numpy as np
 import sympy
 
 from lattice.geometry.lattice import Lattice
-from lattice.kernels.forms import scalar_names
 from lattice.laws.law import Deriv, Law, X, Y
 from tests.problems import Array, evaluate, law_of, values_of
 
@@ -75,7 +74,7 @@ def _frame(law: Law, component: str, fields: list[sympy.Expr]) -> sympy.Expr:
     """Return what the moving and turning frame and the source add to u_t of an evolving equation."""
     field = fields[law.components.index(component)]
     total = sympy.Integer(0)
-    if "rotation" in scalar_names(law):
+    if law.rotating_pair is not None:
         first, second = (fields[law.components.index(c)] for c in law.rotating_pair)
         turned = {law.rotating_pair[0]: second, law.rotating_pair[1]: -first}
         total += sympy.Symbol("rotation", real=True) * turned.get(component, 0)
@@ -118,4 +117,4 @@ def errors(name: str, lattice: Lattice, varies: str, refined: str) -> Array:
     places = [t - half if evolving else t for evolving in law.evolving]
     wanted = [np.broadcast_to(f(at, x, y, *numbers), t.shape) for f, at in zip(exact, places, strict=True)]
     difference = found - np.stack(wanted, axis=-1)
-    return np.sqrt((difference**2).mean(axis=(0, 1, 2)))
+    return np.asarray(np.sqrt((difference**2).mean(axis=(0, 1, 2))))

@@ -24,13 +24,15 @@ lattices = st.one_of(
 )
 
 
-def narrowest(lattice: Lattice, grid: tuple[int, int, int]) -> list[int]:
+def narrowest(lattice: Lattice, grid: tuple[int, ...]) -> list[int]:
     """Return the fewest nodes of a rank on each axis that is cut; the remainder goes to other ranks."""
     return [n // p for n, p in zip(lattice.shape, grid, strict=True) if p > 1]
 
 
 @given(st.integers(1, 24), lattices, halos)
-def test_a_grid_uses_all_ranks_and_leaves_each_at_least_a_halo(ranks: int, lattice: Lattice, halo: int) -> None:
+def test_a_grid_uses_all_ranks_and_leaves_each_at_least_a_halo(
+    ranks: int, lattice: Lattice, halo: int
+) -> None:
     grid = process_grid(ranks, lattice, halo)
     possible = [
         g

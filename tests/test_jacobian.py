@@ -49,9 +49,7 @@ def numpy_kernels() -> Iterator[None]:
 def difference(function: Callable[[float], Array], derivative: int, step: float) -> Array:
     """Return a derivative of a function of one number at 0, by central differences of order 8."""
     weights = central(derivative, 8)
-    terms = [
-        float(w) * function((k - len(weights) // 2) * step) for k, w in enumerate(weights) if w != 0
-    ]
+    terms = [float(w) * function((k - len(weights) // 2) * step) for k, w in enumerate(weights) if w != 0]
     return np.asarray(sum(terms[1:], terms[0])) / step**derivative
 
 

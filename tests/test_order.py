@@ -31,7 +31,7 @@ OWN_CASES = [(name, axis, 4) for name in OWN for axis in "xy"[: law_of(name).dim
 
 def observed(coarse: Array, fine: Array, nodes: tuple[int, int]) -> Array:
     """Return the order p of every equation's error E = C h**p."""
-    return np.log(coarse / fine) / np.log(nodes[1] / nodes[0])
+    return np.asarray(np.log(coarse / fine) / np.log(nodes[1] / nodes[0]))
 
 
 @pytest.mark.parametrize(("name", "axis", "order"), NAMED_CASES + OWN_CASES)

@@ -47,7 +47,10 @@ def test_the_solution_does_not_depend_on_the_ranks(ranks: int, solve: str) -> No
     case, kind = solve.split()
     found, alone = state(case, kind, ranks), state(case, "direct", 1)
     assert np.abs(found - alone).max() < 1e-10 * np.abs(alone).max()
-    values, wanted = results(ranks)["solves"][solve]["values"], results(1)["solves"][f"{case} direct"]["values"]
+    values, wanted = (
+        results(ranks)["solves"][solve]["values"],
+        results(1)["solves"][f"{case} direct"]["values"],
+    )
     assert values == pytest.approx(wanted, rel=1e-10, abs=1e-12)
 
 
