@@ -7,6 +7,7 @@ from pathlib import Path
 
 import numpy as np
 import pytest
+from mpi4py import MPI
 
 from lattice.errors import InputError
 from lattice.geometry.lattice import Lattice
@@ -15,10 +16,12 @@ from lattice.solve.coarse_lattice import RULED, TAIL, Choice, choose
 from lattice.spectral.transform import Transform
 from lattice.store.statefile import read_meta, read_whole
 from lattice.system.constant_part import ConstantPart
+from lattice.system.system import System
 from tests.levels import marched, window
 from tests.mpi import run_module
 from tests.parallel import attracting_film
-from tests.problems import TURN
+from tests.problems import TURN, law_of
+from tests.solving import scalars
 
 FILM = "kuramoto-sivashinsky"
 BOX = {"period": 25.0, "length_x": 25.0}
@@ -86,6 +89,15 @@ def test_keys_of_the_job_override_what_would_be_chosen():
     assert found.smoother == "slabs"
     # What is not given is chosen still.
     assert choice(FILM, FINE, keys={"nt": 40}, **BOX).lattice.nx == choice(FILM, FINE, **BOX).lattice.nx
+
+
+def test_few_levels_are_enough_for_the_halo_of_the_coarse_order():
+    # A short period needs few levels; the halo of order 8 is as wide in time as in space.
+    box = {"period": 1.0, "length_x": 25.0}
+    found = choice(FILM, Lattice(20, 1, 50), keys={"order": 8}, **box)
+    system = System(law_of(FILM), found.lattice, scalars(law_of(FILM), **box), (), {}, MPI.COMM_SELF)
+    assert min(found.lattice.nt, found.lattice.nx) >= max(system.blocks.halos)
+    system.destroy()
 
 
 def test_a_lattice_that_is_itself_too_coarse_is_refused_with_a_remedy():

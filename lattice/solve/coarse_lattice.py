@@ -78,10 +78,11 @@ def choose(system: System, transform: Transform, constant: ConstantPart, options
             counts[name] = min(asked, nodes)
         else:
             counts[name] = _axis_count(name, nodes, tails[name], smoother, system, constant, ratio_x)
-    for name in ("nx", "ny"):
-        if counts[name] > 1:
-            counts[name] = min(getattr(fine, name), max(counts[name], _least_nodes(system, order)))
     order_t = min(6, max(fine.order_t, 4))
+    least = _least_nodes(system, order)
+    for name, needed in (("nt", max(least[0], order_t)), ("nx", least[1]), ("ny", least[1])):
+        if counts[name] > 1:
+            counts[name] = min(getattr(fine, name), max(counts[name], needed))
     coarse = replace(
         fine, nt=counts["nt"], ny=counts["ny"], nx=counts["nx"], order_t=order_t, order_x=order, order_y=order
     )
@@ -117,11 +118,14 @@ def _text(lattice: Lattice) -> str:
     return " x ".join(str(n) for n in lattice.shape if n > 1)
 
 
-def _least_nodes(system: System, order: int) -> int:
-    """Return the fewest nodes along an axis on which an order can be assembled and its halo exchanged."""
+def _least_nodes(system: System, order: int) -> tuple[int, int]:
+    """Return the fewest levels, and nodes in space, with which an order's halo fits and it can be assembled.
+
+    The halo is as wide in time as in space.
+    """
     forms = system.operator.forms
     halo = max(widest([forms[name] for name in ("residual", "tangent", "adjoint")], order, order))
-    return max(halo, 2 * max(widest([forms["tangent"]], order, order)) + 1)
+    return halo, max(halo, 2 * max(widest([forms["tangent"]], order, order)) + 1)
 
 
 def _axis_tails(system: System, transform: Transform) -> dict[str, NDArray[np.float64]]:
