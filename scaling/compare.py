@@ -158,7 +158,7 @@ def main() -> int:
     if options.one:
         print(json.dumps(measure(*options.one)))
         return 0
-    from scaling.machine import describe
+    from scaling.record import describe
 
     rows = []
     for size in options.sizes.split(","):

@@ -148,7 +148,7 @@ def main() -> int:
     from mpi4py import MPI
 
     from lattice.solve.petsc import start_petsc
-    from scaling.machine import describe
+    from scaling.record import describe
 
     parser = argparse.ArgumentParser(description=__doc__)
     parser.add_argument("--quick", action="store_true", help="only cases of up to 100 000 unknowns")

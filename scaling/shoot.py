@@ -154,7 +154,7 @@ def by_shooting(state: Any, field: Any, segments: int) -> dict[str, Any]:
 
 def main() -> int:
     """Try all states; print a table and write JSON."""
-    from scaling.machine import describe
+    from scaling.record import describe
 
     parser = argparse.ArgumentParser(
         description=__doc__, formatter_class=argparse.RawDescriptionHelpFormatter

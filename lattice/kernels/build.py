@@ -21,7 +21,7 @@ import sympy
 from numpy.typing import NDArray
 
 from lattice.kernels import slices
-from lattice.kernels.forms import X, Y, Form
+from lattice.kernels.forms import Form, X, Y
 from lattice.kernels.rows import generate_rows, row_points
 from lattice.kernels.scheme import Scheme, space_stencil, time_weights
 from lattice.kernels.source import Source, Table, generate
@@ -205,17 +205,18 @@ def have_numba() -> bool:
     """Return whether Numba can be used; its import may fail on an unknown NumPy."""
     try:
         import numba  # noqa: F401 - the import itself is the question
-    except Exception:
+    except Exception:  # noqa: BLE001 - ImportError or whatever its own version checks raise
         return False
     return os.environ.get("LATTICE_KERNELS", "numba") != "numpy"
 
 
 def cache_folder() -> Path:
     """Return the folder of generated kernels: `NUMBA_CACHE_DIR`, else a per-user cache."""
-    root = os.environ.get("NUMBA_CACHE_DIR") or os.path.join(
-        os.environ.get("XDG_CACHE_HOME", os.path.expanduser("~/.cache")), "lattice"
-    )
-    return Path(root) / "kernels"
+    given = os.environ.get("NUMBA_CACHE_DIR")
+    if given:
+        return Path(given) / "kernels"
+    home = os.environ.get("XDG_CACHE_HOME")
+    return (Path(home) if home else Path.home() / ".cache") / "lattice" / "kernels"
 
 
 def _load(form: Form, text: str) -> Callable[..., None]:
@@ -288,4 +289,4 @@ def _replace(path: Path, text: str) -> None:
     descriptor, temporary = tempfile.mkstemp(dir=path.parent, suffix=".part")
     with os.fdopen(descriptor, "w") as file:
         file.write(text)
-    os.replace(temporary, path)
+    Path(temporary).replace(path)

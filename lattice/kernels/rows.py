@@ -108,7 +108,7 @@ def _levels(
     lines = []
     for k in range(scheme.levels) if output.evolving else (scheme.below,):
         level = f"n + {scheme.halo_t - scheme.below + k}"
-        lines += emitter.row_lines(level, 2) + ["  for i in range(lx):"]
+        lines += [*emitter.row_lines(level, 2), "  for i in range(lx):"]
         start = first + (k * len(points) if output.evolving else 0)
         midpoint = f"w{scheme.levels + k} * " if output.evolving else ""
         for index, texts in enumerate(points.values()):

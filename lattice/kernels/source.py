@@ -11,7 +11,7 @@ from dataclasses import dataclass, field
 
 import sympy
 
-from lattice.kernels.forms import X, Y, Form, Output
+from lattice.kernels.forms import Form, Output, X, Y
 from lattice.kernels.scheme import Scheme, space_stencil
 from lattice.laws.law import Deriv
 
@@ -213,9 +213,7 @@ class Emitter:
             self.table.stencils[key] = self.table.take(len(offsets))
         first = self.table.stencils[key]
         self.flops += 2 * len(offsets) - 1
-        terms = (
-            f"w{first + k} * {self.emit(inner, dy + oy, dx + ox)}" for k, (oy, ox) in enumerate(offsets)
-        )
+        terms = (f"w{first + k} * {self.emit(inner, dy + oy, dx + ox)}" for k, (oy, ox) in enumerate(offsets))
         return "(" + " + ".join(terms) + ")"
 
 
@@ -274,7 +272,7 @@ def _opening(form: Form, scheme: Scheme, buffers: int) -> list[str]:
 
 def _ring_levels(emitter: Emitter, scheme: Scheme, texts: list[str]) -> list[str]:
     count = len(texts)
-    lines = [
+    return [
         f"   slot = (m % {scheme.levels}) * {count}",
         "   for j in range(rows):",
         *emitter.row_lines(f"m + {scheme.halo_t - scheme.below}", 4),
@@ -282,7 +280,6 @@ def _ring_levels(emitter: Emitter, scheme: Scheme, texts: list[str]) -> list[str
         "    for i in range(cols):",
         *(f"     g{e}[i] = {text}" for e, text in enumerate(texts)),
     ]
-    return lines
 
 
 def _combine(form: Form, scheme: Scheme, evolving: list[int], emitter: Emitter) -> list[str]:

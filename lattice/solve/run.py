@@ -278,7 +278,7 @@ class _Run:
         )
         self.files.write_summary(summary)
         if summary.mean_square < TRIVIAL:
-            self.report("caution: the state is zero everywhere; start from a field nearer to what you look for")
+            self.report("caution: the state is zero everywhere; start from a field nearer to a wanted one")
         if self.job.output.picture:
             self._draw()
         self.report(f"{outcome}: {result.reason}; {_words(summary)}; files in {self.files.path}")
