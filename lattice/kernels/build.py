@@ -234,17 +234,28 @@ def _load(form: Form, text: str) -> Callable[..., None]:
     if name not in sys.modules:
         path = _write_once(cache_folder(), name, module_text)
         _vectorise_many_rows()
-        spec = importlib.util.spec_from_file_location(name, path)
-        assert spec is not None and spec.loader is not None
-        module = importlib.util.module_from_spec(spec)
-        sys.modules[name] = module  # before it runs: Numba looks the module up when it loads its cache
         try:
-            spec.loader.exec_module(module)
-        except BaseException:
-            del sys.modules[name]
-            raise
+            _import(name, path)
+        except Exception:  # noqa: BLE001 - a damaged or foreign cache entry raises whatever unpickling does
+            for stale in path.parent.glob(f"__pycache__/{name}*"):
+                stale.unlink(missing_ok=True)
+            _import(name, path)
     loop: Callable[..., None] = sys.modules[name].__dict__["kernel"]
     return loop
+
+
+def _import(name: str, path: Path) -> None:
+    """Run a module under a name; it is known by it while it runs, as Numba's cache needs."""
+    spec = importlib.util.spec_from_file_location(name, path)
+    assert spec is not None
+    assert spec.loader is not None
+    module = importlib.util.module_from_spec(spec)
+    sys.modules[name] = module
+    try:
+        spec.loader.exec_module(module)
+    except BaseException:
+        del sys.modules[name]
+        raise
 
 
 def _interpret(text: str) -> Callable[..., None]:
