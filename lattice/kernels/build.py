@@ -237,7 +237,9 @@ def _load(form: Form, text: str) -> Callable[..., None]:
         try:
             _import(name, path)
         except Exception:  # noqa: BLE001 - a damaged or foreign cache entry raises whatever unpickling does
-            for stale in path.parent.glob(f"__pycache__/{name}*"):
+            # Numba keeps its files beside the module, or in another folder of its cache folder.
+            places = (*path.parent.glob(f"__pycache__/{name}*"), *path.parent.parent.glob(f"*/{name}*.nb?"))
+            for stale in places:
                 stale.unlink(missing_ok=True)
             _import(name, path)
     loop: Callable[..., None] = sys.modules[name].__dict__["kernel"]
