@@ -94,8 +94,8 @@ def _start_ranks(options: argparse.Namespace) -> int:
     """Judge the job here, so that a refusal costs no launch, then start the ranks."""
     from lattice.cli.launch import check_crowd, find_launcher, is_oversubscribed, launch_command, run_ranks
 
-    check_crowd(options.ranks)
     _read_job(options, options.ranks)
+    check_crowd(options.ranks)
     launcher = find_launcher(options.launcher)
     if is_oversubscribed(options.ranks):
         print(f"note: {options.ranks} ranks share fewer cores, and will be slow", file=sys.stderr)
