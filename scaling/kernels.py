@@ -87,7 +87,7 @@ def measure(nodes: int, repeats: int) -> dict[str, Any]:
         "source_u": 0.0,
         **law.defaults,
     }
-    u, v, out = operator.blocks.vector(), operator.blocks.vector(), operator.blocks.vector()
+    u, v = operator.blocks.vector(), operator.blocks.vector()
     u.setRandom()
     v.setRandom()
     operator.linearise(u, values)
