@@ -104,7 +104,7 @@ def check_products(name: str, lattice: Lattice) -> dict[str, float]:
             wanted[kind][..., c] -= field[..., c].mean(axis=(1, 2), keepdims=True)
     operator = system.operator
     x, y = system.blocks.vector(), system.blocks.vector()
-    found = {}
+    found = {"levels on more ranks than one": float(system.blocks.grid[0] < COMM.size)}
 
     def compare(kind: str, whole: Array) -> None:
         error = float(np.abs(system.blocks.owned(y) - whole[mine]).max())
@@ -237,7 +237,7 @@ def main(folder: Path) -> None:
     found = {
         "blocks": check_blocks(),
         "refusal": refusal(),
-        "products": {name: check_products(name, lattice) for name, lattice in PRODUCTS.items()},
+        "products": {case: check_products(*problem) for case, problem in PRODUCTS.items()},
         "solves": {name: solve(folder, *name.split()) for name in SOLVES},
     }
     if COMM.rank == 0:
