@@ -55,6 +55,18 @@ def test_the_text_of_every_loop_computes_what_slices_compute(name: str, steady: 
         assert relative(found, evaluate(name, kind, lattice, values, *fields)) < ROUNDING, kind
 
 
+@pytest.mark.parametrize("orders", [(6, 2), (2, 8), (6, 8)], ids=str)
+@pytest.mark.parametrize("name", ["burgers", "constrained"])
+def test_the_halo_serves_orders_in_time_and_space_that_differ(name: str, orders: tuple[int, int]) -> None:
+    values, lattice = values_of(law_of(name)), Lattice(11, 1, 30, 1, *orders)
+    for kind in ("residual", "tangent", "adjoint"):
+        fields = fields_of(name, kind, lattice)
+        loop = prepared(name, kind, lattice, values, compiled=False)
+        assert min(loop.scheme.halo_t, loop.scheme.halo_x) >= max(orders) // 2
+        found = run_text(loop, np.full_like(fields[0], np.nan), *(padded(f, loop.scheme) for f in fields))
+        assert relative(found, evaluate(name, kind, lattice, values, *fields)) < ROUNDING, kind
+
+
 def rows_times(rows: Rows, values: Array, scheme: Scheme, v: Array, evolving: list[bool]) -> Array:
     """Return the product of a filled row array (levels, rows, columns, stride) with a whole field."""
     outer = padded(v, scheme)
