@@ -16,6 +16,7 @@ from lattice.errors import LatticeError
 from lattice.geometry.lattice import Lattice
 from lattice.job.schema import PatchesSection, SolveSection
 from lattice.laws.catalogue import read_law
+from lattice.solve import reasons
 from lattice.solve.newton import Newton, Step
 from lattice.solve.registry import make_preconditioner
 from lattice.solve.stop import StopFlag
@@ -192,6 +193,15 @@ def test_a_residual_that_is_not_finite_ends_the_solve() -> None:
     newton.destroy()
     x.destroy()
     system.destroy()
+
+
+@pytest.mark.parametrize("name", ["SNORM_RELATIVE", "LINE_SEARCH", "MAX_IT", "LINEAR_SOLVE", "DTOL"])
+def test_every_way_petsc_ends_a_solve_has_words(name: str) -> None:
+    from petsc4py import PETSc
+
+    kinds = PETSc.SNES.ConvergedReason
+    number = getattr(kinds, f"CONVERGED_{name}", None) or getattr(kinds, f"DIVERGED_{name}")
+    assert not reasons.nonlinear_text(int(number)).startswith("PETSc")
 
 
 def test_a_request_between_steps_keeps_the_last_step() -> None:

@@ -8,6 +8,7 @@ from __future__ import annotations
 CONVERGED, STOPPED, STEP_LIMIT, STALLED = 2, 5, -5, -6
 
 _TEXTS = {
+    4: "no step lowers the residual any more",
     -3: "a linear solve failed",
     -4: "the residual is not finite",
     -5: "the largest number of Newton steps is used up",
