@@ -24,12 +24,14 @@ from lattice.kernels import slices
 from lattice.kernels.forms import Form, X, Y
 from lattice.kernels.rows import generate_rows, row_points
 from lattice.kernels.scheme import Scheme, space_stencil, time_weights
-from lattice.kernels.source import Source, Table, generate
+from lattice.kernels.source import Source, generate
+from lattice.kernels.table import Table
 
 Array = NDArray[np.float64]
 
 # Reassociation is left out: sums must not depend on a processor's vector width. NaN stays NaN.
 FAST = "{'nsz', 'arcp', 'contract', 'afn'}"
+KNOWN_LLVM = range(14, 21)  # an option that LLVM does not know ends the process
 
 
 @dataclass(frozen=True)
@@ -65,7 +67,7 @@ class Loop:
 
     def __init__(self, form: Form, scheme: Scheme, source: Source, compiled: bool) -> None:
         self.form, self.scheme, self.source = form, scheme, source
-        self.function = _load(form, source.text) if compiled else None
+        self.function = _load(form, source) if compiled else None
         self._fill = _WeightFiller(source.table, form, scheme)
         self.weights = np.zeros(source.table.length)
         self.static_fields = np.zeros((0, 0, 0))
@@ -151,7 +153,10 @@ class _WeightFiller:
         self.table, self.scheme = table, scheme
         names = [sympy.Symbol(name, real=True) for name in (*form.scalars, "length_x", "length_y")]
         self.names = list(dict.fromkeys(names))
-        self.coefficients = [[number_of(t[0], self.names) for t in linear.terms] for linear in table.linears]
+        self.coefficients = [
+            [number_of(t[0], self.names) for t in stencil.terms] for stencil in table.stencils.values()
+        ]
+        self.constants = [number_of(constant, self.names) for constant in table.constants]
         self.static_functions = [
             sympy.lambdify([X, Y, *self.names], expression, "numpy") for expression in table.statics
         ]
@@ -162,18 +167,16 @@ class _WeightFiller:
         weights[:levels] = np.array(difference) / (geometry.dt if levels > 1 else 1.0)
         weights[levels : 2 * levels] = midpoint
         numbers = [values.get(symbol.name, 0.0) for symbol in self.names]
-        for linear, functions in zip(self.table.linears, self.coefficients, strict=True):
-            total = dict.fromkeys(linear.offsets, 0.0)
-            for (_, a, b), function in zip(linear.terms, functions, strict=True):
+        for stencil, functions in zip(self.table.stencils.values(), self.coefficients, strict=True):
+            total: dict[tuple[int, int], float] = {}
+            for (_, a, b), function in zip(stencil.terms, functions, strict=True):
                 factor = function(numbers)
                 for offset, weight in self.stencil(a, b, geometry).items():
-                    total[offset] += factor * weight
-            weights[linear.first : linear.first + len(total)] = list(total.values())
-        for (a, b), first in self.table.stencils.items():
-            stencil = self.stencil(a, b, geometry)
-            weights[first : first + len(stencil)] = [stencil[key] for key in sorted(stencil)]
-        for name, place in self.table.scalars.items():
-            weights[place] = values[name]
+                    total[offset] = total.get(offset, 0.0) + factor * weight
+            last = stencil.first + len(stencil.groups)
+            weights[stencil.first : last] = [total[group[0][:2]] for group in stencil.groups]
+        for function, place in zip(self.constants, self.table.constants.values(), strict=True):
+            weights[place] = function(numbers)
 
     def stencil(self, a: int, b: int, geometry: Geometry) -> dict[tuple[int, int], float]:
         """Return the weights of a derivative on the geometry's spacings."""
@@ -219,21 +222,24 @@ def cache_folder() -> Path:
     return (Path(home) if home else Path.home() / ".cache") / "lattice" / "kernels"
 
 
-def _load(form: Form, text: str) -> Callable[..., None]:
+def _load(form: Form, source: Source) -> Callable[..., None]:
     """Write a kernel's module once under a name made of its content, import and compile it.
 
     Many processes may do so at once: the module is renamed into place, and Numba's own index is
     written the same way.
     """
-    signature = "void(f8[:,:,::1], " + "f8[:,:,::1], " * len(form.fields) + "f8[:,:,::1], f8[::1])"
+    block, line = "f8[:,:,::1]", "f8[::1]"
+    arguments = [block] * (2 + len(form.fields)) + [line]
+    arguments += ["i8", "i8"] + [line] * source.buffers if source.buffers else []
+    options = f"cache=True, error_model='numpy', fastmath={FAST}, pipeline_class=DistinctArrays"
+    compiled = "def loops(" if source.buffers else "def kernel("
     module_text = (
-        "import numba\nimport numpy as np\n\n\n"
-        f"@numba.njit('{signature}', cache=True, error_model='numpy', fastmath={FAST})\n" + text
-    )
+        "import numba\nimport numpy as np\n\nfrom lattice.kernels.distinct import DistinctArrays\n\n\n"
+    ) + source.text.replace(compiled, f"@numba.njit('void({', '.join(arguments)})', {options})\n{compiled}")
     name = f"lattice_{form.name}_{hashlib.sha256(module_text.encode()).hexdigest()[:24]}"
     if name not in sys.modules:
         path = _write_once(cache_folder(), name, module_text)
-        _vectorise_many_rows()
+        _set_vectoriser()
         try:
             _import(name, path)
         except Exception:  # noqa: BLE001 - a damaged or foreign cache entry raises whatever unpickling does
@@ -269,19 +275,21 @@ def _interpret(text: str) -> Callable[..., None]:
     return loop
 
 
-def _vectorise_many_rows() -> None:
-    """Let LLVM check more row pointers for overlap before it gives up vectorising a loop.
+def _set_vectoriser() -> None:
+    """Keep LLVM from turning a row's shifted values into scalars carried from node to node.
 
-    Its default of 8 is below the 15 or more rows a two-dimensional stencil reads.
+    That pass ("load PRE") runs before the vectoriser and leaves loops that cannot be vectorised. Nor are
+    vectorised loops unrolled again: it slows both the compilation and the loops.
     """
     import llvmlite.binding as llvm
 
-    if not _OPTIONS:
-        llvm.set_option("lattice", "--runtime-memory-check-threshold=256")
-        _OPTIONS.append(True)
+    if not _OPTIONS and llvm.llvm_version_info[0] in KNOWN_LLVM:
+        _OPTIONS.extend(("--enable-load-pre=false", "--unroll-runtime=false"))
+        for option in _OPTIONS:
+            llvm.set_option("lattice", option)
 
 
-_OPTIONS: list[Any] = []
+_OPTIONS: list[str] = []
 
 
 def _write_once(folder: Path, name: str, text: str) -> Path:
