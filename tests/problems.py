@@ -110,11 +110,15 @@ def geometry_of(lattice: Lattice, scheme: Scheme, values: dict[str, float]) -> G
 
 
 def prepared(name: str, kind: str, lattice: Lattice, values: dict[str, float], compiled: bool) -> Kernel:
-    """Return the kernel of one form, ready for fields padded by `padded`."""
-    scheme = scheme_of(name, lattice)
-    kernel = Kernel(form_of(name, kind), scheme, compiled)
-    kernel.prepare(geometry_of(lattice, scheme, values), values)
+    """Return the kernel of one form, ready for fields padded by `padded` until it is asked for again."""
+    kernel = _kernel(name, kind, lattice, compiled)
+    kernel.prepare(geometry_of(lattice, kernel.scheme, values), values)
     return kernel
+
+
+@cache
+def _kernel(name: str, kind: str, lattice: Lattice, compiled: bool) -> Kernel:
+    return Kernel(form_of(name, kind), scheme_of(name, lattice), compiled)
 
 
 def evaluate(name: str, kind: str, lattice: Lattice, values: dict[str, float], *fields: Array) -> Array:
