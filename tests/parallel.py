@@ -2,7 +2,9 @@
 
 from __future__ import annotations
 
+import atexit
 import json
+import shutil
 import tempfile
 from functools import cache
 from pathlib import Path
@@ -21,6 +23,7 @@ SCRIPT = Path(__file__).with_name("compute_everywhere.py")
 def folder() -> Path:
     """Return the folder that the runs read their start from and leave their states in."""
     path = Path(tempfile.mkdtemp(prefix="parallel-"))
+    atexit.register(shutil.rmtree, path, ignore_errors=True)
     np.save(path / "film.npy", attracting_film(levels=32, nodes=32)[:, None, :, None])
     return path
 
@@ -29,7 +32,7 @@ def attracting_film(levels: int, nodes: int, length: float = 17.631, period: flo
     """Return one period of an odd film state, shape (levels, nodes), marched until it has settled.
 
     P. Zgliczynski, Found. Comput. Math. 4 (2004) 157-185 (from memory): at nu = 0.127, length
-    2*pi/sqrt(nu), an attracting periodic orbit of the odd Kuramoto-Sivashinsky equation exists; its period
+    2*pi/sqrt(nu), an attracting periodic state of the odd Kuramoto-Sivashinsky equation exists; its period
     17.672 by independent recomputation.
     """
     x = np.arange(nodes) * (length / nodes)
