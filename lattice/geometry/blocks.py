@@ -183,12 +183,21 @@ class Blocks:
         return np.asarray(before[pt, py, px] + (dt * shape[1][py] + dy) * shape[2][px] + dx)
 
     def vector(self) -> Any:
-        """Return a new field vector. Collective; the caller destroys it."""
-        return self.dm.createGlobalVec()
+        """Return a new field vector, zero. Collective; the caller destroys it."""
+        from petsc4py import PETSc
+
+        sizes = (self.owned_size, self.size)
+        field = PETSc.Vec().createWithArray(
+            _zeros(self.owned_size), size=sizes, bsize=self.components, comm=self.comm
+        )
+        field.setDM(self.dm)
+        return field
 
     def padded_vector(self) -> Any:
-        """Return a new vector of this rank's padded block; the caller destroys it."""
-        return self.dm.createLocalVec()
+        """Return a new vector of this rank's padded block, zero; the caller destroys it."""
+        from petsc4py import PETSc
+
+        return PETSc.Vec().createWithArray(_zeros(int(np.prod(self.padded_shape))), comm=PETSc.COMM_SELF)
 
     def exchange(self, field: Any, padded: Any) -> None:
         """Fill a padded vector from a field vector, halo included. Collective."""
@@ -210,6 +219,16 @@ class Blocks:
     def destroy(self) -> None:
         """Free the DMDA. Collective."""
         self.dm.destroy()
+
+
+def _zeros(count: int) -> Array:
+    """Return zeros in memory for which NumPy asks Linux for large pages, as PETSc does not.
+
+    Loops over large fields are up to a third faster on them.
+    """
+    array = np.empty(count)  # of `numpy.zeros` that is not asked
+    array.fill(0.0)
+    return array
 
 
 def check_halo(lattice: Lattice, halo: int) -> None:
