@@ -29,6 +29,7 @@ def solve_options(**coarse: Any) -> Any:
         "ny": None,
         "order": None,
         "solver": "direct",
+        "lu_ranks": None,
         "smoother": "auto",
         "shift": 1.0,
         "slabs": None,

@@ -148,10 +148,10 @@ def test_transposes_are_exact_on_any_ranks(ranks: int) -> None:
 
 
 def test_one_patch_that_is_the_whole_lattice_solves_like_direct() -> None:
-    # Nothing pins the Jacobian of this patch, which is singular at the solution.
+    # The Jacobian of this patch is singular at the solution; it is pinned as the direct solver pins it.
     solve = solve_film(film_start(), preconditioner="patches")
     assert solve.result.converged
-    assert max(step.linear_iterations for step in solve.result.steps) <= 4
+    assert max(step.linear_iterations for step in solve.result.steps) <= 1
     solve.destroy()
 
 

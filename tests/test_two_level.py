@@ -111,6 +111,11 @@ def test_every_number_of_ranks_gives_the_same_and_the_exact_transpose(case, rank
         assert difference < (1e-7 if case.startswith("kolmogorov") else 1e-10) * np.abs(alone).max()
 
 
+@pytest.mark.parametrize("ranks", [2, 3, 5])
+def test_a_coarse_lu_on_fewer_ranks_is_the_same_inverse(ranks: int) -> None:
+    assert results(ranks)["fewer LU ranks"] < 1e-10
+
+
 FILM = "kuramoto-sivashinsky"
 # Spacings 0.35 in t, 0.5 in x on a coarse lattice of 0.7 and 1.0: the coarsest that carries the active waves.
 SMALL = {"period": 25.0, "length_x": 25.0}

@@ -181,6 +181,29 @@ def check_preconditioner(name: str, smoother: str, folder: Path) -> dict[str, fl
     return {"adjoint": adjoint}
 
 
+def check_fewer_lu_ranks() -> float:
+    """Return how far coarse LUs on some of the ranks are from one on all, and so their transposes."""
+    fine, coarse = LEVELS["kuramoto-sivashinsky"]
+    system = random_system("kuramoto-sivashinsky", fine, COMM)
+    r, found = random_direction(system, 5), []
+    for ranks in (None, 1, 2):
+        made = two_level(system, coarse, lu_ranks=ranks)
+        made.update()  # again: factors are replaced
+        forward, back = system.vector(), system.vector()
+        made.apply(r, forward)
+        made.apply_transpose(r, back)
+        found.append((forward, back))
+        made.destroy()
+    off = 0.0
+    for some in found[1:]:
+        for vector, whole in zip(some, found[0], strict=True):
+            size = whole.norm()
+            vector.axpy(-1.0, whole)
+            off = max(off, vector.norm() / size)
+    system.destroy()
+    return off
+
+
 def refusal() -> str:
     """Return what transforms that these ranks cannot share are refused with."""
     blocks = Blocks(Lattice(1, 1, 40), 1, 1, COMM)
@@ -201,6 +224,7 @@ def main(folder: Path, levels: bool) -> None:
             for smoother in ("spectral", "slabs")
         },
         "refusal": refusal(),
+        "fewer LU ranks": check_fewer_lu_ranks() if levels else 0.0,
     }
     if COMM.rank == 0:
         print(json.dumps(found))

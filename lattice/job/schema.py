@@ -149,6 +149,11 @@ class CoarseSection(Section):
         " (see [solve.patches])",
         "direct",
     )
+    lu_ranks: Count | None = _key(
+        "most ranks that share the coarse lattice's LU; fewer than all where more only add messages",
+        None,
+        shown="all",
+    )
     smoother: Literal["auto", "spectral", "slabs"] = _key(
         "what acts on waves the coarse lattice lacks; `auto` compares the law's coefficients there", "auto"
     )

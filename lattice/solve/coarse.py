@@ -101,7 +101,9 @@ class TwoLevel:
     def _make_solver(self) -> Preconditioner:
         if self.options.coarse.solver == "patches":
             return PatchedCoarse(self.coarse, self.options)
-        return Bordering(self.coarse, Direct(self.coarse, prefix="coarse_"))
+        return Bordering(
+            self.coarse, Direct(self.coarse, prefix="coarse_", ranks=self.options.coarse.lu_ranks)
+        )
 
     def _make_smoother(self, name: str) -> Smoother:
         options = self.options.coarse

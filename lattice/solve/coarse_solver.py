@@ -6,7 +6,7 @@ from typing import TYPE_CHECKING, Any
 
 from lattice.errors import LatticeError
 from lattice.solve.bordering import Bordering
-from lattice.solve.patches import Patches, block_patches
+from lattice.solve.patches import RankPatches
 
 if TYPE_CHECKING:
     from lattice.system.system import System
@@ -54,9 +54,7 @@ class PatchedCoarse:
         from petsc4py import PETSc
 
         self.system = system
-        self._bordering = Bordering(
-            system, Patches(system, block_patches(system, options.patches), "coarse_patches_")
-        )
+        self._bordering = Bordering(system, RankPatches(system, options, "coarse_patches_"))
         vector = system.vector()
         size = (vector.getLocalSize(), vector.getSize())
         vector.destroy()

@@ -151,12 +151,16 @@ class Direct:
         The job's solve section; nothing of it is used here.
     prefix : str
         Of its options in PETSc's database.
+    ranks : int, optional
+        Most ranks that share the factors; all by default.
     """
 
-    def __init__(self, system: System, options: Any = None, prefix: str = "direct_") -> None:
+    def __init__(
+        self, system: System, options: Any = None, prefix: str = "direct_", ranks: int | None = None
+    ) -> None:
         self.system = system
         self._assembled = AssembledJacobian(system.operator)
-        self._lu = Factorisation(prefix, system.comm)
+        self._lu = _factorisation(prefix, system.comm, ranks)
         self.pins: list[tuple[int, float]] = []
 
     def update(self) -> None:
@@ -182,6 +186,15 @@ class Direct:
         """Free factors and matrix. Collective."""
         self._lu.destroy()
         self._assembled.destroy()
+
+
+def _factorisation(prefix: str, comm: Any, ranks: int | None) -> Any:
+    """Return LU factors on all ranks, or on a number of them."""
+    if ranks is None or ranks >= comm.size:
+        return Factorisation(prefix, comm)
+    from lattice.solve.gathered import GatheredFactorisation
+
+    return GatheredFactorisation(prefix, comm, ranks)
 
 
 def choose_pins(system: System, matrix: Any) -> list[tuple[int, float]]:

@@ -19,7 +19,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from lattice.errors import FactorisationError
-from lattice.solve.direct import Factorisation
+from lattice.solve.direct import Factorisation, choose_pins
 from lattice.store.agreement import raise_together
 from lattice.system.assembly import AssembledJacobian, rescale_gauge
 
@@ -130,10 +130,10 @@ class Patches:
 
         Raises
         ------
-        FactorisationError
+        LatticeError
             On every rank, if a patch cannot be factorised on any.
         """
-        matrix = self._assembled.update()
+        matrix = self._pinned(self._assembled.update())
         for old in self._matrices:
             old.destroy()
         self._matrices = matrix.createSubMatrices(self._sets)
@@ -144,6 +144,10 @@ class Patches:
             except FactorisationError as error:
                 failure = error
         raise_together(self.system.operator.comm, failure)
+
+    def _pinned(self, matrix: Any) -> Any:
+        """Return the matrix to cut the patches from."""
+        return matrix
 
     def _numbers(self, spans: tuple[Span, Span, Span], overlaps: tuple[int, int, int]) -> NDArray[np.int32]:
         """Return the numbers of a patch's unknowns in PETSc's order, wrapped around the axes, sorted."""
@@ -204,7 +208,19 @@ class Patches:
 
 
 class RankPatches(Patches):
-    """The `patches` preconditioner: each rank's block, or the smaller patches the job asks for."""
+    """The `patches` preconditioner: each rank's block, or the smaller patches the job asks for.
 
-    def __init__(self, system: System, options: Any) -> None:
-        super().__init__(system, block_patches(system, options.patches))
+    A patch that is the whole lattice, as on one rank, is as singular as the Jacobian and is pinned
+    like it.
+    """
+
+    def __init__(self, system: System, options: Any, prefix: str = "patches_") -> None:
+        super().__init__(system, block_patches(system, options.patches), prefix)
+        whole = any(rows.size == system.blocks.size for rows in self._rows)
+        self._some_whole = bool(system.comm.allreduce(int(whole)))
+
+    def _pinned(self, matrix: Any) -> Any:
+        if self._some_whole:
+            self.pins = choose_pins(self.system, matrix)
+            self._assembled.add_to_diagonal(self.pins)
+        return matrix
