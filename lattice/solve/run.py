@@ -17,10 +17,9 @@ from lattice.geometry.lattice import Lattice
 from lattice.show.progress import header, step_line
 from lattice.solve.newton import Newton, NewtonResult, Step
 from lattice.solve.petsc import start_petsc
+from lattice.solve.refine import carry
 from lattice.solve.registry import make_preconditioner
 from lattice.solve.stop import StopFlag
-from lattice.spectral.transfer import Transfer
-from lattice.spectral.transform import Transform
 from lattice.starts import STARTS
 from lattice.store.runfolder import RunFolder, Summary, peak_memory_mb
 from lattice.store.statefile import write_state
@@ -179,14 +178,8 @@ class _Run:
         """Return the field solved on the coarser lattice, interpolated; free the coarser system."""
         assert self._coarser is not None
         system, owned, values = self._coarser
-        coarse, fine = Transform(system.blocks), Transform(self.system.blocks)
-        transfer = Transfer(fine, coarse, (False,) * len(self.law.components))
-        small, large = system.blocks.vector(), self.system.blocks.vector()
-        system.blocks.owned(small)[...] = owned
-        transfer.prolong(small, large, rows=False)
-        refined = self.system.blocks.owned(large).copy()
-        for item in (transfer, coarse, fine, small, large, system):
-            item.destroy()
+        refined = carry(system, owned, self.system)
+        system.destroy()
         self._coarser = None
         return refined, values
 
