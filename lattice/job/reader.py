@@ -56,15 +56,36 @@ def load_job_with_cautions(
     folder : str, optional
         The run's folder, instead of the job's own.
     """
-    file = Path(path)
-    tables, overridden = lay_over(_read_toml(file), overrides)
-    try:
-        job, cautions = _resolve(tables, file)
-    except _Refused as refused:
-        raise JobErrors(refused.problems, str(path), overridden) from None
+    tables, overridden = lay_over(read_toml(Path(path)), overrides)
+    job, cautions = resolve_tables(tables, Path(path), overridden)
     if folder is not None:
         job = changed(job, output=changed(job.output, folder=folder))
     return job, cautions
+
+
+def resolve_tables(
+    tables: dict[str, Any], file: Path, overridden: Sequence[str] = ()
+) -> tuple[Job, tuple[str, ...]]:
+    """Check and resolve a job given as tables; return it with what the user should be warned of.
+
+    Parameters
+    ----------
+    tables : dict
+        As TOML has them.
+    file : Path
+        Where they stand; files that the job names are looked for beside it.
+    overridden : sequence of str
+        Keys given on the command line, which messages name as the place.
+
+    Raises
+    ------
+    JobErrors
+        With all that is wrong.
+    """
+    try:
+        return _resolve(tables, file)
+    except _Refused as refused:
+        raise JobErrors(refused.problems, str(file), overridden) from None
 
 
 class _Refused(Exception):
@@ -91,7 +112,7 @@ def _resolve(tables: dict[str, Any], file: Path) -> tuple[Job, tuple[str, ...]]:
 
 def _validated(tables: dict[str, Any]) -> Job:
     try:
-        return Job.model_validate(_frozen(tables))
+        return Job.model_validate(frozen(tables))
     except ValidationError as error:
         raise _Refused(problems_from(error.errors(include_url=False))) from None
 
@@ -119,14 +140,15 @@ def _raise_any(findings: Findings) -> None:
         raise _Refused(findings.problems)
 
 
-def _read_toml(path: Path) -> dict[str, Any]:
+def read_toml(path: Path, what: str = "job file") -> dict[str, Any]:
+    """Return the tables of a TOML file; `what` is the kind of file that messages name."""
     try:
         text = path.read_bytes().decode("utf-8")
         return tomllib.loads(text)
     except FileNotFoundError:
-        raise InputError("no such job file; check the path", file=str(path)) from None
+        raise InputError(f"no such {what}; check the path", file=str(path)) from None
     except IsADirectoryError:
-        raise InputError("is a folder, a job file is wanted", file=str(path)) from None
+        raise InputError(f"is a folder, a {what} is wanted", file=str(path)) from None
     except OSError as error:
         raise InputError(f"cannot be read: {error.strerror}", file=str(path)) from None
     except UnicodeDecodeError:
@@ -135,10 +157,10 @@ def _read_toml(path: Path) -> dict[str, Any]:
         raise InputError(f"is not valid TOML: {error}", file=str(path)) from None
 
 
-def _frozen(value: Any) -> Any:
+def frozen(value: Any) -> Any:
     """Return TOML's lists as tuples, which frozen models hold."""
     if isinstance(value, list):
-        return tuple(_frozen(item) for item in value)
+        return tuple(frozen(item) for item in value)
     if isinstance(value, dict):
-        return {key: _frozen(item) for key, item in value.items()}
+        return {key: frozen(item) for key, item in value.items()}
     return value
