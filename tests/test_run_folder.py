@@ -132,7 +132,8 @@ def test_a_new_run_removes_what_would_mislead_and_a_resumed_one_keeps_it(tmp_pat
         folder.picture.touch()
         folder.state.touch()
         folder.begin("first = 1\n", resume=True)
-        assert read_steps(folder.steps) == [{"step": 0}] and folder.summary.exists()
+        assert read_steps(folder.steps) == [{"step": 0}] and folder.picture.exists()
+        assert not folder.summary.exists(), "a run has no outcome until it ends"
         folder.begin("second = 2\n")
         assert {p.name for p in tmp_path.iterdir()} == {"job.toml", "state.h5", "run.lock"}
 

@@ -10,6 +10,7 @@ FAILED = 70
 """An error of the program or its libraries; 70 is EX_SOFTWARE of sysexits.h."""
 STOPPED_EARLY = 130
 """Interrupted before there was a state to keep; 128 + SIGINT as shells have it."""
+KNOWN = frozenset({CONVERGED, REFUSED, NOT_CONVERGED, INTERRUPTED, FAILED, STOPPED_EARLY})
 PIPE_CLOSED = 141
 """The reader of the output went away; 128 + SIGPIPE."""
 

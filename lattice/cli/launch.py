@@ -140,14 +140,17 @@ def count_cores(folder: Path = Path("/sys/devices/system/cpu")) -> int:
     return len(cores)
 
 
-def run_ranks(command: Sequence[str], environ: Mapping[str, str]) -> int:
+def run_ranks(
+    command: Sequence[str], environ: Mapping[str, str], note: Callable[[str], None] = lambda text: None
+) -> int:
     """Run a launcher to its end and return its exit code, 128 + n where signal n ended it.
 
     A first interrupt or termination reaches the ranks as SIGUSR1, on which they stop together at the
-    next step and keep the state; Open MPI would kill them a second after SIGTERM.
+    next step and keep the state; Open MPI would kill them a second after SIGTERM. What the user did is
+    told to `note` before.
     """
     end_with_parent = _end_with_parent()
-    with Relay() as relay:
+    with Relay(note) as relay:
         process = subprocess.Popen(
             list(command),
             stdin=subprocess.DEVNULL,
@@ -164,9 +167,15 @@ class Relay:
 
     A user's Ctrl-C asks the ranks to stop; the next one terminates them, a third ends them by force.
     SIGTERM and SIGHUP do the same with a time limit on each stage.
+
+    Parameters
+    ----------
+    note : callable
+        Takes in words what asks for the stop, before the ranks are asked.
     """
 
-    def __init__(self) -> None:
+    def __init__(self, note: Callable[[str], None] = lambda text: None) -> None:
+        self._note_reason = note
         self._pending: list[int] = []
         self._stage = 0
         self._deadline: float | None = None
@@ -196,6 +205,8 @@ class Relay:
                 self._go_on(process, KILL_GRACE)
 
     def _answer(self, process: subprocess.Popen[bytes], number: int) -> None:
+        if self._stage == 0 and number != signal.SIGUSR1:
+            self._note_reason("Ctrl-C" if number == signal.SIGINT else signal.Signals(number).name)
         if number == signal.SIGUSR1:
             process.send_signal(signal.SIGUSR1)
         elif number == signal.SIGINT and self._stage == 0:

@@ -92,16 +92,18 @@ def _check_petsc_options(given: list[str]) -> None:
 
 def _start_ranks(options: argparse.Namespace) -> int:
     """Judge the job here, so that a refusal costs no launch, then start the ranks."""
+    from lattice.cli.ending import Ending
     from lattice.cli.launch import check_crowd, find_launcher, is_oversubscribed, launch_command, run_ranks
 
-    _read_job(options, options.ranks)
+    job, _ = _read_job(options, options.ranks)
     check_crowd(options.ranks)
     launcher = find_launcher(options.launcher)
     if is_oversubscribed(options.ranks):
         print(f"note: {options.ranks} ranks share fewer cores, and will be slow", file=sys.stderr)
     program = [sys.executable, "-m", "lattice", *options.typed]
     command = launch_command(launcher, options.ranks, program)
-    return run_ranks(command, {**os.environ, "PYTHONUNBUFFERED": "1"})
+    ending = Ending(Path(job.output.folder or ""), options.ranks)
+    return ending.conclude(run_ranks(command, {**os.environ, "PYTHONUNBUFFERED": "1"}, ending.note))
 
 
 def _run_alone(options: argparse.Namespace) -> int:

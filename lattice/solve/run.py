@@ -78,7 +78,7 @@ def run_job(
         If the folder cannot be used, the start cannot be made, or a factorisation fails for good.
     """
     start_petsc(petsc_options)
-    with RunFolder(folder, comm) as files, StopFlag(comm) as stop:
+    with RunFolder(folder, comm) as files, StopFlag(comm, folder) as stop:
         files.begin(job_text)
         return _Run(job, files, comm, stop, report, job_text).go()
 

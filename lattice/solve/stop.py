@@ -4,8 +4,11 @@ from __future__ import annotations
 
 import signal
 from contextlib import suppress
+from pathlib import Path
 from types import FrameType
 from typing import TYPE_CHECKING, Any
+
+from lattice.store.stopnote import read_stop_note
 
 if TYPE_CHECKING:
     from mpi4py import MPI
@@ -22,10 +25,12 @@ class StopFlag:
     ----------
     comm : MPI.Comm
         The ranks that stop together.
+    folder : Path, optional
+        The run's folder, where whoever asks may have left a note that says why.
     """
 
-    def __init__(self, comm: MPI.Comm) -> None:
-        self._comm, self._seen = comm, 0
+    def __init__(self, comm: MPI.Comm, folder: Path | None = None) -> None:
+        self._comm, self._folder, self._seen, self._note = comm, folder, 0, ""
         self.agreed = 0
         self._before: dict[int, Any] = {}
 
@@ -51,9 +56,15 @@ class StopFlag:
         from mpi4py import MPI
 
         self.agreed = self._comm.allreduce(self._seen, op=MPI.MAX)
+        if self.agreed and not self._note and self._folder is not None:
+            self._note = self._comm.bcast(read_stop_note(self._folder) or self._signal())
         return self.agreed != 0
+
+    def _signal(self) -> str:
+        name = signal.Signals(self.agreed).name if self.agreed else ""
+        return "Ctrl-C" if name == "SIGINT" else name
 
     @property
     def name(self) -> str:
-        """Name of the signal agreed on."""
-        return signal.Signals(self.agreed).name if self.agreed else ""
+        """What has asked to stop: the note in the run's folder, else the signal agreed on."""
+        return self._note or self._signal()

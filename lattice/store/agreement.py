@@ -43,3 +43,12 @@ def explain(error: Exception) -> str:
     if isinstance(error, OSError) and error.strerror:
         return str(error.strerror)
     return str(error).splitlines()[0] if str(error) else type(error).__name__
+
+
+def explain_cause(error: BaseException) -> str:
+    """Return the text of the error that a library has wrapped, if it has: PETSc re-raises a callback's."""
+    while error.__cause__ is not None and not isinstance(error, LatticeError):
+        error = error.__cause__
+    if isinstance(error, Exception):
+        return explain(error)
+    return type(error).__name__

@@ -23,10 +23,12 @@ from typing import TYPE_CHECKING, Any
 
 from lattice.errors import InputError, LatticeError
 from lattice.geometry.lattice import Lattice
-from lattice.store.agreement import explain, raise_together
+from lattice.store.aftermath import Before, record_end
+from lattice.store.agreement import explain, explain_cause, raise_together
 from lattice.store.lock import FolderLock
 from lattice.store.replacement import discard, write_text_whole
 from lattice.store.statemeta import plain
+from lattice.store.stopnote import read_stop_note, remove_stop_note
 
 if TYPE_CHECKING:
     from mpi4py import MPI
@@ -117,6 +119,8 @@ class RunFolder:
         self.state = self.path / "state.h5"
         self.picture = self.path / "field.png"
         self._comm = comm
+        self._before: Before | None = None
+        self._resumes = False
         self._lock = FolderLock(self.path / "run.lock")
 
     def __enter__(self) -> RunFolder:
@@ -126,6 +130,8 @@ class RunFolder:
     def __exit__(
         self, kind: type[BaseException] | None, error: BaseException | None, trace: TracebackType | None
     ) -> None:
+        if error is not None:
+            self._tell_failure(error)
         self.release()
 
     def claim(self) -> None:
@@ -141,12 +147,14 @@ class RunFolder:
     def release(self) -> None:
         """Let other runs in; not collective, so that it works after any failure."""
         if self._comm.rank == 0:
+            if self._before is not None:
+                remove_stop_note(self.path)
             self._lock.release()
 
     def begin(self, job_text: str, resume: bool = False) -> None:
-        """Store the resolved job; unless `resume`, remove steps, summary and picture of an earlier run.
+        """Store the resolved job and remove the summary; unless `resume`, remove steps and picture, too.
 
-        An earlier state.h5 stays until the first new one replaces it.
+        A run has no summary until it ends. An earlier state.h5 stays until the first new one replaces it.
         """
         self._on_root(lambda: self._begin(job_text, resume), f"cannot write to folder {self.path}")
 
@@ -165,10 +173,23 @@ class RunFolder:
         self._lock.take()
 
     def _begin(self, job_text: str, resume: bool) -> None:
+        self._before, self._resumes = Before.of(self.path), resume
+        discard(self.summary)
+        remove_stop_note(self.path)
         if not resume:
-            for old in (self.steps, self.summary, self.picture):
+            for old in (self.steps, self.picture):
                 discard(old)
         write_text_whole(self.job, job_text)
+
+    def _tell_failure(self, error: BaseException) -> None:
+        """Say in summary.json why the run ended, on rank 0 and where it has not done so; not collective."""
+        if self._before is None or not self._before.says_nothing():
+            return
+        outcome, reason = "failed", explain_cause(error)
+        if isinstance(error, KeyboardInterrupt):
+            outcome, reason = "interrupted", f"stopped by {read_stop_note(self.path) or 'Ctrl-C'}"
+        has_state = self._resumes or self._before.wrote_state()
+        record_end(self.path, outcome, reason, self._comm.size, has_state)
 
     def _on_root(self, action: Callable[[], None], failure: str) -> None:
         error: Exception | None = None
