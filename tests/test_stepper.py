@@ -19,6 +19,7 @@ from lattice.laws.law import Deriv, Equation, Law
 from lattice.starts.noise import random_field
 from lattice.starts.phi import matrix_phi, scalar_phi
 from lattice.starts.splitting import split
+from lattice.starts.stability import stable_step
 from lattice.starts.stepper import Stepper, settle, steps_within, suggest_dt
 
 TURN = 2.0 * np.pi
@@ -621,6 +622,28 @@ def test_short_waves_that_grow_are_refused():
     assert line(law, 16, 5.0, 0.1, nu=-1.0).fastest_growth == 0.0
     with pytest.raises(InputError, match="on 8 x 1 nodes the shortest wave grows"):
         line(load_law("kuramoto-sivashinsky"), 8, 40.0, 0.1)
+
+
+def test_step_is_cut_to_what_advection_bears():
+    # About a uniform flow V the explicit part is V u_x, whose largest rate is V times the largest wavenumber, 15:
+    # below sqrt(8), the reach of the classical scheme on the imaginary axis. A viscosity that damps the waves
+    # faster than they are carried takes the limit away.
+    speed, waves = 40.0, 15.0
+    flow = np.full((1, 32, 1), speed)
+    steps = []
+    for nu in (1e-4, 100.0):
+        stepper = Stepper(
+            load_law("burgers"), (1, 32), (1.0, TURN), {"nu": nu, "force": 0.0, "wavenumber": 1.0}, 1.0
+        )
+        steps.append(stable_step(stepper, stepper.to_spectrum(flow), 1.0))
+    assert 0.7 < steps[0] * speed * waves < np.sqrt(8.0)
+    assert steps[1] == 1.0
+
+
+def test_later_calls_of_a_march_count_from_its_beginning():
+    stepper = Stepper(read_law("own", ("u_t = u**2",), ("u",), {}, 1), (1, 8), (1.0, 1.0), {}, 0.01)
+    with pytest.raises(LatticeError, match=r"at time 21\.\d+ with dt"):
+        stepper.advance(stepper.to_spectrum(np.ones((1, 8, 1))), 3.0, 20.0)
 
 
 def test_blow_up_is_reported_with_its_time():

@@ -9,6 +9,8 @@ from collections.abc import Callable
 from importlib import import_module
 from typing import Any
 
+KINDS = ("march", "state", "waves", "array")
+
 Start = Callable[..., Any]
 """`start(job_start, lattice, values, law, block, comm, report=silent) -> (owned, values)`, collective."""
 
@@ -21,5 +23,5 @@ def _lazy(name: str) -> Start:
     return start
 
 
-STARTS: dict[str, Start] = {name: _lazy(name) for name in ("march", "state", "waves", "array")}
+STARTS: dict[str, Start] = {name: _lazy(name) for name in KINDS}
 """Every start by its `start.kind` in a job file."""

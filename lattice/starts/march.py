@@ -22,8 +22,10 @@ from lattice.geometry.block import Block
 from lattice.geometry.lattice import Lattice
 from lattice.laws.law import Law
 from lattice.starts.frame import MeanTurn, Pair, frame_of_slice, frame_that_aligns, turned
+from lattice.starts.modes import Modes
 from lattice.starts.noise import random_spectrum
 from lattice.starts.options import MarchOptions, Report, silent
+from lattice.starts.seams import smooth_step
 from lattice.starts.stepper import Stepper, Values, settle, suggest_dt
 from lattice.starts.streaming import broadcast_slabs, on_root
 
@@ -82,15 +84,20 @@ def march(
     InputError, LatticeError
         On every rank: a law that cannot be marched, or a field that grows without bound.
     """
-    marcher = _Marcher(start, lattice, values, law, report)
+    return blended_march(Marcher(start, lattice, values, law, report), block, comm)
+
+
+def blended_march(marcher: Marcher, block: Block, comm: MPI.Intracomm) -> tuple[Real, Values]:
+    """Return this rank's part of a marcher's window, blended in time, and the values. Collective."""
+    lattice, blend = marcher.lattice, marcher.start.blend
     found = on_root(comm, marcher.prepare)
-    owned = np.zeros((*block.shape, len(law.components)))
+    owned = np.zeros((*block.shape, len(marcher.law.components)))
     for sample, whole in enumerate(broadcast_slabs(comm, marcher.slices)):
         level = sample % lattice.nt
         if block.t0 <= level < block.t1:
             part = whole[block.y0 : block.y1, block.x0 : block.x1]
-            owned[level - block.t0] += blend_weight(sample, lattice.nt, start.blend) * part
-    return owned, {**values, **found}
+            owned[level - block.t0] += blend_weight(sample, lattice.nt, blend) * part
+    return owned, {**marcher.values, **found}
 
 
 def blend_weight(sample: int, nt: int, blend: float) -> float:
@@ -105,8 +112,7 @@ def blend_weight(sample: int, nt: int, blend: float) -> float:
     >>> [blend_weight(sample, 10, 0.4) for sample in (0, 2, 12, 5)]
     [0.0, 0.5, 0.5, 1.0]
     """
-    s = min(1.0, (sample % nt) / (blend * nt)) if blend > 0.0 and nt > 1 else 1.0
-    rising = s * s * s * (10.0 + s * (6.0 * s - 15.0))
+    rising = smooth_step((sample % nt) / (blend * nt)) if blend > 0.0 and nt > 1 else 1.0
     return rising if sample < nt else 1.0 - rising
 
 
@@ -115,8 +121,11 @@ def samples_in(nt: int, blend: float) -> int:
     return 1 if nt == 1 else nt + math.ceil(blend * nt)
 
 
-class _Marcher:
-    """The march itself; all but the constructor runs on rank 0 only."""
+class Marcher:
+    """The march itself; all but the constructor runs on rank 0 only.
+
+    Methods that say what the window is of a marched slice are for `lattice.starts.window` to replace.
+    """
 
     def __init__(
         self, start: MarchOptions, lattice: Lattice, values: Values, law: Law, report: Report
@@ -149,16 +158,32 @@ class _Marcher:
         """Yield the window's samples on the lattice's nodes, shape (ny, nx, C)."""
         spectrum, spacing = self.spectrum, self.period / self.lattice.nt
         offsets = {row: float(spectrum[row, 0, 0].real) - self._mean(row) for row in self.running}
-        samples = samples_in(self.lattice.nt, self.start.blend)
+        samples, began = samples_in(self.lattice.nt, self.start.blend), self.start.spin_up
         for sample in range(samples):
             if sample:
-                spectrum = self.stepper.advance(spectrum, spacing)
+                spectrum = self.stepper.advance(spectrum, spacing, began + (sample - 1) * spacing)
             time = sample * spacing
             seen = self._seen(spectrum, time, self.frame)
             for row, slope in self.running.items():
                 seen[row, 0, 0] -= offsets[row] + slope * time
-            yield self.stepper.to_field(seen, (self.lattice.ny, self.lattice.nx))
+            yield self.on_nodes(seen)
             self._tell(f"march: window {time:.4g} of {(samples - 1) * spacing:.4g}")
+
+    def nodes(self) -> tuple[int, int]:
+        """Return the marcher's nodes (ny, nx)."""
+        return _nodes(self.start, self.lattice)
+
+    def lengths(self) -> tuple[float, float]:
+        """Return the lengths (Ly, Lx) of the marched box."""
+        return (self.values.get("length_y", 1.0), self.values["length_x"])
+
+    def on_nodes(self, seen: Complex) -> Real:
+        """Return a slice on the lattice's nodes, shape (ny, nx, C)."""
+        return self.stepper.to_field(seen, (self.lattice.ny, self.lattice.nx))
+
+    def compared(self, seen: Complex) -> tuple[Modes, Complex]:
+        """Return what of a slice is compared to find the frame: its modes and its evolving spectra."""
+        return self.stepper.modes, seen
 
     def _seen(self, spectrum: Complex, time: float, frame: Values) -> Complex:
         """Return a slice as it is seen after `time` in a frame of given drift and rotation."""
@@ -173,9 +198,8 @@ class _Marcher:
         return self.stepper.operator.evolving.index(a), self.stepper.operator.evolving.index(b)
 
     def _stepper(self) -> Stepper:
-        lengths = (self.values.get("length_y", 1.0), self.values["length_x"])
         dt = 1.0 if self.start.dt is None else self.start.dt
-        return Stepper(self.law, _nodes(self.start, self.lattice), lengths, self.values, dt)
+        return Stepper(self.law, self.nodes(), self.lengths(), self.values, dt)
 
     def _noise(self) -> Complex:
         spectrum = random_spectrum(self.stepper.operator, self.start.seed, self.start.amplitude)
@@ -188,9 +212,9 @@ class _Marcher:
         stretch = self.start.spin_up / STRETCHES
         for n in range(STRETCHES if stretch > 0.0 else 0):
             if self.start.dt is None:
-                spectrum, dt = settle(self.stepper, spectrum, stretch, SPIN_UP_TOLERANCE)
+                spectrum, dt = settle(self.stepper, spectrum, stretch, SPIN_UP_TOLERANCE, n * stretch)
             else:
-                spectrum, dt = self.stepper.advance(spectrum, stretch), self.start.dt
+                spectrum, dt = self.stepper.advance(spectrum, stretch, n * stretch), self.start.dt
             done = f"{(n + 1) * stretch:.4g} of {self.start.spin_up:.4g}"
             self._tell(f"march: spin-up {done}, dt = {dt:.3g}", at_once=n == STRETCHES - 1)
         if self.start.dt is None:
@@ -204,7 +228,8 @@ class _Marcher:
             self.running[row] = float((last - first)[row, 0, 0].real) / self.period
         if self.matched:
             back = self._seen(last, self.period, self.frame | dict.fromkeys(self.matched, 0.0))
-            modes, pair = self.stepper.modes, turn.pair if turn else None
+            pair = turn.pair if turn else None
+            (modes, first), (_, back) = self.compared(first), self.compared(back)
             self.frame.update(frame_that_aligns(modes, first, back, self.period, self.axes, pair))
         if turn:
             self.frame["rotation"] = turn.with_whole_turns(self.frame, self.period)
@@ -212,11 +237,11 @@ class _Marcher:
     def _window_end(self) -> tuple[Complex, MeanTurn | None]:
         """Return the spectrum one period on, and how fast it turned where the rotation is looked for."""
         if self.pair is None or "rotation" not in self.matched:
-            return self.stepper.advance(self.spectrum, self.period), None
+            return self.stepper.advance(self.spectrum, self.period, self.start.spin_up), None
         spectrum, turn = self.spectrum, MeanTurn(self.stepper.modes, self.pair)
         for _ in range(self.lattice.nt):
             turn.look(spectrum, self.stepper.operator.rate(spectrum))
-            spectrum = self.stepper.advance(spectrum, self.period / self.lattice.nt)
+            spectrum = self.stepper.advance(spectrum, self.period / self.lattice.nt, self.start.spin_up)
         return spectrum, turn
 
     def _look_at_slice(self, wandering: list[int]) -> None:

@@ -55,6 +55,23 @@ class MarchOptions:
 
 
 @dataclass(frozen=True)
+class WindowOptions(MarchOptions):
+    """A march of a box that may be larger than the job's, of which a window is cut.
+
+    Parameters
+    ----------
+    march_length_x, march_length_y : float, optional
+        Lengths of the marched box; those of the job's box unless given.
+    blend_space : float
+        Fraction of a cut axis over which the window is mixed with its continuation, `0 <= blend_space < 1`.
+    """
+
+    march_length_x: float | None = None
+    march_length_y: float | None = None
+    blend_space: float = 0.3
+
+
+@dataclass(frozen=True)
 class StateOptions:
     """A stored state: the path of its file."""
 

@@ -18,6 +18,7 @@ from lattice.errors import InputError, LatticeError
 from lattice.laws.law import Law
 from lattice.starts.operator import SpectralOperator
 from lattice.starts.phi import Weights, weights
+from lattice.starts.stability import stable_step
 
 Real = NDArray[np.float64]
 Complex = NDArray[np.complex128]
@@ -109,8 +110,10 @@ class Stepper:
         self.modes.restore_symmetry(out)
         return out
 
-    def advance(self, spectrum: Complex, time: float) -> Complex:
+    def advance(self, spectrum: Complex, time: float, began: float = 0.0) -> Complex:
         """Return the spectrum `time` later: the fewest equal steps of at most `dt`.
+
+        `began` is the time of a march before this call, for messages.
 
         Raises
         ------
@@ -124,7 +127,7 @@ class Stepper:
             for n in range(1, steps + 1):
                 spectrum = self.step(spectrum, dt)
                 if n % STEPS_BETWEEN_LOOKS == 0 or n == steps:
-                    self._look(spectrum, start, n * dt)
+                    self._look(spectrum, start, began + n * dt)
         return spectrum
 
     def march(self, spectrum: Complex, times: Iterable[float]) -> Iterator[Real]:
@@ -136,7 +139,7 @@ class Stepper:
         for time in times:
             if time < now:
                 raise InputError(f"times of a march must rise, got {time:g} after {now:g}")
-            spectrum = self.advance(spectrum, time - now)
+            spectrum = self.advance(spectrum, time - now, now)
             now = time
             yield self.to_field(spectrum)
 
@@ -195,11 +198,11 @@ class Stepper:
 
 
 def suggest_dt(stepper: Stepper, spectrum: Complex, tolerance: float = 1e-6) -> float:
-    """Return the largest step, up to powers of two, whose error at this spectrum is within tolerance.
+    """Return the largest step, up to powers of two, that is accurate to a tolerance and stable.
 
     The first guess is a fraction of the shortest of two time scales, linear growth and nonlinear change
     (`rms(u)/rms(N(u))`: for advection the time to cross a wavelength); it is then halved or doubled by the
-    error of one step, measured by halving.
+    error of one step, measured by halving; at last it is halved until it is stable (`stable_step`).
 
     Parameters
     ----------
@@ -215,6 +218,10 @@ def suggest_dt(stepper: Stepper, spectrum: Complex, tolerance: float = 1e-6) -> 
     LatticeError
         When no step is small enough.
     """
+    return stable_step(stepper, spectrum, _accurate_step(stepper, spectrum, tolerance))
+
+
+def _accurate_step(stepper: Stepper, spectrum: Complex, tolerance: float) -> float:
     rate = _fastest_rate(stepper, spectrum)
     dt = FIRST_STEP_RATE / rate
     within = stepper.step_error(spectrum, dt) <= tolerance
@@ -233,12 +240,13 @@ def suggest_dt(stepper: Stepper, spectrum: Complex, tolerance: float = 1e-6) -> 
 
 
 def settle(
-    stepper: Stepper, spectrum: Complex, time: float, tolerance: float = 1e-6
+    stepper: Stepper, spectrum: Complex, time: float, tolerance: float = 1e-6, began: float = 0.0
 ) -> tuple[Complex, float]:
     """March over `time` while the step follows the flow, and return the spectrum and the last step.
 
     The error of one step is measured every 32 steps and the step halved or doubled by it; where the field
-    blows up, the march goes back that far and tries half the step.
+    blows up, the march goes back that far and tries half the step. `began` is the time marched before, for
+    messages.
 
     Raises
     ------
@@ -249,7 +257,7 @@ def settle(
     while now < time:
         stretch = min(STEPS_BETWEEN_MEASURES * dt, time - now)
         try:
-            later = stepper.with_step(dt).advance(spectrum, stretch)
+            later = stepper.with_step(dt).advance(spectrum, stretch, began + now)
         except LatticeError:
             failures += 1
             if failures > STEP_CHANGES:
@@ -265,10 +273,11 @@ def settle(
 def _follow(stepper: Stepper, spectrum: Complex, dt: float, tolerance: float) -> float:
     """Return the step for the next stretch: the error of one step falls as dt**5."""
     error = stepper.step_error(spectrum, dt)
-    if error > tolerance:
-        return suggest_dt(stepper, spectrum, tolerance) if error > 32.0 * tolerance else 0.5 * dt
+    if error > 32.0 * tolerance:
+        return suggest_dt(stepper, spectrum, tolerance)
     may_grow = error < tolerance / 64.0 and 2.0 * dt <= LARGEST_STEP_RATE / _fastest_rate(stepper, spectrum)
-    return 2.0 * dt if may_grow else dt
+    wanted = 0.5 * dt if error > tolerance else 2.0 * dt if may_grow else dt
+    return stable_step(stepper, spectrum, wanted)
 
 
 def steps_within(time: float, dt: float) -> int:
