@@ -25,6 +25,7 @@ LAYERS = (
     ("starts",),
     ("show",),
     ("job",),
+    ("classify",),
     ("solve",),
     ("cli",),
     ("__init__", "__main__"),
