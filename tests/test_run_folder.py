@@ -108,6 +108,7 @@ def test_the_summary_has_the_promised_keys(tmp_path: Path) -> None:
         "ranks",
         "peak_memory_mb",
         "versions",
+        "classification",
     ]
     assert found["lattice"] == {"nt": 32, "nx": 48, "order_t": 4, "order_x": 4}
     expected = asdict(SUMMARY)

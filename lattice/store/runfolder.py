@@ -66,6 +66,8 @@ class Summary:
         Sum over ranks of the largest resident memory, in MB.
     versions : dict of str to str
         See `versions`.
+    classification : dict
+        Kind, repeats and symmetries of a converged state; else empty.
     """
 
     outcome: str
@@ -83,6 +85,7 @@ class Summary:
     ranks: int
     peak_memory_mb: float
     versions: dict[str, str] = field(default_factory=dict)
+    classification: dict[str, Any] = field(default_factory=dict)
 
     def to_json(self) -> str:
         """Return the text of summary.json."""

@@ -52,6 +52,8 @@ class StateMeta:
         Versions of this package and of the libraries it ran on.
     job_text : str
         The resolved job file, in TOML.
+    classification : dict
+        Kind, repeats and symmetries of a converged state, as `lattice.classify.kind` found them; else empty.
     written : str
         Coordinated universal time of writing, ISO 8601.
     """
@@ -72,6 +74,7 @@ class StateMeta:
     history: tuple[dict[str, Any], ...] = ()
     versions: dict[str, str] = field(default_factory=dict)
     job_text: str = ""
+    classification: dict[str, Any] = field(default_factory=dict)
     written: str = ""
 
     @classmethod
