@@ -127,7 +127,7 @@ def test_every_command_explains_itself(command: str) -> None:
         (["plot", "none.h5", "--size", "8x1e9"], "--size: must be width x height in inches"),
         (["plot", "film.toml", "--out", "."], "is a folder, the name of a file is wanted"),
         (["laws", "kuramoto-sivashinski"], "(did you mean 'kuramoto-sivashinsky'?)"),
-        (["laws", "--", "-log_view"], "only solve takes options for PETSc, got -log_view"),
+        (["laws", "--", "-log_view"], "only solve and submit take options for PETSc, got -log_view"),
     ],
 )
 def test_bad_input_is_refused_with_exit_code_2(

@@ -27,6 +27,7 @@ LAYERS = (
     ("job",),
     ("classify",),
     ("solve",),
+    ("batch",),
     ("campaign",),
     ("cli",),
     ("__init__", "__main__"),

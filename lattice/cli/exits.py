@@ -2,15 +2,23 @@
 
 from __future__ import annotations
 
+from lattice.batch.codes import CONVERGED, FAILED, INTERRUPTED, NOT_CONVERGED, REFUSED, STOPPED_EARLY
 from lattice.errors import InputError, LatticeError
 from lattice.job.problems import printable
 
-CONVERGED, REFUSED, NOT_CONVERGED, INTERRUPTED = 0, 2, 3, 4
-FAILED = 70
-"""An error of the program or its libraries; 70 is EX_SOFTWARE of sysexits.h."""
-STOPPED_EARLY = 130
-"""Interrupted before there was a state to keep; 128 + SIGINT as shells have it."""
-KNOWN = frozenset({CONVERGED, REFUSED, NOT_CONVERGED, INTERRUPTED, FAILED, STOPPED_EARLY})
+__all__ = [
+    "CONVERGED",
+    "FAILED",
+    "INTERRUPTED",
+    "NOT_CONVERGED",
+    "REFUSED",
+    "STOPPED_EARLY",
+    "describe",
+    "exit_code",
+    "explain",
+    "root_cause",
+]
+
 PIPE_CLOSED = 141
 """The reader of the output went away; 128 + SIGPIPE."""
 

@@ -10,7 +10,8 @@ from collections.abc import Callable
 from types import FrameType
 from typing import TYPE_CHECKING
 
-from lattice.cli.exits import REFUSED, exit_code, explain, root_cause
+from lattice.batch.codes import REFUSED
+from lattice.cli.exits import exit_code, explain, root_cause
 from lattice.errors import RemoteFailure
 
 if TYPE_CHECKING:

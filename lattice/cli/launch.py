@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import contextlib
-import ctypes
 import os
 import shlex
 import shutil
@@ -17,6 +16,7 @@ from pathlib import Path
 from types import FrameType
 from typing import Any
 
+from lattice.batch.kinship import end_with_parent
 from lattice.errors import InputError
 
 STOP_GRACE = 25.0
@@ -149,7 +149,6 @@ def run_ranks(
     next step and keep the state; Open MPI would kill them a second after SIGTERM. What the user did is
     told to `note` before.
     """
-    end_with_parent = _end_with_parent()
     with Relay(note) as relay:
         process = subprocess.Popen(
             list(command),
@@ -157,7 +156,7 @@ def run_ranks(
             env=dict(environ),
             # A terminal's Ctrl-C must reach this process only, which knows how to stop the ranks.
             start_new_session=True,
-            preexec_fn=end_with_parent,
+            preexec_fn=end_with_parent(),
         )
         return relay.wait(process)
 
@@ -231,13 +230,3 @@ class Relay:
 def _say(text: str) -> None:
     with contextlib.suppress(OSError):
         print(text, file=sys.stderr, flush=True)
-
-
-def _end_with_parent() -> Callable[[], None]:
-    """Return what a child does first: ask Linux to terminate it when its parent dies, even by SIGKILL."""
-    pr_set_pdeathsig = 1  # linux/prctl.h
-    try:
-        prctl = ctypes.CDLL(None).prctl
-    except (OSError, AttributeError):
-        return lambda: None
-    return lambda: prctl(pr_set_pdeathsig, signal.SIGTERM)

@@ -16,6 +16,11 @@ from lattice.errors import InputError
 
 COMMANDS = {
     "solve": "solve a job for a steady, travelling or time-periodic state",
+    "campaign": "run many starts from one file, and put their outcomes together",
+    "submit": "hand jobs to a scheduler, or run them in the background",
+    "runs": "show how runs stand, or follow one",
+    "cancel": "stop a submitted run",
+    "leg": "run one leg of a submitted run; batch scripts call it",
     "info": "tell what a state file holds",
     "plot": "draw a state",
     "laws": "list the laws, or describe one",
@@ -47,8 +52,10 @@ def _run(arguments: list[str]) -> int:
     options = make_parser().parse_args(own)
     options.petsc_options, options.typed = petsc_options, arguments
     try:
-        if petsc_options and options.command != "solve":
-            raise InputError(f"only solve takes options for PETSc, got {' '.join(petsc_options)}", key="--")
+        if petsc_options and options.command not in ("solve", "submit"):
+            raise InputError(
+                f"only solve and submit take options for PETSc, got {' '.join(petsc_options)}", key="--"
+            )
         module = importlib.import_module(f"lattice.cli.{options.command}")
         return int(module.run(options))
     except BrokenPipeError:

@@ -9,7 +9,7 @@ import time
 from pathlib import Path
 from typing import TYPE_CHECKING, NoReturn
 
-from lattice.cli.exits import REFUSED
+from lattice.batch.codes import REFUSED
 from lattice.environment import Launch, find_launch
 from lattice.errors import InputError
 
@@ -92,7 +92,7 @@ def _check_petsc_options(given: list[str]) -> None:
 
 def _start_ranks(options: argparse.Namespace) -> int:
     """Judge the job here, so that a refusal costs no launch, then start the ranks."""
-    from lattice.cli.ending import Ending
+    from lattice.batch.ending import Ending
     from lattice.cli.launch import check_crowd, find_launcher, is_oversubscribed, launch_command, run_ranks
 
     job, _ = _read_job(options, options.ranks)
@@ -109,7 +109,7 @@ def _start_ranks(options: argparse.Namespace) -> int:
 def _run_alone(options: argparse.Namespace) -> int:
     """Solve in this process."""
     job, cautions = _read_job(options, 1)
-    _warn(job, cautions)
+    warn(job, cautions)
     from lattice.cli.guard import run_guarded, stop_on_signals
 
     stop_on_signals(alone=True)
@@ -156,7 +156,7 @@ def _answer(options: argparse.Namespace, ranks: int) -> tuple[Job | None, str]:
         job, cautions = _read_job(options, ranks)
     except InputError as error:
         return None, str(error)
-    _warn(job, cautions)
+    warn(job, cautions)
     return job, ""
 
 
@@ -171,7 +171,8 @@ def _read_job(options: argparse.Namespace, ranks: int) -> tuple[Job, tuple[str, 
     return job, cautions
 
 
-def _warn(job: Job, cautions: tuple[str, ...]) -> None:
+def warn(job: Job, cautions: tuple[str, ...]) -> None:
+    """Tell what the user should be warned of."""
     from lattice.job.resolution import resolution_cautions
 
     for caution in (*cautions, *resolution_cautions(job)):

@@ -58,7 +58,9 @@ class Before:
         return began and identity(self.folder / SUMMARY) is None
 
 
-def record_end(folder: Path, outcome: str, reason: str, ranks: int | None, has_state: bool) -> None:
+def record_end(
+    folder: Path, outcome: str, reason: str, ranks: int | None, has_state: bool, lost: bool = False
+) -> None:
     """Write summary.json for a run that ended without one; where it cannot be written, nothing happens.
 
     Parameters
@@ -71,12 +73,20 @@ def record_end(folder: Path, outcome: str, reason: str, ranks: int | None, has_s
         Number of MPI ranks, None where unknown.
     has_state : bool
         Whether the folder's state is this run's own; its numbers are then told.
+    lost : bool
+        Whether ranks or their launcher died without a word, as they do when a node fails.
     """
     content = _numbers(folder / STATE) if has_state else {}
-    content = {"outcome": outcome, "reason": reason, **content, "ranks": ranks}
+    content = {"outcome": outcome, "reason": reason, "lost": lost, **content, "ranks": ranks}
     with suppress(OSError):
         text = json.dumps(content, indent=2, allow_nan=False, ensure_ascii=False)
         write_text_whole(folder / SUMMARY, text + "\n")
+
+
+def kept_steps(folder: Path) -> int:
+    """Return how many steps a folder's state has behind it; 0 where there is no state."""
+    meta = _meta(folder / STATE)
+    return len(meta.history) if meta else 0
 
 
 def last_step(folder: Path) -> int | None:

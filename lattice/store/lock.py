@@ -7,6 +7,7 @@ import fcntl
 import json
 import os
 import socket
+import time
 from collections.abc import Mapping
 from contextlib import suppress
 from dataclasses import asdict, dataclass
@@ -16,6 +17,8 @@ from pathlib import Path
 from lattice.errors import LatticeError
 from lattice.store.replacement import process_alive
 
+LOOKS = 5
+"""Times a lock that is held is tried again: who only looks whether it is held has it for an instant, too."""
 _NO_LOCKS = (errno.ENOLCK, errno.EOPNOTSUPP, errno.ENOSYS)
 
 
@@ -112,7 +115,7 @@ class FolderLock:
 
     def _lock(self, descriptor: int) -> None:
         try:
-            fcntl.flock(descriptor, fcntl.LOCK_EX | fcntl.LOCK_NB)
+            _take_patiently(descriptor)
         except OSError as error:
             other = read_holder(self.path)
             if error.errno in _NO_LOCKS and (other is None or _is_dead(other)):
@@ -120,6 +123,32 @@ class FolderLock:
             if error.errno in _NO_LOCKS or isinstance(error, BlockingIOError):
                 raise LatticeError(_refusal(self.path, other)) from error
             raise
+
+
+def _take_patiently(descriptor: int) -> None:
+    for _ in range(LOOKS - 1):
+        try:
+            return fcntl.flock(descriptor, fcntl.LOCK_EX | fcntl.LOCK_NB)
+        except BlockingIOError:
+            time.sleep(0.05)
+    return fcntl.flock(descriptor, fcntl.LOCK_EX | fcntl.LOCK_NB)
+
+
+def is_held(path: Path) -> bool:
+    """Whether a living run holds a lock file, as far as this machine can see."""
+    try:
+        descriptor = os.open(path, os.O_RDONLY)
+    except OSError:
+        return False
+    try:
+        fcntl.flock(descriptor, fcntl.LOCK_SH | fcntl.LOCK_NB)
+    except BlockingIOError:
+        return True
+    except OSError:
+        return False
+    finally:
+        os.close(descriptor)
+    return False
 
 
 def read_holder(path: Path) -> Holder | None:

@@ -163,7 +163,7 @@ class RunFolder:
 
     def append_step(self, entry: Mapping[str, Any]) -> None:
         """Append one step to steps.jsonl."""
-        self._on_root(lambda: _append_line(self.steps, entry), f"cannot write {self.steps}")
+        self._on_root(lambda: append_line(self.steps, entry), f"cannot write {self.steps}")
 
     def write_summary(self, summary: Summary) -> None:
         """Replace summary.json."""
@@ -206,7 +206,7 @@ class RunFolder:
         raise_together(self._comm, error)
 
 
-def _append_line(path: Path, entry: Mapping[str, Any]) -> None:
+def append_line(path: Path, entry: Mapping[str, Any]) -> None:
     """Append one line whole or not at all; what a crash cut short before it stays a line of its own."""
     line = (json.dumps(plain(entry), allow_nan=False, ensure_ascii=False) + "\n").encode()
     descriptor = os.open(path, os.O_RDWR | os.O_CREAT | os.O_APPEND, 0o666)

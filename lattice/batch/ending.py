@@ -6,7 +6,7 @@ import signal
 import sys
 from pathlib import Path
 
-from lattice.cli.exits import CONVERGED, FAILED, INTERRUPTED, KNOWN, STOPPED_EARLY
+from lattice.batch.codes import CONVERGED, FAILED, INTERRUPTED, KNOWN, STOPPED_EARLY
 from lattice.store.aftermath import Before, last_step, record_end
 from lattice.store.stopnote import read_stop_note, remove_stop_note, write_stop_note
 
@@ -54,13 +54,13 @@ class Ending:
         if asked:
             self._record("interrupted", f"stopped by {asked} within a step; {kept}", step is not None)
             return STOPPED_EARLY if step is None else INTERRUPTED
-        self._record("failed", f"{_cause(code)}; {kept}", step is not None)
+        self._record("failed", f"{_cause(code)}; {kept}", step is not None, lost=code not in KNOWN)
         return code if code in KNOWN else FAILED
 
-    def _record(self, outcome: str, reason: str, has_state: bool) -> None:
+    def _record(self, outcome: str, reason: str, has_state: bool, lost: bool = False) -> None:
         if self.before.says_nothing():
-            record_end(self.folder, outcome, reason, self.ranks, has_state)
-            print(f"{outcome}: {reason}; files in {self.folder}", file=sys.stderr, flush=True)
+            record_end(self.folder, outcome, reason, self.ranks, has_state, lost)
+            sys.stderr.write(f"{outcome}: {reason}; files in {self.folder}\n")
 
 
 def _cause(code: int) -> str:

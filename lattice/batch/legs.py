@@ -1,0 +1,69 @@
+"""The legs of a run: one line of JSON for everything that happens to it, in `legs.jsonl` of its folder."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+from pathlib import Path
+from typing import Any
+
+from lattice.batch.ticket import now
+from lattice.store.runfolder import append_line, read_steps
+
+NAME = "legs.jsonl"
+Event = dict[str, Any]
+
+
+@dataclass(frozen=True)
+class LegLog:
+    """What has happened to a run.
+
+    The events are `submitted` (leg, ranks, job), `began` (leg, job, host, process), `ended` (leg, code,
+    outcome, reason, seconds, new_steps, residual_rms), `cancelled` and `halted` (reason: why no leg follows).
+
+    Parameters
+    ----------
+    folder : Path
+        The run's folder.
+    """
+
+    folder: Path
+
+    def append(self, event: str, **facts: Any) -> None:
+        """Add an event with the time of now."""
+        append_line(self.folder / NAME, {"event": event, "time": now(), **facts})
+
+    def events(self) -> list[Event]:
+        """Return all events, oldest first; none where there is no log."""
+        try:
+            return [event for event in read_steps(self.folder / NAME) if isinstance(event, dict)]
+        except OSError:
+            return []
+
+
+def last(events: Sequence[Event], *names: str) -> Event | None:
+    """Return the newest event with one of some names."""
+    return next((event for event in reversed(events) if event.get("event") in names), None)
+
+
+def of_kind(events: Sequence[Event], name: str) -> list[Event]:
+    """Return the events with a name."""
+    return [event for event in events if event.get("event") == name]
+
+
+def newest_job(events: Sequence[Event]) -> str:
+    """Return the scheduler's id of the newest leg, empty where none was submitted."""
+    known = last(events, "submitted", "began")
+    return str(known.get("job") or "") if known else ""
+
+
+def open_leg(events: Sequence[Event]) -> Event | None:
+    """Return the newest event of a leg that was submitted or began and has not ended, as far as is known."""
+    newest = last(events, "submitted", "began", "ended", "cancelled", "halted")
+    return newest if newest is not None and newest["event"] in ("submitted", "began") else None
+
+
+def is_cancelled(events: Sequence[Event]) -> bool:
+    """Whether somebody has cancelled the run since it was last submitted."""
+    newest = last(events, "submitted", "cancelled")
+    return newest is not None and newest["event"] == "cancelled"
