@@ -22,7 +22,7 @@ from pathlib import Path
 from lattice.campaign.folder import MemberFiles
 from lattice.errors import LatticeError
 from lattice.store.lock import FolderLock, read_holder
-from lattice.store.replacement import discard, write_text_whole
+from lattice.store.replacement import discard, process_alive, write_text_whole
 
 STOP_GRACE = 25.0
 """Seconds a member has to keep its state after it was asked to stop; schedulers often grant 30."""
@@ -88,6 +88,7 @@ class Attempt:
                 os.close(lock)
             raise LatticeError(f"member {self.number} runs already, see {self.files.lock}")
         try:
+            os.ftruncate(lock, 0)
             # What a summary says from now on is about this attempt.
             discard(self.files.summary)
             write_text_whole(self.files.outcome, record)
@@ -159,9 +160,15 @@ def is_running(files: MemberFiles) -> bool:
     if files.lock.exists():
         lock = _locked(files.lock)
         if lock is None:
-            return True
+            return not _first_process_ended(files) or _run_lock_held(files.run)
         os.close(lock)
     return _run_lock_held(files.run)
+
+
+def _first_process_ended(files: MemberFiles) -> bool:
+    """Whether the process that a held lock was given to is gone: what MPI starts beside it may linger."""
+    holder = _signature(files)
+    return holder is not None and holder[0] == socket.gethostname() and not process_alive(holder[1])
 
 
 def own_environment(environ: Mapping[str, str]) -> dict[str, str]:
@@ -199,19 +206,24 @@ def _locked(path: Path) -> int | None:
 def _sign(lock: int, process: int) -> None:
     text = json.dumps({"host": socket.gethostname(), "process": process})
     with suppress(OSError):
-        os.ftruncate(lock, 0)
         os.pwrite(lock, text.encode(), 0)
+
+
+def _signature(files: MemberFiles) -> tuple[str, int] | None:
+    """Return host and process that a lock was given to, None where it is not signed yet."""
+    with suppress(OSError, ValueError, KeyError, TypeError):
+        content = json.loads(files.lock.read_text(encoding="utf-8"))
+        return str(content["host"]), int(content["process"])
+    return None
 
 
 def _holder(files: MemberFiles) -> int | None:
     """Return the process to signal of a member started by another process of this machine."""
-    holder: object = None
-    with suppress(OSError, ValueError):
-        holder = json.loads(files.lock.read_text(encoding="utf-8"))
-    if isinstance(holder, dict) and holder.get("host") == socket.gethostname():
-        return int(holder["process"])
-    other = read_holder(files.run / "run.lock")
-    return other.process if other is not None and other.host == socket.gethostname() else None
+    signed = _signature(files)
+    if signed is None:
+        other = read_holder(files.run / "run.lock")
+        signed = (other.host, other.process) if other is not None else None
+    return signed[1] if signed is not None and signed[0] == socket.gethostname() else None
 
 
 def _run_lock_held(run: Path) -> bool:
