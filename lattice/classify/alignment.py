@@ -61,15 +61,31 @@ class Aligner:
         start : tuple of float, optional
             Where to look for the peak; without it at all nodes.
         """
-        parts = self._correlation(wanted, moving)
-        shift = np.array(self._best_node(parts) if start is None else start)
-        angle = self._angle(parts, shift)
-        shift, angle = self._climbed(parts, shift, angle)
+        shift, angle, _ = self.peak(self._correlation(wanted, moving), start)
         moved = self.moved(moving, tuple(shift), angle)
         apart = self.spectra.total(self.spectra.energies(wanted - moved).sum())
         size = 0.5 * (self._square(wanted) + self._square(moving))
         distance = float(np.sqrt(apart / size)) if size > 0.0 else float(np.sqrt(apart))
-        return Alignment(tuple(float(s % 1.0) for s in shift), float(angle), distance)
+        return Alignment(tuple(float(s % 1.0) for s in shift), angle, distance)
+
+    def peak(
+        self, parts: Complex, start: tuple[float, ...] | None = None
+    ) -> tuple[tuple[float, ...], float, float]:
+        """Return where `plain + cos(angle)*cosine + sin(angle)*sine` is largest, the angle, and its value.
+
+        Collective.
+
+        Parameters
+        ----------
+        parts : ndarray, shape (3, modes ...)
+            Coefficients of the three fields.
+        start : tuple of float, optional
+            Where to look; without it at all nodes.
+        """
+        shift = np.array(self._best_node(parts) if start is None else start)
+        shift, angle = self._climbed(parts, shift, self._angle(parts, shift))
+        value = self._derivatives(parts, shift, angle)[0]
+        return tuple(float(s) for s in shift), float(angle), value
 
     def moved(self, coefficients: Complex, shift: tuple[float, ...], angle: float) -> Complex:
         """Return the coefficients of u(. + shift), turned by an angle. Not collective."""

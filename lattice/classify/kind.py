@@ -105,6 +105,21 @@ class Classification:
         """Return it as plain data, for JSON."""
         return asdict(self)
 
+    @classmethod
+    def of_record(cls, record: Mapping[str, Any]) -> Classification:
+        """Return the classification that `record` wrote, also after JSON."""
+        content = dict(record)
+        content["repeats"] = tuple(content["repeats"])
+        content["combined"] = tuple(content["combined"])
+        content["reflections"] = tuple(_reflection_of(r) for r in content["reflections"])
+        return cls(**content)
+
+
+def _reflection_of(record: Mapping[str, Any]) -> StateReflection:
+    reflection = dict(record["reflection"])
+    reflection["signs"] = tuple(reflection["signs"])
+    return StateReflection(Reflection(**reflection), record["shift"], record["angle"])
+
 
 def classify(
     law: Law,

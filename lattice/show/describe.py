@@ -6,7 +6,8 @@ import json
 import math
 import os
 import textwrap
-from dataclasses import asdict
+from collections.abc import Mapping, Sequence
+from dataclasses import asdict, replace
 from typing import Any
 
 from lattice.show.planes import extent
@@ -34,8 +35,8 @@ MEANINGS = {
 }
 
 
-def describe_state(path: str | os.PathLike[str]) -> str:
-    """Return a description of a state file, at most 100 columns wide.
+def describe_state(path: str | os.PathLike[str], more: Sequence[tuple[str, str]] = ()) -> str:
+    """Return a description of a state file, at most 100 columns wide; `more` are further labelled lines.
 
     Raises
     ------
@@ -43,15 +44,18 @@ def describe_state(path: str | os.PathLike[str]) -> str:
         If the file cannot be used.
     """
     meta = read_meta(path)
-    sections = [_law(meta), _scalars(meta), _lattice(meta), _outcome(meta), _origin(meta)]
+    sections = [_law(meta), _scalars(meta), _lattice(meta), _outcome(meta)]
+    sections += [[line for label, text in more for line in _row(label, text)], _origin(meta)]
     text = "\n\n".join("\n".join(section) for section in sections if section)
     caution = textwrap.fill(CAUTION, COLUMNS, initial_indent="Caution: ", subsequent_indent="         ")
     return f"{os.fspath(path)}\n\n{text}\n\n{caution}\n"
 
 
-def state_json(path: str | os.PathLike[str]) -> str:
+def state_json(path: str | os.PathLike[str], classification: Mapping[str, Any] | None = None) -> str:
     """Return the record of a state file as JSON, with the caution of `describe_state`."""
     meta = read_meta(path)
+    if classification is not None:
+        meta = replace(meta, classification=dict(classification))
     content = {"schema": SCHEMA, "schema_version": SCHEMA_VERSION, **asdict(meta)}
     content["lattice"] = lattice_numbers(meta.lattice)
     content["scalars"] = content.pop("values")
