@@ -246,7 +246,7 @@ def test_ctrl_c_before_the_solve_is_one_line(job: Path) -> None:
 FAKE_SOLVER = """
 import sys, tomllib, types
 seen = types.SimpleNamespace(calls=[])
-def run_job(job, folder, comm, petsc_options, report, job_text):
+def run_job(job, folder, comm, petsc_options, report, job_text, resume):
     assert tomllib.loads(job_text)["lattice"]["nx"] == job.lattice.nx
     seen.calls.append((job, folder, comm, petsc_options))
     report(f"solving {job.lattice.nx} into {folder} with {petsc_options}")

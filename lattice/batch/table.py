@@ -91,7 +91,8 @@ def follow(folder: Path, say: Callable[[str], None]) -> RunView:
         for entry in steps[told:]:
             say(_step(entry))
         told = len(steps)
-        now = " ".join(part for part in (view.outcome, view.queued) if part)
+        known = view.queued.lower()
+        now = view.outcome if known in ("", view.outcome) else f"{view.outcome} ({view.queued})"
         if now != standing:
             say(f"-- {now}" + (f": {view.reason}" if view.reason else ""))
             standing = now

@@ -47,6 +47,11 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
     )
     parser.add_argument("--force", action="store_true", help="replace the run that the folder holds")
     parser.add_argument(
+        "--resume",
+        action="store_true",
+        help="go on with the run that the folder holds, on any number of ranks",
+    )
+    parser.add_argument(
         "--launcher",
         metavar="COMMAND",
         help="what starts the ranks, with its options; default: LATTICE_LAUNCHER, else mpiexec",
@@ -102,7 +107,7 @@ def _start_ranks(options: argparse.Namespace) -> int:
         print(f"note: {options.ranks} ranks share fewer cores, and will be slow", file=sys.stderr)
     program = [sys.executable, "-m", "lattice", *options.typed]
     command = launch_command(launcher, options.ranks, program)
-    ending = Ending(Path(job.output.folder or ""), options.ranks)
+    ending = Ending(Path(job.output.folder or ""), options.ranks, options.resume)
     return ending.conclude(run_ranks(command, {**os.environ, "PYTHONUNBUFFERED": "1"}, ending.note))
 
 
@@ -167,7 +172,7 @@ def _read_job(options: argparse.Namespace, ranks: int) -> tuple[Job, tuple[str, 
 
     job, cautions = load_job_with_cautions(options.job, options.overrides, folder=options.out)
     check_ranks(job, ranks)
-    check_run_folder(Path(job.output.folder or ""), options.force)
+    check_run_folder(Path(job.output.folder or ""), options.force or options.resume)
     return job, cautions
 
 
@@ -184,7 +189,8 @@ def _solve(options: argparse.Namespace, job: Job, comm: MPI.Intracomm) -> int:
     from lattice.solve.run import run_job
 
     folder, text = Path(job.output.folder or ""), job_to_toml(job)
-    return run_job(job, folder, comm, options.petsc_options, _report(comm), text).exit_code
+    report = _report(comm)
+    return run_job(job, folder, comm, options.petsc_options, report, text, options.resume).exit_code
 
 
 def _report(comm: MPI.Intracomm) -> Callable[[str], None]:

@@ -5,6 +5,7 @@ from __future__ import annotations
 import math
 import time
 from collections.abc import Callable, Sequence
+from contextlib import suppress
 from dataclasses import asdict, dataclass, replace
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -12,7 +13,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 from numpy.typing import NDArray
 
-from lattice.errors import LatticeError
+from lattice.errors import LatticeError, StateFileError
 from lattice.geometry.lattice import Lattice
 from lattice.show.progress import header, step_line
 from lattice.solve.newton import Newton, NewtonResult, Step
@@ -22,7 +23,7 @@ from lattice.solve.registry import make_preconditioner
 from lattice.solve.stop import StopFlag
 from lattice.starts import STARTS
 from lattice.store.runfolder import RunFolder, Summary, peak_memory_mb
-from lattice.store.statefile import write_state
+from lattice.store.statefile import read_meta, write_state
 from lattice.store.statemeta import StateMeta
 from lattice.store.versions import versions
 from lattice.system.system import System
@@ -48,7 +49,13 @@ class Outcome:
 
 
 def run_job(
-    job: Job, folder: Path, comm: MPI.Intracomm, petsc_options: Sequence[str], report: Report, job_text: str
+    job: Job,
+    folder: Path,
+    comm: MPI.Intracomm,
+    petsc_options: Sequence[str],
+    report: Report,
+    job_text: str,
+    resume: bool = False,
 ) -> Outcome:
     """Run a job and keep its files in a folder.
 
@@ -67,6 +74,8 @@ def run_job(
         Takes lines for the user; silent on all ranks but one.
     job_text : str
         The resolved job in TOML, for the folder and the state file.
+    resume : bool
+        Go on from the folder's state, where it holds one of this lattice, and with its steps.
 
     Returns
     -------
@@ -79,8 +88,8 @@ def run_job(
     """
     start_petsc(petsc_options)
     with RunFolder(folder, comm) as files, StopFlag(comm, folder) as stop:
-        files.begin(job_text)
-        return _Run(job, files, comm, stop, report, job_text).go()
+        files.begin(job_text, resume)
+        return _Run(job, files, comm, stop, report, job_text, resume).go()
 
 
 class _Run:
@@ -94,7 +103,9 @@ class _Run:
         stop: StopFlag,
         report: Report,
         job_text: str,
+        resume: bool,
     ) -> None:
+        self.kept = _kept(files, comm, job.make_lattice()) if resume else None
         self.job, self.files, self.comm, self.stop, self.report = job, files, comm, stop, report
         self.job_text, self.versions = job_text, versions()
         self.law, self.lattice = job.make_law(), job.make_lattice()
@@ -109,7 +120,7 @@ class _Run:
 
     def go(self) -> Outcome:
         """Solve on every lattice of the nest, the job's own last."""
-        lattices = nested_lattices(self.lattice, self.job.solve.nested)
+        lattices = nested_lattices(self.lattice, 0 if self.kept else self.job.solve.nested)
         for lattice in lattices[:-1]:
             self.report(f"nested iteration: {_shape(lattice)} nodes first")
             x = self._begin(lattice)
@@ -167,11 +178,26 @@ class _Run:
 
     def _start(self, lattice: Lattice) -> tuple[NDArray[np.float64], Values]:
         job, began = self.job, time.perf_counter()
+        if self.kept is not None:
+            return self._go_on(lattice, self.kept)
         owned, values = STARTS[job.start.kind](
             job.start, lattice, job.make_values(), self.law, self.system.blocks.block, self.comm, self.report
         )
         self.seconds["start"] = time.perf_counter() - began
         self.report(f"start '{job.start.kind}' took {self.seconds['start']:.1f} s")
+        return owned, values
+
+    def _go_on(self, lattice: Lattice, kept: StateMeta) -> tuple[NDArray[np.float64], Values]:
+        """Return the kept state, with its steps behind it."""
+        from lattice.job.schema import StateStart
+
+        self.history = list(kept.history)
+        self.linear_iterations = sum(entry["linear_iterations"] for entry in kept.history)
+        self.began -= self.history[-1]["seconds"]
+        start = StateStart(kind="state", file=str(self.files.state))
+        block = self.system.blocks.block
+        owned, values = STARTS["state"](start, lattice, {}, self.law, block, self.comm, self.report)
+        self.report(f"resumed after step {self.history[-1]['step']}")
         return owned, values
 
     def _refine(self) -> tuple[NDArray[np.float64], Values]:
@@ -187,6 +213,9 @@ class _Run:
         """Report a step, append it to the folder and write the state."""
         values = self.system.values_of(x)
         self._measure(x)
+        if self.kept is not None and step.number == 0:
+            return  # the kept state's own last step
+        step = replace(step, number=step.number + (self.kept.history[-1]["step"] if self.kept else 0))
         self.linear_iterations += step.linear_iterations
         memory = peak_memory_mb(self.comm)
         free = {u.name: values[u.name] for u in self.system.unknowns}
@@ -287,6 +316,18 @@ class _Run:
             plot_state(self.files.state, self.files.picture)
         except LatticeError as error:
             self.report(f"no picture: {error}")
+
+
+def _kept(files: RunFolder, comm: MPI.Intracomm, lattice: Lattice) -> StateMeta | None:
+    """Return the record of the folder's state where a run can go on from it, the same on all ranks."""
+    meta = None
+    if comm.rank == 0 and files.state.exists():
+        with suppress(StateFileError):
+            meta = read_meta(files.state)
+    if meta is not None and not (meta.history and meta.lattice == lattice):
+        meta = None
+    shared: StateMeta | None = comm.bcast(meta)
+    return shared
 
 
 def nested_lattices(lattice: Lattice, count: int) -> list[Lattice]:
