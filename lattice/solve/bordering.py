@@ -20,6 +20,8 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 from numpy.typing import NDArray
 
+from lattice.system.unknowns import LOOSE
+
 if TYPE_CHECKING:
     from lattice.solve.registry import FieldInverse
     from lattice.system.system import System
@@ -58,6 +60,9 @@ class Bordering:
         for k, solved in enumerate(self._right):
             schur[:, k] = -self._rows(solved)
         schur[borders:, borders:] -= np.eye(pins)
+        for k, unknown in enumerate(self.system.unknowns):
+            if unknown.condition == LOOSE:
+                schur[k, k] += self.system.loose_weight
         self._schur = schur
 
     def _columns(self) -> list[Any]:

@@ -20,6 +20,7 @@ from lattice.spectral.transform import Transform
 from lattice.system.constant_part import ConstantPart
 from lattice.system.system import System
 from lattice.system.timing import event
+from lattice.system.unknowns import LOOSE
 
 if TYPE_CHECKING:
     from lattice.solve.registry import Preconditioner
@@ -80,8 +81,11 @@ class TwoLevel:
     def _build(self, choice: Choice) -> None:
         """Make the coarse system, the transfer and the smoother."""
         system, options = self.system, self.options.coarse
-        free = [u.name for u in system.unknowns if not u.condition.startswith("mean")]
-        self.coarse = System(system.law, choice.lattice, system.values, free, system.means, system.comm)
+        loose = [u.name for u in system.unknowns if u.condition == LOOSE]
+        free = [u.name for u in system.unknowns if u.condition.startswith("phase")]
+        self.coarse = System(
+            system.law, choice.lattice, system.values, free, system.means, system.comm, loose
+        )
         self.coarse.unknowns = system.unknowns  # the same units of the scalars on both levels
         self.coarse_transform = Transform(self.coarse.blocks)
         steady = system.lattice.nt == 1
@@ -120,6 +124,7 @@ class TwoLevel:
         for condition, template in self.system.templates.items():
             self.transfer.restrict(template, self._small, rows=False)
             self.coarse.use_templates({condition: self._small})
+        self.coarse.loose_weight = self.system.loose_weight
         self.coarse.linearise(self._x)
 
     def _down(self, r: Any, out: Any, rows: bool) -> None:

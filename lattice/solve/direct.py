@@ -10,6 +10,7 @@ from typing import TYPE_CHECKING, Any
 
 from lattice.errors import FactorisationError
 from lattice.system.assembly import AssembledJacobian, rescale_gauge
+from lattice.system.unknowns import LOOSE
 
 if TYPE_CHECKING:
     from lattice.system.system import System
@@ -207,6 +208,8 @@ def choose_pins(system: System, matrix: Any) -> list[tuple[int, float]]:
     size = matrix.norm() / system.root_size
     chosen: list[tuple[int, Any]] = []
     for unknown in system.unknowns:
+        if unknown.condition == LOOSE:
+            continue
         candidate = _near_null(system, unknown.condition)
         for row, earlier in chosen:
             candidate.axpy(-_entry(candidate, row) / _entry(earlier, row), earlier)

@@ -45,22 +45,24 @@ class SpectralSmoother:
 
     def apply(self, r: Any, y: Any) -> None:
         """Set the field vector `y` to the smoother times `r`. Collective."""
-        self._multiply(self._inverse, r, y)
+        multiply_blocks(self.transform, self._inverse, r, y)
 
     def apply_transpose(self, r: Any, y: Any) -> None:
         """Set `y` to the transposed smoother times `r`. Collective."""
-        self._multiply(np.swapaxes(self._inverse, -1, -2).conj(), r, y)
-
-    def _multiply(self, matrices: Complex, r: Any, y: Any) -> None:
-        spectrum = self.transform.forward(r)
-        if matrices.shape[-1] == 1:
-            spectrum *= matrices[..., 0]
-        else:
-            spectrum[...] = (matrices @ spectrum[..., None])[..., 0]
-        self.transform.backward(spectrum, y)
+        multiply_blocks(self.transform, np.swapaxes(self._inverse, -1, -2).conj(), r, y)
 
     def destroy(self) -> None:
         """Nothing of PETSc's is held; the transform is its owner's."""
+
+
+def multiply_blocks(transform: Transform, matrices: Complex, r: Any, y: Any) -> None:
+    """Set the field vector `y` to `r` with every Fourier mode multiplied by its own matrix. Collective."""
+    spectrum = transform.forward(r)
+    if matrices.shape[-1] == 1:
+        spectrum *= matrices[..., 0]
+    else:
+        spectrum[...] = (matrices @ spectrum[..., None])[..., 0]
+    transform.backward(spectrum, y)
 
 
 def inverse_blocks(symbol: Complex) -> Complex:

@@ -20,12 +20,14 @@ from lattice.kernels.forms import frame_names
 from lattice.laws.law import Law
 from lattice.system.operator import FieldOperator
 from lattice.system.phases import check_independence, flat_start
-from lattice.system.unknowns import FRAME, Values, pair_unknowns
+from lattice.system.unknowns import FRAME, LOOSE, Values, loose_unknowns, pair_unknowns
 
 if TYPE_CHECKING:
     from mpi4py import MPI
 
 Array = NDArray[np.float64]
+FLAT = 1e-12
+"""A phase whose derivative is not larger than this, as a share of the field, does not change it: rounding."""
 
 
 class System:
@@ -44,6 +46,14 @@ class System:
     means : mapping of str to float
         Given mean of components whose mean is open; 0 where absent.
     comm : MPI.Intracomm
+    loose : sequence of str
+        Names of further scalars to be free, fixed by no condition, for least squares: the residual has a
+        zero in their place, and the Jacobian a row of zeros.
+
+    Attributes
+    ----------
+    loose_weight : float
+        What stands for that zero on the diagonal of the Jacobian where an inverse of it is made.
     """
 
     def __init__(
@@ -54,13 +64,16 @@ class System:
         free: Sequence[str],
         means: Mapping[str, float],
         comm: MPI.Intracomm,
+        loose: Sequence[str] = (),
     ) -> None:
         self.law, self.lattice, self.comm = law, lattice, comm
         self.values: Values = dict(values)
         for name in frame_names(law):
             self.values.setdefault(name, 0.0)
         self.unknowns = pair_unknowns(law, lattice, free, self.values)
+        self.unknowns += loose_unknowns(loose, self.unknowns, self.values)
         self.means = dict(means)
+        self.loose_weight = 1.0
         self.operator = FieldOperator(law, lattice, comm)
         self.blocks = self.operator.blocks
         self.root_size = float(np.sqrt(self.blocks.size))
@@ -131,6 +144,8 @@ class System:
             if kind == "mean":
                 found = means[self.law.components.index(which)] - self.means.get(which, 0.0)
                 result.append(self.root_size * found)
+            elif kind == LOOSE:
+                result.append(0.0)
             else:
                 result.append(phases[unknown.condition] - self._offsets[unknown.condition])
         return np.array(result)
@@ -167,7 +182,7 @@ class System:
             size = template.norm() / self.root_size
             if not np.isfinite(size):
                 raise LatticeError("the field is not finite everywhere; start from another one")
-            if not size > 1e-12:
+            if not size > FLAT * field.norm() / self.root_size:
                 raise LatticeError(flat_start(condition, self._named(condition)))
             template.scale(1.0 / size)
         check_independence({c: (self._named(c), t) for c, t in self._templates.items()}, self.comm)
@@ -211,8 +226,10 @@ class System:
         rows = []
         for unknown in self.unknowns:
             kind, _, which = unknown.condition.partition("_")
-            index = self.law.components.index(which) if kind == "mean" else 0
-            rows.append(self.root_size * means[index] if kind == "mean" else phases[unknown.condition])
+            if kind == "mean":
+                rows.append(self.root_size * means[self.law.components.index(which)])
+            else:
+                rows.append(phases.get(unknown.condition, 0.0))
         return np.array(rows)
 
     def add_row(self, condition: str, z: float, field: Any) -> None:
@@ -221,7 +238,7 @@ class System:
         if kind == "mean":
             owned = self.blocks.owned(field)
             owned[..., self.law.components.index(which)] += z * self.root_size / self.lattice.nodes
-        else:
+        elif kind == "phase":
             field.axpy(z / self.root_size, self._templates[condition])
 
     def use_templates(self, templates: Mapping[str, Any]) -> None:

@@ -18,6 +18,8 @@ from lattice.laws.law import Law
 
 Values = dict[str, float]
 
+LOOSE = "loose"
+"""The condition of a scalar that none fixes."""
 FRAME = {"phase_x": "drift_x", "phase_y": "drift_y", "phase_rotation": "rotation"}
 """The scalar of the frame that moves a state along each phase but that in time."""
 
@@ -31,7 +33,7 @@ class Unknown:
     name : str
         The scalar.
     condition : str
-        "phase_t", "phase_x", "phase_y", "phase_rotation" or "mean_<component>".
+        "phase_t", "phase_x", "phase_y", "phase_rotation", "mean_<component>" or `LOOSE`.
     unit : float
         Size of a relative change of one: the scalar's unknown is `sqrt(N) * scalar / unit`, so that a
         relative change costs as much as the same change at each of the N unknowns of the field.
@@ -71,6 +73,14 @@ def pair_unknowns(
     pairs = [Unknown(name, paired[name], _unit(name, values)) for name in asked]
     pairs += [Unknown(f"source_{c}", f"mean_{c}", 1.0) for c in sourced(law)]
     return tuple(pairs)
+
+
+def loose_unknowns(
+    names: Sequence[str], paired: Sequence[Unknown], values: Mapping[str, float]
+) -> tuple[Unknown, ...]:
+    """Return the named scalars as unknowns without a condition, but for those that have one."""
+    known = {unknown.name for unknown in paired}
+    return tuple(Unknown(name, LOOSE, _unit(name, values)) for name in names if name not in known)
 
 
 def _unit(name: str, values: Mapping[str, float]) -> float:
