@@ -7,34 +7,13 @@ from typing import TYPE_CHECKING, Any
 from lattice.errors import LatticeError
 from lattice.solve.bordering import Bordering
 from lattice.solve.patches import RankPatches
+from lattice.solve.shells import jacobian_shell, use_preconditioner
 
 if TYPE_CHECKING:
     from lattice.system.system import System
 
 RTOL, MOST = 1e-2, 200
 """Of the inner solve; the outer method is flexible, so it may vary."""
-
-
-class _Tangent:
-    def __init__(self, system: System) -> None:
-        self.system = system
-
-    def mult(self, matrix: Any, v: Any, out: Any) -> None:
-        self.system.tangent(v, out)
-
-    def multTranspose(self, matrix: Any, w: Any, out: Any) -> None:
-        self.system.adjoint(w, out)
-
-
-class _PC:
-    def __init__(self, bordering: Bordering) -> None:
-        self.bordering = bordering
-
-    def apply(self, pc: Any, r: Any, y: Any) -> None:
-        self.bordering.apply(r, y)
-
-    def applyTranspose(self, pc: Any, r: Any, y: Any) -> None:
-        self.bordering.apply_transpose(r, y)
 
 
 class PatchedCoarse:
@@ -55,11 +34,7 @@ class PatchedCoarse:
 
         self.system = system
         self._bordering = Bordering(system, RankPatches(system, options, "coarse_patches_"))
-        vector = system.vector()
-        size = (vector.getLocalSize(), vector.getSize())
-        vector.destroy()
-        self._matrix = PETSc.Mat().createPython((size, size), _Tangent(system), comm=system.comm)
-        self._matrix.setUp()
+        self._matrix = jacobian_shell(system)
         self._ksp = ksp = PETSc.KSP().create(system.comm)
         ksp.setOptionsPrefix("coarse_")
         ksp.setOperators(self._matrix)
@@ -67,8 +42,7 @@ class PatchedCoarse:
         ksp.setPCSide(PETSc.PC.Side.RIGHT)
         ksp.setTolerances(rtol=RTOL, max_it=MOST)
         ksp.setGMRESRestart(MOST)
-        ksp.getPC().setType("python")
-        ksp.getPC().setPythonContext(_PC(self._bordering))
+        use_preconditioner(ksp, self._bordering)
         ksp.setFromOptions()
 
     def update(self) -> None:

@@ -14,12 +14,13 @@ from __future__ import annotations
 
 import math
 import time
-from collections.abc import Callable, Iterator
+from collections.abc import Callable, Iterator, Sequence
 from contextlib import contextmanager
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
 from lattice.solve import reasons
+from lattice.solve.shells import jacobian_shell, use_preconditioner
 
 if TYPE_CHECKING:
     from lattice.solve.registry import Preconditioner
@@ -29,6 +30,7 @@ if TYPE_CHECKING:
 POLL_ITERATIONS = 10
 GROWTH_LIMIT = 1e4
 STALL_STEPS = 5
+GOLDEN = (1.0 + math.sqrt(5.0)) / 2.0
 FORCING = 1e-2
 """Loosest relative tolerance of a linear solve; a looser first step costs Newton steps."""
 
@@ -69,32 +71,6 @@ class NewtonResult:
         return sum(step.linear_iterations for step in self.steps)
 
 
-class _Jacobian:
-    """Context of the matrix-free bordered Jacobian."""
-
-    def __init__(self, system: System) -> None:
-        self.system = system
-
-    def mult(self, matrix: Any, v: Any, out: Any) -> None:
-        self.system.tangent(v, out)
-
-    def multTranspose(self, matrix: Any, w: Any, out: Any) -> None:
-        self.system.adjoint(w, out)
-
-
-class _PythonPC:
-    """Context of the PETSc python PC; the preconditioner itself outlives it."""
-
-    def __init__(self, made: Preconditioner) -> None:
-        self.made = made
-
-    def apply(self, pc: Any, r: Any, y: Any) -> None:
-        self.made.apply(r, y)
-
-    def applyTranspose(self, pc: Any, r: Any, y: Any) -> None:
-        self.made.apply_transpose(r, y)
-
-
 class Newton:
     """A Newton solve of one system.
 
@@ -109,6 +85,8 @@ class Newton:
     stop : StopFlag
     after_step : callable
         Called on every rank with the `Step` and the vector of unknowns, which it must not change.
+    before : sequence of Step
+        Steps already made, from the start on, of a solve that goes on from the last of them.
     """
 
     def __init__(
@@ -118,23 +96,17 @@ class Newton:
         options: Any,
         stop: StopFlag,
         after_step: Callable[[Step, Any], None],
+        before: Sequence[Step] = (),
     ) -> None:
         self.system, self.options, self.stop, self.after_step = system, options, stop, after_step
         self.preconditioner = preconditioner
         self.seconds = {"set_up": 0.0, "residual": 0.0, "after_step": 0.0, "solve": 0.0}
-        self._steps: list[Step] = []
+        self._steps: list[Step] = list(before)
+        self._first = before[-1].number if before else 0
+        self._counted = 0
         self._function = system.vector()
-        self._matrix = self._shell(system)
+        self._matrix = jacobian_shell(system)
         self._snes = self._make_snes()
-
-    def _shell(self, system: System) -> Any:
-        from petsc4py import PETSc
-
-        vector = self._function
-        size = (vector.getLocalSize(), vector.getSize())
-        matrix = PETSc.Mat().createPython((size, size), _Jacobian(system), comm=system.comm)
-        matrix.setUp()
-        return matrix
 
     def _make_snes(self) -> Any:
         from petsc4py import PETSc
@@ -143,15 +115,11 @@ class Newton:
         snes = PETSc.SNES().create(self.system.comm)
         snes.setFunction(self._residual, self._function)
         snes.setJacobian(self._linearise, self._matrix, self._matrix)
-        snes.setTolerances(max_it=options.newton_steps)
+        snes.setTolerances(max_it=max(0, options.newton_steps - self._first))
         ksp = snes.getKSP()
         ksp.setType("fgmres")
         ksp.setTolerances(rtol=options.linear_rtol or FORCING, max_it=options.linear_iterations)
-        if options.linear_rtol is None:
-            snes.setUseEW(True, version=2, rtol_0=FORCING, rtol_max=FORCING)
-        pc = ksp.getPC()
-        pc.setType("python")
-        pc.setPythonContext(_PythonPC(self.preconditioner))
+        use_preconditioner(ksp, self.preconditioner)
         defaults = {
             "snes_linesearch_type": "bt" if options.line_search else "basic",
             "ksp_gmres_restart": str(min(options.linear_iterations, 100)),
@@ -194,13 +162,28 @@ class Newton:
         self.system.linearise(x)
         self.preconditioner.update()
         matrix.assemble()
+        if self.options.linear_rtol is None:
+            snes.getKSP().setTolerances(rtol=self._forcing())
         self.seconds["set_up"] += time.perf_counter() - started
+
+    def _forcing(self) -> float:
+        """Return the relative tolerance of the next linear solve, from the last two residuals [1]_.
+
+        PETSc has the same rule, but no way to tell it the residual before the first step of a resumed solve.
+        """
+        if len(self._steps) < 2:
+            return FORCING
+        before, now = (step.residual_rms for step in self._steps[-2:])
+        return min(FORCING, (now / before) ** GOLDEN)  # [1] choice 2 with gamma = 1
 
     def _monitor(self, snes: Any, number: int, norm: float) -> None:
         started = time.perf_counter()
-        before = sum(step.linear_iterations for step in self._steps)
+        if number == 0 and self._steps:
+            return  # the last step before this solve went on
         rms = norm / self.system.root_size if math.isfinite(norm) else math.nan
-        step = Step(number, rms, snes.getLinearSolveIterations() - before, started)
+        done = snes.getLinearSolveIterations()
+        step = Step(self._first + number, rms, done - self._counted, started)
+        self._counted = done
         self._steps.append(step)
         self.after_step(step, snes.getSolution())
         self.seconds["after_step"] += time.perf_counter() - started
