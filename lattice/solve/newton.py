@@ -174,7 +174,7 @@ class Newton:
         if len(self._steps) < 2:
             return FORCING
         before, now = (step.residual_rms for step in self._steps[-2:])
-        return min(FORCING, (now / before) ** GOLDEN)  # [1] choice 2 with gamma = 1
+        return float(min(FORCING, (now / before) ** GOLDEN))  # [1] choice 2 with gamma = 1
 
     def _monitor(self, snes: Any, number: int, norm: float) -> None:
         started = time.perf_counter()
