@@ -4,6 +4,7 @@ job.toml       the job as resolved, with every default filled in
 steps.jsonl    one line of JSON per nonlinear step, appended as the run goes
 summary.json   outcome and numbers, replaced in one step
 state.h5       the state after the last step
+reference.h5   the field Newton's method began at: it fixes the phases of a run that goes on
 field.png      its picture
 """
 
@@ -14,7 +15,7 @@ import json
 import os
 import resource
 import sys
-from collections.abc import Callable, Mapping
+from collections.abc import Callable, Mapping, Sequence
 from contextlib import suppress
 from dataclasses import asdict, dataclass, field
 from pathlib import Path
@@ -68,6 +69,11 @@ class Summary:
         See `versions`.
     classification : dict
         Kind, repeats and symmetries of a converged state; else empty.
+    stage : str
+        The stage the run ended in: "damped", "newton" or "refine".
+    stages : list of dict
+        What was done one after another: stage, method, lattice, steps, linear_iterations, residual_rms after
+        it, seconds, ending.
     """
 
     outcome: str
@@ -86,6 +92,8 @@ class Summary:
     peak_memory_mb: float
     versions: dict[str, str] = field(default_factory=dict)
     classification: dict[str, Any] = field(default_factory=dict)
+    stage: str = ""
+    stages: list[dict[str, Any]] = field(default_factory=list)
 
     def to_json(self) -> str:
         """Return the text of summary.json."""
@@ -120,6 +128,7 @@ class RunFolder:
         self.steps = self.path / "steps.jsonl"
         self.summary = self.path / "summary.json"
         self.state = self.path / "state.h5"
+        self.reference = self.path / "reference.h5"
         self.picture = self.path / "field.png"
         self._comm = comm
         self._before: Before | None = None
@@ -165,6 +174,15 @@ class RunFolder:
         """Append one step to steps.jsonl."""
         self._on_root(lambda: append_line(self.steps, entry), f"cannot write {self.steps}")
 
+    def rewrite_steps(self, entries: Sequence[Mapping[str, Any]]) -> None:
+        """Replace steps.jsonl: a resumed run goes on from its state, which may lie behind the last lines."""
+        text = "".join(json.dumps(plain(e), allow_nan=False, ensure_ascii=False) + "\n" for e in entries)
+        self._on_root(lambda: write_text_whole(self.steps, text), f"cannot write {self.steps}")
+
+    def drop_reference(self) -> None:
+        """Remove reference.h5: a solved state needs none."""
+        self._on_root(lambda: discard(self.reference), f"cannot write to folder {self.path}")
+
     def write_summary(self, summary: Summary) -> None:
         """Replace summary.json."""
         self._on_root(
@@ -180,7 +198,7 @@ class RunFolder:
         discard(self.summary)
         remove_stop_note(self.path)
         if not resume:
-            for old in (self.steps, self.picture):
+            for old in (self.steps, self.picture, self.reference):
                 discard(old)
         write_text_whole(self.job, job_text)
 

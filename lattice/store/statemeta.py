@@ -54,6 +54,8 @@ class StateMeta:
         The resolved job file, in TOML.
     classification : dict
         Kind, repeats and symmetries of a converged state, as `lattice.classify.kind` found them; else empty.
+    progress : dict
+        Where the run stood besides the field and its history: what a resumed run needs; else empty.
     written : str
         Coordinated universal time of writing, ISO 8601.
     """
@@ -75,6 +77,7 @@ class StateMeta:
     versions: dict[str, str] = field(default_factory=dict)
     job_text: str = ""
     classification: dict[str, Any] = field(default_factory=dict)
+    progress: dict[str, Any] = field(default_factory=dict)
     written: str = ""
 
     @classmethod
