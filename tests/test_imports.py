@@ -27,6 +27,7 @@ LAYERS = (
     ("job",),
     ("classify",),
     ("solve",),
+    ("check",),
     ("batch",),
     ("campaign",),
     ("cli",),

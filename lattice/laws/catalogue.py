@@ -24,6 +24,8 @@ FOLDER = Path(__file__).with_name("named")
 _TEXTS = ("name", "title", "source")
 _OPTIONAL_TEXTS = ("scaling", "notes", "best_for")
 _KEYS = (*_TEXTS, *_OPTIONAL_TEXTS, "dimensions", "components", "equations", "parameters")
+_MEANS = {"balances": ("gain", "loss"), "observables": ("formula", "meaning")}
+"""Tables of means that a law file may give, with the keys of an entry; all but the meaning are formulas."""
 _PARAMETER_KEYS = ("default", "unit", "meaning")
 
 
@@ -153,7 +155,7 @@ def read_law_file(path: Path) -> Law:
         For a file that is not TOML, has unknown or missing keys, or values of the wrong type.
     """
     content = _load_toml(path)
-    _check_keys(content, _KEYS, path)
+    _check_keys(content, (*_KEYS, *_MEANS), path)
     texts = {key: _text(content, key, path) for key in _TEXTS}
     texts |= {key: _text(content, key, path) for key in _OPTIONAL_TEXTS if key in content}
     if texts["name"] != path.stem:
@@ -174,6 +176,8 @@ def read_law_file(path: Path) -> Law:
         scaling=texts.get("scaling", ""),
         notes=texts.get("notes", ""),
         best_for=texts.get("best_for", ""),
+        balances=_means(content, "balances", law, path),
+        observables=_means(content, "observables", law, path),
     )
 
 
@@ -240,3 +244,19 @@ def _parameters(table: Mapping[str, Any], path: Path) -> dict[str, Parameter]:
         texts = {part: _text(content, part, path) for part in ("unit", "meaning")}
         found[name] = Parameter(name, default, texts["unit"], texts["meaning"])
     return found
+
+
+def _means(content: Mapping[str, Any], table: str, law: Law, path: Path) -> tuple[tuple[str, str, str], ...]:
+    """Return the entries of a table of means, after reading their formulas as expressions of the law."""
+    from lattice.laws.notation import read_expression
+
+    found, parameters = [], [p.name for p in law.parameters]
+    for name, entry in _table(content.get(table, {}), table, path).items():
+        key = f"{table}.{name}"
+        given = _table(entry, key, path)
+        _check_keys(given, _MEANS[table], path, f"{key}.")
+        first, second = (_text(given, part, path) for part in _MEANS[table])
+        for text in (first, second) if table == "balances" else (first,):
+            read_expression(text, law.components, parameters, law.dimensions)
+        found.append((name, first, second))
+    return tuple(found)

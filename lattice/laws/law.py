@@ -120,6 +120,10 @@ class Law:
         In the order of the law file.
     text : tuple of str
         The equations as typed, which a state file stores and `read_law` parses again.
+    balances : tuple of (str, str, str)
+        Name, gain and loss of balances that the law file gives: their means over a period are equal.
+    observables : tuple of (str, str, str)
+        Name, formula and meaning of further means that the law file gives.
     """
 
     name: str
@@ -134,6 +138,8 @@ class Law:
     scaling: str = ""
     notes: str = ""
     best_for: str = ""
+    balances: tuple[tuple[str, str, str], ...] = ()
+    observables: tuple[tuple[str, str, str], ...] = ()
     _cache: dict[str, object] = field(default_factory=dict, repr=False, compare=False)
 
     @property
