@@ -22,7 +22,8 @@ from lattice.job.ranks import check_ranks
 from lattice.job.reader import load_job, load_job_with_cautions
 from lattice.job.reference import job_reference
 from lattice.job.resolution import resolution_cautions
-from lattice.job.schema import START_MODELS, CoarseSection, Job, PatchesSection
+from lattice.job.schema import CoarseSection, Job, PatchesSection
+from lattice.job.starts import START_MODELS
 from lattice.job.unknowns import scalar_names
 from lattice.job.writer import job_to_toml
 from lattice.laws.law import Parameter

@@ -8,8 +8,17 @@ from typing import TYPE_CHECKING
 
 from lattice.job.choices import PRECONDITIONERS
 from lattice.job.problems import Findings, did_you_mean, listed
-from lattice.job.schema import ArrayStart, CoarseSection, Job, MarchStart, PatchesSection, Wave, WavesStart
-from lattice.job.unknowns import axes, homogeneous_axes, judge_free, open_means
+from lattice.job.schema import CoarseSection, Job, PatchesSection
+from lattice.job.starts import (
+    ArrayStart,
+    MarchKeys,
+    NoiseStart,
+    RecurrenceStart,
+    Wave,
+    WavesStart,
+    WindowStart,
+)
+from lattice.job.unknowns import axes, homogeneous_axes, judge_free, open_means, scalar_names
 
 if TYPE_CHECKING:
     from lattice.laws.law import Law
@@ -75,7 +84,7 @@ def _judge_dimensions(job: Job, law: Law, findings: Findings) -> None:
 
 
 def _judge_box(job: Job, law: Law, findings: Findings) -> None:
-    box, stored = job.box, job.start.kind == "state"
+    box, stored = job.box, job.start.kind in ("state", "excerpt", "mosaic")
     wanted = [f"length_{axis}" for axis in axes(law)] + (["period"] if job.lattice.nt > 1 else [])
     for name in wanted:
         if getattr(box, name) is None and not stored:
@@ -173,6 +182,31 @@ def _judge_solve(job: Job, law: Law, findings: Findings) -> None:
     _judge_sizes("coarse", job, findings)
     for component in solve.mean:
         _judge_mean(f"solve.mean.{component}", component, law, findings)
+    _judge_stages(job, law, findings)
+
+
+def _judge_stages(job: Job, law: Law, findings: Findings) -> None:
+    """Refuse stages out of order, and a damped stage where there is nothing for it."""
+    stages, order = job.solve.stages, ("damped", "newton", "refine")
+    known = scalar_names(law)
+    for name in job.solve.damped.free or ():
+        if name not in known:
+            findings.refuse(
+                "solve.damped.free",
+                f"must name scalars of the problem, {listed(known)}, got '{name}'{did_you_mean(name, known)}",
+            )
+    if stages is None:
+        return
+    if list(stages) != [stage for stage in order if stage in stages]:
+        findings.refuse(
+            "solve.stages", f"must be stages in the order {listed(order)}, each once, got {listed(stages)}"
+        )
+    elif "refine" in stages and "newton" not in stages:
+        findings.refuse("solve.stages", "must have newton before refine; add it")
+    if job.solve.nested and stages != ("newton",):
+        findings.refuse(
+            "solve.nested", f'is for solve.stages = ["newton"], got {listed(stages)}; remove one of them'
+        )
 
 
 def _judge_sizes(table: str, job: Job, findings: Findings) -> None:
@@ -201,10 +235,14 @@ def _no_component(component: str, law: Law) -> str:
 
 def _judge_start(job: Job, law: Law, findings: Findings) -> None:
     start = job.start
-    if isinstance(start, (MarchStart, WavesStart)):
+    if isinstance(start, (MarchKeys, NoiseStart, WavesStart)):
         _judge_offsets(start.mean, law, findings)
-    if isinstance(start, MarchStart):
+    if isinstance(start, MarchKeys):
         _judge_march(start, job, law, findings)
+    if isinstance(start, WindowStart):
+        _judge_window(start, job, law, findings)
+    elif isinstance(start, RecurrenceStart):
+        _judge_recurrence(start, job, findings)
     elif isinstance(start, WavesStart):
         for place, wave in enumerate(start.modes, start=1):
             _judge_wave(f"start.modes[{place}]", wave, job, law, findings)
@@ -218,7 +256,51 @@ def _judge_offsets(mean: Mapping[str, float], law: Law, findings: Findings) -> N
             findings.refuse(f"start.mean.{component}", _no_component(component, law))
 
 
-def _judge_march(start: MarchStart, job: Job, law: Law, findings: Findings) -> None:
+def _judge_window(start: WindowStart, job: Job, law: Law, findings: Findings) -> None:
+    for axis in "xy":
+        marched, own = getattr(start, f"march_length_{axis}"), getattr(job.box, f"length_{axis}")
+        if marched is None or own is None or marched == own:
+            continue
+        key, fewest = f"start.march_length_{axis}", own * (1.0 + start.blend_space)
+        if axis not in homogeneous_axes(law):
+            findings.refuse(
+                key,
+                f"must be left out: the law depends on {axis}, so that no part of a box stands for the whole",
+            )
+        elif marched < fewest * (1.0 - 1e-12):
+            findings.refuse(
+                key,
+                f"must be box.length_{axis} = {own} or at least (1 + start.blend_space) times that,"
+                f" {fewest:g}, to hold the window and what is blended with it, got {marched}; raise it",
+            )
+
+
+def _judge_recurrence(start: RecurrenceStart, job: Job, findings: Findings) -> None:
+    if job.lattice.nt == 1:
+        findings.refuse(
+            "start.kind",
+            "must not be 'recurrence' for lattice.nt = 1: a recurrence is a field in time; raise lattice.nt",
+        )
+        return
+    if job.solve.free is not None and "period" not in job.solve.free:
+        findings.refuse(
+            "solve.free", "must name period for start.kind = 'recurrence', which gives the period; add it"
+        )
+    if job.box.period is None:
+        return
+    shortest, longest = start.shortest or 0.5 * job.box.period, start.longest or 1.5 * job.box.period
+    if not shortest < longest:
+        findings.refuse(
+            "start.longest", f"must exceed start.shortest = {shortest:g}, got {longest:g}; raise it"
+        )
+    elif start.march_time <= longest:
+        findings.refuse(
+            "start.march_time",
+            f"must exceed the longest period looked for, {longest:g}, got {start.march_time}; raise it",
+        )
+
+
+def _judge_march(start: MarchKeys, job: Job, law: Law, findings: Findings) -> None:
     if start.shape is not None and len(start.shape) != law.dimensions:
         form = "[nx]" if law.dimensions == 1 else "[ny, nx]"
         findings.refuse(

@@ -11,7 +11,12 @@ PRECONDITIONERS: dict[str, str] = {
 
 START_KINDS: dict[str, str] = {
     "march": "march the law in time from noise and cut a window of one period",
+    "window": "the same from a march of a larger box, cut in space, too",
+    "recurrence": "march the law and take a stretch after which the flow is nearly the same",
+    "noise": "smooth noise in space and time on the waves the law amplifies",
     "state": "take a stored state, interpolated to this lattice",
+    "excerpt": "cut a window of a stored state or an array and make it periodic",
+    "mosaic": "arrange stored states in time and space, their seams blended",
     "waves": "add up given cosine waves",
     "array": "read a field from a NumPy or HDF5 file",
 }

@@ -9,13 +9,19 @@ from typing import Annotated, Any, Literal, Union, get_args, get_origin
 from pydantic import BaseModel
 from pydantic.fields import FieldInfo
 
-from lattice.job.schema import START_MODELS, CoarseSection, Job, PatchesSection, Wave
+from lattice.job.schema import CoarseSection, DampedSection, Job, PatchesSection, RefineSection
+from lattice.job.starts import START_MODELS, MemberTable, Wave
 from lattice.job.wording import value_text
 
 HEADER = "| key | value | default | meaning |\n|---|---|---|---|"
 _PLAIN = {int: "integer", float: "number", str: "text", bool: "true or false"}
 _BELOW: dict[str, dict[str, type[BaseModel]]] = {
-    "solve": {"[solve.coarse]": CoarseSection, "[solve.patches]": PatchesSection}
+    "solve": {
+        "[solve.coarse]": CoarseSection,
+        "[solve.patches]": PatchesSection,
+        "[solve.damped]": DampedSection,
+        "[solve.refine]": RefineSection,
+    }
 }
 """Tables inside a section, which have a table of their own in the reference."""
 _BOUNDS = {"gt": ">", "ge": ">=", "lt": "<", "le": "<="}
@@ -30,7 +36,7 @@ def job_reference() -> str:
             parts += [_table(title, model) for title, model in _BELOW.get(section, {}).items()]
         else:
             parts += [_table(f'[start] with kind = "{kind}"', model) for kind, model in START_MODELS.items()]
-            parts += [_table("[[start.modes]]", Wave)]
+            parts += [_table("[start.members]", MemberTable), _table("[[start.modes]]", Wave)]
     return "\n\n".join(parts) + "\n"
 
 
@@ -38,7 +44,7 @@ def _table(title: str, model: type[BaseModel]) -> str:
     rows = [
         _row(name, field)
         for name, field in model.model_fields.items()
-        if name not in ("kind", "coarse", "patches")
+        if name not in ("kind", "coarse", "patches", "damped", "refine")
     ]
     return "\n".join([f"`{title}`: {_first_line(model)}", "", HEADER, *rows])
 

@@ -9,30 +9,37 @@ from __future__ import annotations
 from functools import lru_cache
 from typing import TYPE_CHECKING, Annotated, Any, Literal
 
-from pydantic import BaseModel, ConfigDict, Discriminator, Field, Tag
-from pydantic.config import JsonDict
+from pydantic import Discriminator, Tag
 
 from lattice.geometry.lattice import Lattice
 from lattice.job.choices import PRECONDITIONERS
+from lattice.job.section import Count, Name, Positive, Section
+from lattice.job.section import key as _key
+from lattice.job.starts import Start, StateStart
 
 if TYPE_CHECKING:
     from lattice.laws.law import Law, Parameter
 
-Positive = Annotated[float, Field(gt=0)]
-Count = Annotated[int, Field(ge=1)]
-Name = Annotated[str, Field(min_length=1)]
 
-
-def _key(description: str, default: Any = ..., *, shown: str = "", **bounds: Any) -> Any:
-    """Describe one key; `shown` is what the reference prints instead of the default."""
-    extra: JsonDict = {"shown": shown} if shown else {}
-    return Field(default, description=description, json_schema_extra=extra, **bounds)
-
-
-class Section(BaseModel):
-    """A table of the job file: unknown keys refused, types as written, frozen."""
-
-    model_config = ConfigDict(extra="forbid", strict=True, frozen=True, allow_inf_nan=False)
+__all__ = [
+    "BoxSection",
+    "CoarseSection",
+    "Count",
+    "DampedSection",
+    "Job",
+    "LatticeSection",
+    "LawSection",
+    "Name",
+    "OutputSection",
+    "OwnParameter",
+    "PatchesSection",
+    "Positive",
+    "RefineSection",
+    "Section",
+    "SolveSection",
+    "Start",
+    "StateStart",
+]
 
 
 class OwnParameter(Section):
@@ -162,6 +169,38 @@ class CoarseSection(Section):
     slab_overlap: int = _key("levels by which a slab reaches into its neighbours", 2, ge=0)
 
 
+class DampedSection(Section):
+    """The `damped` stage: Levenberg-Marquardt steps from a rough start."""
+
+    free: tuple[Name, ...] | None = _key(
+        "scalars that move in this stage besides those of `solve.free`",
+        None,
+        shown="the lengths along every axis the law does not single out",
+    )
+    steps: int = _key("largest number of steps", 400, ge=0)
+    residual_rms: Positive = _key("hand over when the root mean square residual is at most this", 1e-6)
+    linear_iterations: Count = _key("largest number of conjugate gradient iterations of one solve", 500)
+    largest_move: float = _key("largest relative change of period or a length in one step", 0.1, gt=0, lt=1)
+    relattice: float = _key(
+        "relative change of period or a length from which on the lattice is made anew, to keep its spacings",
+        0.05,
+        gt=0,
+        lt=1,
+    )
+    stall_steps: Count = _key("steps over which the residual must fall by `stall_fall`", 20)
+    stall_fall: float = _key("least relative fall of the residual over `stall_steps`", 0.1, gt=0, lt=1)
+    kicks: int = _key("times a stalled field is shaken and the stage goes on", 2, ge=0)
+
+
+class RefineSection(Section):
+    """The `refine` stage: the state again on finer lattices."""
+
+    count: Count = _key("number of times the lattice is refined", 2)
+    factor: float = _key(
+        "nodes of every axis of the finer lattice over those of the coarser", 1.4, gt=1, le=4
+    )
+
+
 class SolveSection(Section):
     """What is free, how the equations are solved, when to stop."""
 
@@ -189,89 +228,20 @@ class SolveSection(Section):
     )
     linear_iterations: Count = _key("largest number of iterations of one linear solve", 500)
     line_search: bool = _key("shorten a step that does not lower the residual", True)
+    stages: tuple[Literal["damped", "newton", "refine"], ...] | None = _key(
+        "what is done from the start on: `damped` lowers the residual of a rough start, `newton` solves,"
+        " `refine` solves again on finer lattices",
+        None,
+        min_length=1,
+        shown="by the residual of the start: newton alone where it is small, else all three",
+    )
     nested: int = _key(
         "number of coarser lattices, each with half the nodes per axis, that are solved first", 0, ge=0, le=4
     )
     patches: PatchesSection = _key("the `patches` preconditioner's blocks", PatchesSection())
     coarse: CoarseSection = _key("the `coarse` preconditioner's levels", CoarseSection())
-
-
-class MarchStart(Section):
-    """Start from a march of the law in time, from noise."""
-
-    kind: Literal["march"]
-    seed: int = _key("seed of the noise", 0, ge=0)
-    amplitude: Positive = _key("root mean square of the noise", 0.1)
-    mean: dict[str, float] = _key(
-        "value of each component the noise is added to", {}, shown="`solve.mean`, else 0"
-    )
-    spin_up: float = _key("time marched before the window is cut", 100.0, ge=0)
-    dt: Positive | None = _key("time step of the march", None, shown="chosen from the law and lattice")
-    blend: float = _key(
-        "fraction of the period over which the window's end is blended into its start", 0.3, ge=0, lt=1
-    )
-    match_drift: tuple[Literal["x", "y"], ...] | None = _key(
-        "axes along which the drift is chosen so that the window's end fits its start",
-        None,
-        shown="axes whose drift is free and not given in [box]",
-    )
-    match_rotation: bool | None = _key(
-        "choose the rotation, too, so that the window's end fits its start",
-        None,
-        shown="true where the rotation is free and not given in [box]",
-    )
-    shape: tuple[Count, ...] | None = _key(
-        "nodes of the marcher, `[nx]` or `[ny, nx]`",
-        None,
-        shown="from the lattice",
-        min_length=1,
-        max_length=2,
-    )
-
-
-class StateStart(Section):
-    """Start from a stored state; values the job's box leaves out come from it too."""
-
-    kind: Literal["state"]
-    file: Name = _key("the state file, relative to the job file or the current folder")
-
-
-class Wave(Section):
-    """One cosine, `amplitude * cos(2*pi*(kx*x/Lx + ky*y/Ly - kt*t/T) + phase)`."""
-
-    component: Name | None = _key("the component", None, shown="the law's only one")
-    amplitude: float = _key("its amplitude")
-    kt: int = _key("periods in time", 0)
-    kx: int = _key("wavelengths in x", 0)
-    ky: int = _key("wavelengths in y", 0)
-    phase: float = _key("phase in radians", 0.0)
-
-
-class WavesStart(Section):
-    """Start from a sum of cosines."""
-
-    kind: Literal["waves"]
-    modes: tuple[Wave, ...] = _key("the waves, one table each", min_length=1)
-    mean: dict[str, float] = _key(
-        "value of each component the waves are added to", {}, shown="`solve.mean`, else 0"
-    )
-
-
-class ArrayStart(Section):
-    """Start from an array of the user's, shape (nt, ny, nx, components)."""
-
-    kind: Literal["array"]
-    file: Name = _key("a NumPy or HDF5 file, relative to the job file or the current folder")
-    dataset: Name | None = _key("name of the dataset in an HDF5 file", None, shown="`u`")
-
-
-Start = Annotated[MarchStart | StateStart | WavesStart | ArrayStart, Field(discriminator="kind")]
-START_MODELS: dict[str, type[Section]] = {
-    "march": MarchStart,
-    "state": StateStart,
-    "waves": WavesStart,
-    "array": ArrayStart,
-}
+    damped: DampedSection = _key("the `damped` stage", DampedSection())
+    refine: RefineSection = _key("the `refine` stage", RefineSection())
 
 
 class OutputSection(Section):

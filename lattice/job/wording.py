@@ -10,7 +10,8 @@ from pydantic_core import ErrorDetails
 
 from lattice.job.choices import START_KINDS
 from lattice.job.problems import Problem, did_you_mean, listed, printable
-from lattice.job.schema import START_MODELS, Job, OwnParameter, Wave
+from lattice.job.schema import Job, OwnParameter
+from lattice.job.starts import START_MODELS, Wave
 
 Place = tuple[int | str, ...]
 

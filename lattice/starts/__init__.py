@@ -9,7 +9,7 @@ from collections.abc import Callable
 from importlib import import_module
 from typing import Any
 
-KINDS = ("march", "state", "waves", "array")
+KINDS = ("march", "window", "recurrence", "noise", "state", "excerpt", "mosaic", "waves", "array")
 
 Start = Callable[..., Any]
 """`start(job_start, lattice, values, law, block, comm, report=silent) -> (owned, values)`, collective."""

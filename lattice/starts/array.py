@@ -48,10 +48,10 @@ def array(
         or not finite.
     """
     with ExitStack() as files:
-        opened: list[_Levels] = []
+        opened: list[ArrayLevels] = []
 
         def open_file() -> tuple[int, int, int]:
-            opened.append(_Levels(_opened(start, files), law, start.file))
+            opened.append(ArrayLevels(open_array(start, files), law, start.file))
             return opened[0].nodes
 
         nodes = on_root(comm, open_file)
@@ -65,7 +65,7 @@ def array(
     return owned, values
 
 
-class _Levels:
+class ArrayLevels:
     """An array or dataset, read level by level in the lattice's axes."""
 
     def __init__(self, source: Any, law: Law, path: str) -> None:
@@ -78,9 +78,17 @@ class _Levels:
 
     @property
     def nodes(self) -> tuple[int, int, int]:
+        """Nodes (nt, ny, nx)."""
         return self._shape[:3]
 
     def read(self, first: int, last: int) -> Real:
+        """Return the levels `first <= n < last`, shape (last - first, ny, nx, components).
+
+        Raises
+        ------
+        InputError
+            Where they are not finite.
+        """
         levels = np.asarray(self._source[first:last], dtype=float).reshape(last - first, *self._shape[1:])
         if not np.all(np.isfinite(levels)):
             place = tuple(np.argwhere(~np.isfinite(levels))[0])
@@ -109,7 +117,14 @@ def _lattice_shape(shape: tuple[int, ...], law: Law, path: str) -> tuple[int, in
     return (shape[0], shape[1], shape[2], shape[3])
 
 
-def _opened(start: ArrayOptions, files: ExitStack) -> Any:
+def open_array(start: ArrayOptions, files: ExitStack) -> Any:
+    """Return an array or dataset on disk, open until `files` is closed.
+
+    Raises
+    ------
+    InputError
+        For a file that is missing or holds no array.
+    """
     import h5py
 
     path = Path(start.file)

@@ -136,15 +136,8 @@ class Marcher:
 
     def prepare(self) -> Values:
         """Spin up and find the frame and the sources of the window; return these."""
-        self.axes = _matched_axes(self.start, self.law)
-        self.matched = tuple(f"drift_{axis}" for axis in self.axes)
-        self.matched += ("rotation",) if _matched_rotation(self.start, self.law) else ()
-        self.stepper = self._stepper()
-        self.spectrum = self._spin_up(self._noise())
-        self.frame = {name: self.values.get(name, 0.0) for name in ("drift_x", "drift_y", "rotation")}
-        self.pair = self._pair()
-        self.running: dict[int, float] = {}
-        wandering = _wandering(self.law)
+        self._prepare_march()
+        wandering = self._wandering_rows()
         if self.lattice.nt > 1 and (self.matched or wandering):
             self._compare_ends(wandering)
         elif self.lattice.nt == 1:
@@ -153,6 +146,23 @@ class Marcher:
         found |= {f"source_{self._name(row)}": -slope for row, slope in self.running.items()}
         self._tell_of_window(found)
         return found
+
+    def _prepare_march(self) -> None:
+        """Spin up."""
+        self.axes = _matched_axes(self.start, self.law)
+        self.matched = tuple(f"drift_{axis}" for axis in self.axes)
+        self.matched += ("rotation",) if _matched_rotation(self.start, self.law) else ()
+        self.stepper = self._stepper()
+        self.spectrum = self._spin_up(self._noise())
+        self.frame = {name: self.values.get(name, 0.0) for name in ("drift_x", "drift_y", "rotation")}
+        self.pair = self._pair()
+        self.running: dict[int, float] = {}
+
+    def _wandering_rows(self) -> list[int]:
+        """Return the rows of evolving components whose mean runs freely without changing anything else."""
+        evolving = [self.law.components[n] for n in self.stepper.operator.evolving]
+        free = set(self.law.symmetries.shiftable) - set(self.law.symmetries.conserved)
+        return [row for row, name in enumerate(evolving) if name in free]
 
     def slices(self) -> Iterator[Real]:
         """Yield the window's samples on the lattice's nodes, shape (ny, nx, C)."""
@@ -305,10 +315,3 @@ def _matched_rotation(start: MarchOptions, law: Law) -> bool:
             "turned; remove it"
         )
     return bool(start.match_rotation)
-
-
-def _wandering(law: Law) -> list[int]:
-    """Return the rows of evolving components whose mean runs freely without changing anything else."""
-    evolving = [c for c, on in zip(law.components, law.evolving, strict=True) if on]
-    free = set(law.symmetries.shiftable) - set(law.symmetries.conserved)
-    return [row for row, name in enumerate(evolving) if name in free]

@@ -74,7 +74,7 @@ def state(
             from lattice.store.statefile import StateFile
 
             opened.append(files.enter_context(StateFile(start.file)))
-            _check(opened[0].meta, law, start.file)
+            check_components(opened[0].meta, law, start.file)
             return opened[0].meta
 
         meta = on_root(comm, open_file)
@@ -90,7 +90,13 @@ def state(
     return owned, {**{k: v for k, v in meta.values.items() if k in known}, **values}
 
 
-def _check(meta: StateMeta, law: Law, path: str) -> None:
+def check_components(meta: StateMeta, law: Law, path: str) -> None:
+    """Refuse a stored state of other components or dimensions than a law's.
+
+    Raises
+    ------
+    InputError
+    """
     if (meta.components, meta.dimensions) != (law.components, law.dimensions):
         raise InputError(
             f"must hold components {', '.join(law.components)} in {law.dimensions} dimension(s), got "

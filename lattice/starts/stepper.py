@@ -266,12 +266,16 @@ def settle(
             continue
         # A remainder below round-off would leave the loop no progress.
         now = time if stretch == time - now else now + stretch
-        spectrum, dt = later, _follow(stepper, later, dt, tolerance)
+        spectrum, dt = later, followed_step(stepper, later, dt, tolerance)
     return spectrum, dt
 
 
-def _follow(stepper: Stepper, spectrum: Complex, dt: float, tolerance: float) -> float:
-    """Return the step for the next stretch: the error of one step falls as dt**5."""
+def followed_step(stepper: Stepper, spectrum: Complex, dt: float, tolerance: float) -> float:
+    """Return the step for the next stretch of a march from the flow where it has come to.
+
+    The error of one step falls as dt**5; it is halved beyond the tolerance, doubled far within, and always
+    stable.
+    """
     error = stepper.step_error(spectrum, dt)
     if error > 32.0 * tolerance:
         return suggest_dt(stepper, spectrum, tolerance)
