@@ -23,6 +23,8 @@ COMMANDS = {
     "leg": "run one leg of a submitted run; batch scripts call it",
     "info": "tell what a state file holds",
     "plot": "draw a state",
+    "excerpt": "cut a window of a state and make it periodic, to solve it",
+    "mosaic": "arrange states in time and space, their seams blended, to solve that",
     "laws": "list the laws, or describe one",
     "doctor": "tell what this machine is missing, and how to get it",
 }

@@ -5,6 +5,7 @@ from __future__ import annotations
 from contextlib import ExitStack
 from dataclasses import dataclass, field
 from pathlib import Path
+from typing import TYPE_CHECKING
 
 import numpy as np
 from numpy.typing import NDArray
@@ -17,6 +18,9 @@ from lattice.starts.options import ArrayOptions, ExcerptOptions
 from lattice.starts.state import check_components
 from lattice.starts.stepper import Values
 from lattice.starts.streaming import ReadLevels
+
+if TYPE_CHECKING:
+    from lattice.store.statemeta import StateMeta
 
 Real = NDArray[np.float64]
 
@@ -108,6 +112,15 @@ def describe_state(path: str, law: Law) -> Source:
         (lattice.order_t, lattice.order_y, lattice.order_x),
         meta.outcome,
     )
+
+
+def stored_law(meta: StateMeta) -> Law:
+    """Return the law of a stored state: the shipped one of its name and text, else the text read again."""
+    from lattice.laws.catalogue import law_names, load_law, read_law
+
+    if meta.law in law_names() and load_law(meta.law).text == tuple(meta.text):
+        return load_law(meta.law)
+    return read_law("own", meta.text, meta.components, dict(meta.parameters), meta.dimensions)
 
 
 def open_levels(start: ExcerptOptions, law: Law, files: ExitStack) -> ReadLevels:
