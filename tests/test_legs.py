@@ -17,7 +17,7 @@ import pytest
 
 from lattice.batch.chain import LegEnd, decide
 from lattice.batch.ending import Ending
-from lattice.batch.legs import LegLog, is_cancelled, newest_job, open_leg
+from lattice.batch.legs import LegLog, halt_reason, is_cancelled, newest_job, open_leg
 from lattice.batch.site import Site
 from lattice.batch.supervise import WALL_CLOCK, Supervisor
 from lattice.batch.ticket import Ticket, read_ticket, write_ticket
@@ -99,9 +99,11 @@ def test_the_log_of_legs_tells_what_is_open(tmp_path: Path) -> None:
     assert newest_job(log.events()) == "7"
     with (tmp_path / "legs.jsonl").open("a") as file:
         file.write('{"event": "en')  # cut short by a crash
-    log.append("ended", leg=1)
+    log.append("ended", leg=1, goes_on=True)
     assert [event["event"] for event in log.events()] == ["submitted", "began", "ended"]
-    assert open_leg(log.events()) is None
+    assert open_leg(log.events()) is not None, "the next leg is about to be submitted"
+    log.append("halted", reason="no answer")
+    assert open_leg(log.events()) is None and halt_reason(log.events()) == "no answer"
 
 
 def supervised(

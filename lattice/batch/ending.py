@@ -30,10 +30,13 @@ class Ending:
         self.asked = ""
 
     def note(self, reason: str) -> None:
-        """Remember what asks for a stop, and tell the ranks, which repeat it as their reason."""
-        self.asked = reason
+        """Remember what asks for a stop, and tell the ranks, which repeat it as their reason.
+
+        Where a note is there already, its writer has sent the signal that comes through here.
+        """
+        self.asked = read_stop_note(self.folder) or reason
         if self.folder.is_dir():
-            write_stop_note(self.folder, reason)
+            write_stop_note(self.folder, self.asked)
 
     def conclude(self, code: int) -> int:
         """Return the run's exit code for that of its launcher, with summary.json written where it is missing.

@@ -80,12 +80,7 @@ class _Leg:
             command = [sys.executable, "-m", "lattice", *self.ticket.arguments(self.number)]
             code = ending.conclude(supervisor.run(command, self.folder, output))
             end = self._end(code, supervisor)
-            self._note(
-                "ended", leg=self.number, code=code, outcome=end.outcome, reason=end.reason,
-                new_steps=kept_steps(self.folder) - steps, seconds=round(supervisor.elapsed(), 1),
-                core_hours=self.ticket.site.cores(ranks) * supervisor.elapsed() / 3600,
-            )  # fmt: skip
-            self._go_on(end)
+            self._conclude(end, kept_steps(self.folder) - steps, supervisor.elapsed())
         return code
 
     def _end(self, code: int, supervisor: Supervisor) -> LegEnd:
@@ -97,11 +92,16 @@ class _Leg:
         by_request = bool(supervisor.asked) and not supervisor.at_limit
         return LegEnd(code, outcome, reason, supervisor.at_limit, told.get("lost") is True, by_request)
 
-    def _go_on(self, end: LegEnd) -> None:
-        decision = decide(self.ticket, self.log.events(), end)
+    def _conclude(self, end: LegEnd, new_steps: int, seconds: float) -> None:
+        """Note the end with what follows from it, then submit the next leg where one is to follow."""
+        cores = self.ticket.site.cores(self.ticket.ranks_of(self.number))
+        facts: dict[str, Any] = {
+            "leg": self.number, "code": end.code, "outcome": end.outcome, "reason": end.reason,
+            "new_steps": new_steps, "seconds": round(seconds, 1), "core_hours": cores * seconds / 3600,
+        }  # fmt: skip
+        decision = decide(self.ticket, [*self.log.events(), {"event": "ended", **facts}], end)
+        self._note("ended", **facts, goes_on=decision.goes_on, halt=decision.reason)
         if not decision.goes_on:
-            if end.code != CONVERGED:
-                self._note("halted", reason=decision.reason)
             return
         try:
             self._submit_next()

@@ -19,7 +19,8 @@ class LegLog:
     """What has happened to a run.
 
     The events are `submitted` (leg, ranks, job), `began` (leg, job, host, process), `ended` (leg, code,
-    outcome, reason, seconds, new_steps, residual_rms), `cancelled` and `halted` (reason: why no leg follows).
+    outcome, reason, seconds, new_steps, goes_on, halt: why no leg follows), `cancelled`, and `halted`
+    (reason) where the next leg could not be submitted.
 
     Parameters
     ----------
@@ -59,8 +60,20 @@ def newest_job(events: Sequence[Event]) -> str:
 
 def open_leg(events: Sequence[Event]) -> Event | None:
     """Return the newest event of a leg that was submitted or began and has not ended, as far as is known."""
-    newest = last(events, "submitted", "began", "ended", "cancelled", "halted")
-    return newest if newest is not None and newest["event"] in ("submitted", "began") else None
+    newest = last(events, "submitted", "began", "ended", "halted")
+    if is_cancelled(events) and (newest is None or newest["event"] == "submitted"):
+        return None
+    if newest is None or newest["event"] == "halted":
+        return None
+    return None if newest["event"] == "ended" and not newest.get("goes_on") else newest
+
+
+def halt_reason(events: Sequence[Event]) -> str:
+    """Return why no leg follows the newest, empty where one does or may."""
+    newest = last(events, "submitted", "began", "ended", "halted")
+    if newest is None or newest["event"] in ("submitted", "began"):
+        return ""
+    return str(newest.get("reason" if newest["event"] == "halted" else "halt") or "")
 
 
 def is_cancelled(events: Sequence[Event]) -> bool:

@@ -203,17 +203,15 @@ def _loss(open_leg: Event) -> str:
 
 def _ended(files: _Files) -> tuple[str, str]:
     if files.summary:
-        halted = legs.last(files.events, "halted", "submitted")
-        why = str(files.summary.get("reason") or "")
-        if halted and halted["event"] == "halted" and str(halted.get("reason")) not in why:
-            extra = str(halted["reason"])
+        why, extra = str(files.summary.get("reason") or ""), legs.halt_reason(files.events)
+        if extra and extra not in why:
             why = extra if why in extra else f"{why}; {extra}"
         return str(files.summary.get("outcome") or "unknown"), why
     if legs.is_cancelled(files.events):
         return "cancelled", "before it began"
-    halted = legs.last(files.events, "halted")
+    halted = legs.halt_reason(files.events)
     if halted:
-        return "failed", str(halted.get("reason"))
+        return "failed", halted
     if files.steps or (files.folder / "state.h5").exists():
         return "lost", "it has ended without a word; `lattice solve --resume` goes on"
     return "empty", "nothing has been computed"
