@@ -34,7 +34,7 @@ def lu_package(comm_size: int) -> str:
 class Factorisation:
     """LU factors of one matrix at a time, rebuilt with more workspace where MUMPS asks for it.
 
-    Collective.
+    Collective. The analysis of a matrix is kept: when its values change, only they are factorised anew.
 
     Parameters
     ----------
@@ -47,24 +47,36 @@ class Factorisation:
         self.prefix, self.comm = prefix, comm
         self.package = lu_package(comm.size)
         self._ksp: Any = None
+        self._matrix: Any = None
 
     def factor(self, matrix: Any) -> None:
         """Factorise a matrix, replacing the factors held before.
+
+        `matrix` must outlive the factors.
 
         Raises
         ------
         FactorisationError
             With the package's numbers, after every permitted retry.
         """
+        if self._ksp is not None and self._matrix == matrix and self._renew(matrix):
+            return
         relaxations = RELAXATIONS if self.package == "mumps" else (0,)
         for relaxation in relaxations:
             status = self._attempt(matrix, relaxation)
-            if status.get("INFOG(1)", 0) >= 0:
+            if status["INFOG(1)"] >= 0:
+                self._matrix = matrix
                 return
             if status["INFOG(1)"] not in WORKSPACE_CODES or status["ICNTL(14)"] != relaxation:
                 break  # a larger workspace is no cure, or the user's option sets it
         self.destroy()
         raise FactorisationError(_explain(status, self.prefix), status)
+
+    def _renew(self, matrix: Any) -> bool:
+        """Factorise new values with the old analysis; tell whether that worked."""
+        self._ksp.setOperators(matrix)
+        self._ksp.setUp()
+        return bool(self._ksp.getConvergedReason() >= 0 and self._status(self._ksp.getPC())["INFOG(1)"] >= 0)
 
     def _attempt(self, matrix: Any, relaxation: int) -> dict[str, int]:
         from petsc4py import PETSc
@@ -88,7 +100,13 @@ class Factorisation:
             factor.setMumpsIcntl(14, relaxation)
         ksp.setFromOptions()
         ksp.setUp()
-        return _mumps_status(pc) if self.package == "mumps" and pc.getFactorSolverType() == "mumps" else {}
+        return self._status(pc)
+
+    def _status(self, pc: Any) -> dict[str, int]:
+        """Return MUMPS's own numbers; "INFOG(1)" of 0 alone where another package factorised."""
+        if self.package == "mumps" and pc.getFactorSolverType() == "mumps":
+            return _mumps_status(pc)
+        return {"INFOG(1)": 0}
 
     def solve(self, r: Any, y: Any, transpose: bool = False) -> None:
         """Set `y` to the solution for right-hand side `r`.
@@ -110,7 +128,7 @@ class Factorisation:
         """Free the factors. Collective."""
         if self._ksp is not None:
             self._ksp.destroy()
-            self._ksp = None
+            self._ksp = self._matrix = None
 
 
 def _mumps_status(pc: Any) -> dict[str, int]:

@@ -46,7 +46,7 @@ class GatheredFactorisation:
         self._vectors: tuple[Any, Any] | None = None
 
     def factor(self, matrix: Any) -> None:
-        """Factorise a matrix, replacing the factors held before.
+        """Factorise a matrix, replacing the factors held before; later ones have the first one's pattern.
 
         Raises
         ------
@@ -58,7 +58,7 @@ class GatheredFactorisation:
         columns, values = self._gather(columns), self._gather(values)
         failure: LatticeError | None = None
         if self._lu is not None:
-            self._rebuild(lengths, columns, values, matrix.getSize()[0])
+            self._take(lengths, columns, values, matrix.getSize()[0])
             try:
                 self._lu.factor(self._matrix)
             except LatticeError as error:
@@ -97,29 +97,28 @@ class GatheredFactorisation:
         self.group.Gatherv(np.ascontiguousarray(part), (whole, counts) if self.leads else None)
         return whole
 
-    def _rebuild(self, lengths: NDArray[Any], columns: NDArray[Any], values: NDArray[Any], size: int) -> None:
-        """Make the leaders' matrix of the group's rows."""
+    def _take(self, lengths: NDArray[Any], columns: NDArray[Any], values: NDArray[Any], size: int) -> None:
+        """Set the leaders' matrix to the group's rows: pattern and values first, then values alone."""
         from petsc4py import PETSc
 
-        self._destroy_matrix()
         starts = np.zeros(lengths.size + 1, dtype=PETSc.IntType)
         np.cumsum(lengths, out=starts[1:])
+        if self._matrix is not None:
+            self._matrix.setValuesCSR(starts, columns, values)
+            self._matrix.assemble()
+            return
         layout = (lengths.size, size)
         self._matrix = PETSc.Mat().createAIJ(
             (layout, layout), csr=(starts, columns, values), comm=self.leaders
         )
         self._vectors = self._matrix.createVecs()
 
-    def _destroy_matrix(self) -> None:
-        if self._vectors is not None:
-            for item in (*self._vectors, self._matrix):
-                item.destroy()
-            self._vectors = None
-
     def destroy(self) -> None:
         """Free the factors, the gathered matrix and the communicators."""
         if self._lu is not None:
             self._lu.destroy()
-            self._destroy_matrix()
+            for item in (*(self._vectors or ()), self._matrix):
+                if item is not None:
+                    item.destroy()
             self.leaders.Free()
         self.group.Free()
