@@ -19,7 +19,7 @@ from lattice.campaign.attempt import LOST
 from lattice.campaign.ending import ending
 from lattice.campaign.folder import CampaignFolder, MemberFiles, Record, read_record
 from lattice.campaign.keep import drop_fields, not_kept
-from lattice.campaign.likeness import alike, fingerprint
+from lattice.campaign.likeness import CERTAIN, POSSIBLE, Likeness, fingerprint
 from lattice.campaign.rate import wilson_interval
 from lattice.campaign.report import gather
 from lattice.campaign.schema import OutputSection
@@ -177,14 +177,20 @@ def test_a_record_survives_its_file(tmp_path: Path) -> None:
 
 
 def film_state(
-    path: Path, nt: int, nx: int, reflect: bool = False, shift: float = 0.0, extra: float = 0.0
+    path: Path,
+    nt: int,
+    nx: int,
+    reflect: bool = False,
+    shift: float = 0.0,
+    extra: float = 0.0,
+    times: int = 1,
 ) -> Path:
     """Write a field of a few waves on some lattice, moved or reflected."""
     from mpi4py import MPI
 
     law, lattice = load_law("kuramoto-sivashinsky"), Lattice(nt=nt, ny=1, nx=nx)
     t, x = np.meshgrid(2 * np.pi * np.arange(nt) / nt, 2 * np.pi * np.arange(nx) / nx, indexing="ij")
-    t, x = t + shift, (-x if reflect else x) + 2.0 * shift
+    t, x = times * t + shift, (-x if reflect else x) + 2.0 * shift
     u = np.cos(x - t) + 0.5 * np.sin(2 * x + t) + (0.2 + extra) * np.cos(3 * t) * np.sin(x + 1.0)
     owned = (-u if reflect else u)[:, np.newaxis, :, np.newaxis]
     from lattice.geometry.block import Block
@@ -196,21 +202,31 @@ def film_state(
     return path
 
 
-def numbers(path: Path, **changed: Any) -> dict[str, Any]:
+def likeness(path: Path, repeats: tuple[int, int, int] = (1, 1, 1), **changed: Any) -> Likeness:
     scalars = {"period": 20.0, "length_x": 22.0, "drift_x": 0.1, "source_u": 1e-17} | changed
-    return {"law": "film", "scalars": scalars, "mean_square": 0.65, "fingerprint": fingerprint(path)}
+    waves = fingerprint(path, "periodic", repeats)
+    known = {"law": "film", "scalars": scalars, "mean_square": 0.65, "fingerprint": waves}
+    return Likeness.of(known, "periodic", repeats)
 
 
 def test_a_moved_reflected_refined_state_is_the_same_one(tmp_path: Path) -> None:
-    plain = numbers(film_state(tmp_path / "a.h5", 24, 20))
-    moved = numbers(
+    plain = likeness(film_state(tmp_path / "a.h5", 24, 20))
+    moved = likeness(
         film_state(tmp_path / "b.h5", 34, 27, reflect=True, shift=0.7), drift_x=-0.1, source_u=0.0
     )
-    other = numbers(film_state(tmp_path / "c.h5", 24, 20, extra=0.05))
-    assert alike(plain, moved)
-    assert not alike(plain, other)
-    assert not alike(plain, numbers(tmp_path / "a.h5", period=20.1))
-    assert not alike(plain, {**plain, "law": "own"})
+    other = likeness(film_state(tmp_path / "c.h5", 24, 20, extra=0.05))
+    assert plain.near(moved, CERTAIN)
+    assert not plain.near(other, POSSIBLE)
+    assert plain.near(likeness(tmp_path / "a.h5", period=20.1), POSSIBLE)
+    assert not plain.near(likeness(tmp_path / "a.h5", period=20.1), CERTAIN)
+    assert not plain.near(replace(plain, law="own"), POSSIBLE)
+
+
+def test_a_repeated_state_is_the_one_it_repeats(tmp_path: Path) -> None:
+    plain = likeness(film_state(tmp_path / "a.h5", 24, 20))
+    path = film_state(tmp_path / "b.h5", 48, 20, times=2)
+    assert likeness(path, (2, 1, 1), period=40.0).near(plain, CERTAIN)
+    assert not likeness(path, (1, 1, 1), period=40.0).near(plain, POSSIBLE)
 
 
 def test_fields_that_are_no_new_states_go(tmp_path: Path) -> None:

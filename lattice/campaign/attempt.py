@@ -82,10 +82,8 @@ class Attempt:
             Where the member runs already.
         """
         self.files.run.mkdir(parents=True, exist_ok=True)
-        lock = _locked(self.files.lock)
-        if lock is None or _run_lock_held(self.files.run):
-            if lock is not None:
-                os.close(lock)
+        lock = _taken(self.files)
+        if lock is None:
             raise LatticeError(f"member {self.number} runs already, see {self.files.lock}")
         try:
             os.ftruncate(lock, 0)
@@ -185,6 +183,19 @@ def solve_command(files: MemberFiles, ranks: int, launcher: str | None, resume: 
         command += ["--ranks", str(ranks)]
         command += ["--launcher", launcher] if launcher else []
     return command
+
+
+def _taken(files: MemberFiles) -> int | None:
+    """Return a descriptor that holds a member's lock, None where the member runs."""
+    lock = _locked(files.lock)
+    if lock is None and not is_running(files):
+        # Held by what MPI left behind: that keeps the old file, the member gets a new one.
+        discard(files.lock)
+        lock = _locked(files.lock)
+    if lock is not None and _run_lock_held(files.run):
+        os.close(lock)
+        lock = None
+    return lock
 
 
 def _locked(path: Path) -> int | None:

@@ -131,6 +131,11 @@ class MemberFiles:
         return self.run / "summary.json"
 
     @property
+    def steps(self) -> Path:
+        """The steps of the solve, one line each."""
+        return self.run / "steps.jsonl"
+
+    @property
     def state(self) -> Path:
         """The state."""
         return self.run / "state.h5"

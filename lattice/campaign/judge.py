@@ -19,21 +19,23 @@ if TYPE_CHECKING:
     from lattice.campaign.folder import CampaignFolder, Record
 
 
+SAME_LATTICE, OTHER_LATTICE = 1e-3, 1e-2
+"""Largest relative distance of two fields of one state up to symmetry, solved on like lattices and on others,
+whose errors differ."""
+
+
 def judge(folder: CampaignFolder, record: Record, others: Sequence[Record]) -> Record:
     """Return a record with the verdict on its state, compared with those judged before."""
-    from lattice.campaign.likeness import alike, fingerprint
+    from lattice.campaign.likeness import fingerprint
 
-    numbers = {**record.numbers, "fingerprint": fingerprint(folder.member(record.member).state)}
     kind, repeats = _classified(folder, record)
-    same = [
-        other.member
-        for other in others
-        if other.judged and other.same_as is None and other.member != record.member
-        if alike(numbers, other.numbers) and confirmed(folder, record, other)
-    ]
-    return replace(
-        record, judged=True, kind=kind, repeats=repeats, same_as=min(same, default=None), numbers=numbers
+    waves = fingerprint(folder.member(record.member).state, kind, repeats)
+    judged = replace(
+        record, judged=True, kind=kind, repeats=repeats, numbers={**record.numbers, "fingerprint": waves}
     )
+    firsts = [o for o in others if o.judged and o.same_as is None and o.member != record.member]
+    same = (other.member for other in firsts if _same(folder, judged, other))
+    return replace(judged, same_as=min(same, default=None))
 
 
 def _classified(folder: CampaignFolder, record: Record) -> tuple[str, tuple[int, ...]]:
@@ -43,30 +45,38 @@ def _classified(folder: CampaignFolder, record: Record) -> tuple[str, tuple[int,
         return str(told["kind"]), tuple(told["repeats"])
     from mpi4py import MPI
 
-    from lattice.classify.kind import classify
-    from lattice.geometry.blocks import Blocks
-    from lattice.job.reader import load_job
-    from lattice.solve.petsc import start_petsc
-    from lattice.store.statefile import open_state
+    from lattice.classify.files import classification_of
 
-    start_petsc([])
-    files = folder.member(record.member)
-    law, state = load_job(files.job).make_law(), open_state(files.state)
-    blocks = Blocks(state.meta.lattice, len(law.components), 0, MPI.COMM_SELF)
-    found = classify(law, state.meta.lattice, state.meta.values, state.field, blocks, MPI.COMM_SELF)
+    found = classification_of(folder.member(record.member).state, MPI.COMM_SELF)
     return found.kind, tuple(found.repeats)
 
 
-def confirmed(folder: CampaignFolder, one: Record, other: Record) -> bool:
-    """Whether the fields themselves agree up to symmetry; told by the numbers alone where one is gone."""
-    return True
+def _same(folder: CampaignFolder, one: Record, other: Record) -> bool:
+    """Whether two states are one up to symmetry: by their fields, by numbers alone where one is gone."""
+    from lattice.campaign.likeness import CERTAIN, POSSIBLE, Likeness
+
+    mine = Likeness.of(one.numbers, one.kind, one.repeats)
+    theirs = Likeness.of(other.numbers, other.kind, other.repeats)
+    if not mine.near(theirs, POSSIBLE):
+        return False
+    first, second = (folder.member(record.member).state for record in (one, other))
+    if not second.exists():
+        return mine.near(theirs, CERTAIN)
+    from mpi4py import MPI
+
+    from lattice.classify.canonical import compare_files
+
+    like = one.numbers.get("lattice") == other.numbers.get("lattice")
+    return compare_files(first, second, MPI.COMM_SELF).same(SAME_LATTICE if like else OTHER_LATTICE)
 
 
 def main(arguments: Sequence[str]) -> int:
     """Judge members in turn and print the verdicts, one line each."""
     environment.prepare()
     from lattice.campaign.folder import CampaignFolder
+    from lattice.solve.petsc import start_petsc
 
+    start_petsc([])
     folder = CampaignFolder(Path(arguments[0]))
     known = {record.member: record for record in folder.records(_all_members(folder))}
     for number in map(int, arguments[1:]):

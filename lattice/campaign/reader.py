@@ -20,7 +20,7 @@ from lattice.job.ranks import check_ranks
 from lattice.job.reader import frozen, read_toml, resolve_tables
 from lattice.job.resolution import resolution_cautions
 from lattice.job.resolve import changed
-from lattice.job.schema import Section
+from lattice.job.section import Section
 from lattice.job.wording import plain_place, problem_from
 
 if TYPE_CHECKING:

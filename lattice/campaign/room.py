@@ -18,21 +18,21 @@ WORDS_BYTES = 300_000
 """Job, log, steps and summaries of a member; logs of long runs are the largest part."""
 PICTURE_BYTES = 600_000
 """A run's picture: the largest of ours, in two dimensions and time, has 0.5 MB."""
-REFINED = 1.4**2
-"""Nodes per axis of a lattice refined twice by 1.4, over those of the job's own."""
+GROWN = 2.0
+"""Nodes over those of the job's own lattice that a damped stage may make where period and lengths grow."""
 MB = 1e6
 
 
 def state_bytes(job: Job) -> int:
     """Return the size of a job's state file on the finest lattice it may end on."""
-    lattice, law = job.make_lattice(), job.make_law()
-    axes = (law.dimensions if lattice.nt == 1 else law.dimensions + 1) if _refines(job) else 0
-    return int(8 * lattice.nodes * len(law.components) * REFINED**axes)
-
-
-def _refines(job: Job) -> bool:
-    stages = getattr(job.solve, "stages", ())
-    return stages is None or "refine" in stages
+    lattice, law, stages = job.make_lattice(), job.make_law(), job.solve.stages
+    axes = law.dimensions if lattice.nt == 1 else law.dimensions + 1
+    nodes = float(lattice.nodes)
+    if stages is None or "refine" in stages:
+        nodes *= job.solve.refine.factor ** (axes * job.solve.refine.count)
+    if stages is None or "damped" in stages:
+        nodes *= GROWN
+    return int(8 * nodes * len(law.components))
 
 
 def member_bytes(job: Job) -> int:

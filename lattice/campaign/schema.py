@@ -2,16 +2,10 @@
 
 from __future__ import annotations
 
-from typing import Any, Literal
+from typing import Literal
 
-from pydantic import Field
-
-from lattice.job.schema import Count, Name, Positive, Section
-
-
-def _key(description: str, default: Any = ..., *, shown: str = "") -> Any:
-    """Describe one key; `shown` is what the reference prints instead of the default."""
-    return Field(default, description=description, json_schema_extra={"shown": shown} if shown else {})
+from lattice.job.section import Count, Name, Positive, Section
+from lattice.job.section import key as _key
 
 
 class LimitsSection(Section):
