@@ -209,3 +209,12 @@ def _band(series: Series, kind: str, believed: float, safety: float, order: floa
         kind,
         values,
     )
+
+
+def band_of_correction(name: str, value: float, corrected: float, nominal: float, noise: float) -> Band:
+    """Return the band of a quantity whose error is known to first order only; the factor is 3."""
+    error = abs(corrected - value)
+    if error <= noise:
+        return Band(name, value, noise, value, noise, None, nominal, "exact", (value,))
+    half = SAFETY_ASSUMED * error
+    return Band(name, value, half, corrected, half - error, None, nominal, "assumed", (value, corrected))

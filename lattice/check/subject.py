@@ -183,3 +183,16 @@ def complete_free(law: Law, lattice: Lattice, free: tuple[str, ...], values: Val
     phases += [f"phase_{axis}" for axis in "xy"[: law.dimensions] if law.symmetries.homogeneous[axis]]
     phases += ["phase_rotation"] if law.rotating_pair else []
     return (*asked, *(own[p] for p in phases if p not in taken and own[p] not in asked))
+
+
+def foreign_law(meta: StateMeta) -> str:
+    """Return why a file's equations are not those of the law it names; empty where they are."""
+    if meta.law not in law_names():
+        return ""
+    shipped = load_law(meta.law)
+    if shipped.text == meta.text and shipped.components == meta.components:
+        return ""
+    return (
+        f"the file names the law {meta.law}, whose equations here are {'; '.join(shipped.text)}, and holds "
+        f"{'; '.join(meta.text)}: a state of another law"
+    )

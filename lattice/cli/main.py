@@ -21,6 +21,7 @@ COMMANDS = {
     "runs": "show how runs stand, or follow one",
     "cancel": "stop a submitted run",
     "leg": "run one leg of a submitted run; batch scripts call it",
+    "check": "tell with numbers whether a state can be trusted, and certify it or not",
     "info": "tell what a state file holds",
     "plot": "draw a state",
     "excerpt": "cut a window of a state and make it periodic, to solve it",

@@ -1,0 +1,137 @@
+"""A certificate in words, for a terminal."""
+
+from __future__ import annotations
+
+import math
+import textwrap
+from collections.abc import Iterator
+from typing import TYPE_CHECKING
+
+from lattice.check.certificate import CAUTION
+from lattice.check.verdict import CERTIFIED, FAILED, REFUSED, Criterion
+
+if TYPE_CHECKING:
+    from lattice.check.certificate import Certificate
+    from lattice.check.findings import Findings
+
+COLUMNS = 100
+
+
+def to_text(certificate: Certificate) -> str:
+    """Return the certificate for a terminal, at most 100 columns wide."""
+    found = certificate.findings
+    sections = [
+        [f"verdict: {certificate.verdict.upper()}", *_reasons(certificate)],
+        list(_criteria(certificate.criteria)),
+        list(_residuals(found)),
+        list(_spectra(found)),
+        list(_others(found)),
+        list(_levels(found)),
+        list(_bands(found)),
+    ]
+    text = "\n\n".join("\n".join(section) for section in sections if section)
+    caution = textwrap.fill(CAUTION, COLUMNS, initial_indent="Caution: ", subsequent_indent="         ")
+    return f"{text}\n\n{caution}\n"
+
+
+def _reasons(certificate: Certificate) -> list[str]:
+    if certificate.verdict == CERTIFIED:
+        return []
+    shown = [c for c in certificate.criteria if c.result != "passed"]
+    if certificate.verdict == REFUSED:
+        shown = [c for c in shown if c.result == FAILED] or shown
+    return [
+        line
+        for c in shown
+        for line in textwrap.wrap(
+            f"{c.name}: {c.why}", COLUMNS, initial_indent="  because ", subsequent_indent="          "
+        )
+    ]
+
+
+def _criteria(criteria: tuple[Criterion, ...]) -> Iterator[str]:
+    yield f"{'criterion':<18}{'result':<9}{'value':>11}{'threshold':>11}  what"
+    for c in criteria:
+        lines = textwrap.wrap(c.why, COLUMNS - 51) or [""]
+        yield f"{c.name:<18}{c.result:<9}{_short(c.value):>11}{_short(c.threshold):>11}  {lines[0]}"
+        for line in lines[1:]:
+            yield f"{'':<51}{line}"
+
+
+def _residuals(found: Findings) -> Iterator[str]:
+    r = found.residuals
+    orders = " x ".join(str(o) for o in dict.fromkeys(r.orders))
+    yield f"residuals           rms        largest    largest term            at order {orders}   exact"
+    for e in r.equations:
+        term = f"{e.term_rms:.2e} {e.term}"
+        yield (
+            f"  {e.component:<16}{e.rms:>9.2e}  {e.largest:>9.2e}    {term:<24.24}{e.raised_rms:>9.2e}"
+            f"  {e.exact_rms:>9.2e}"
+        )
+
+
+def _spectra(found: Findings) -> Iterator[str]:
+    yield "resolution          last third  beyond limit  limit      wavenumbers beyond it"
+    for s in found.spectra:
+        name = f"{s.component} along {s.axis}"
+        yield (
+            f"  {name:<18}{s.last_third:>9.1e}  {s.unrepresented:>9.1e}     {s.limit:<9.4g}"
+            f"  {s.modes_beyond} of {len(s.energy)}"
+        )
+
+
+def _others(found: Findings) -> Iterator[str]:
+    yield f"kind                {found.periodicity.text}"
+    for line in found.periodicity.symmetries:
+        yield f"                    {line}"
+    for b in found.balances:
+        if b.origin == "conserved":
+            yield f"{b.name:<20}wanders by {b.error:.1e} of the field from level to level"
+        else:
+            yield f"{b.name + ' balance':<20}loss/gain {b.computed_to_expected:.8f}, expected 1 ({b.origin})"
+    if found.sensitivity is not None:
+        s = found.sensitivity
+        settled = "" if s.settled and s.exact else ", an upper bound: iteration stopped early"
+        yield f"sensitivity         sigma_min {s.smallest[0]:.3e}{settled}"
+        yield f"                    |du| <= |R|/sigma_min = {s.error_bound:.1e} rms, a linear estimate"
+    if math.isfinite(found.correction):
+        yield f"discretisation      error about {found.correction:.1e} of the fluctuation, to first order"
+    if found.march is not None:
+        m = found.march
+        segments = f"{len(m.mismatches)} segments of up to {m.levels} levels (time {m.time:.3g})"
+        yield f"march               {segments}: mismatch {m.largest:.1e},"
+        yield (
+            f"                    errors grow {m.largest_growth:.2f}-fold (rate {m.rate:.2g}); marcher's own "
+            f"error {m.marcher_error:.1e}"
+        )
+    if math.isfinite(found.single_march):
+        yield f"single march        one march over the whole period misses by {found.single_march:.1e}"
+
+
+def _levels(found: Findings) -> Iterator[str]:
+    if found.refinement is None:
+        return
+    yield "refinement          nodes                residual    moved by   Newton steps   seconds"
+    for level in found.refinement.levels:
+        nodes = " x ".join(str(n) for n in level.shape if n > 1)
+        yield (
+            f"                    {nodes:<18}{level.residual_rms:>11.1e}{level.distance:>12.1e}"
+            f"{level.newton_steps:>11}{level.seconds:>14.1f}"
+        )
+
+
+def _bands(found: Findings) -> Iterator[str]:
+    if not found.bands:
+        return
+    how = "refinement" if found.refinement and found.refinement.bands else "the correction to first order"
+    yield f"observables, bands from {how}"
+    yield "                    value on its lattice    band (+-)   extrapolated          band (+-)  order"
+    for b in found.bands.values():
+        order = b.kind if b.order is None else f"{b.order:.2f}" + ("" if b.near_nominal else f" {b.kind}")
+        yield (
+            f"  {b.name:<18}{b.value:<20.12g}{b.half:>13.2e}   {b.best:<20.12g}{b.best_half:>11.2e}  {order}"
+        )
+
+
+def _short(value: float) -> str:
+    return "-" if not math.isfinite(value) else f"{value:.2e}"
