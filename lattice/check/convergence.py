@@ -118,7 +118,7 @@ def observed_order(values: Sequence[float], ratios: Sequence[float]) -> float | 
 
     Examples
     --------
-    >>> observed_order([1.16, 1.04, 1.01], [2.0, 2.0])
+    >>> round(observed_order([1.16, 1.04, 1.01], [2.0, 2.0]), 12)
     2.0
     """
     coarse, medium, fine = values

@@ -100,20 +100,24 @@ def measure_with(
     named: Sequence[Named] = (),
 ) -> dict[str, float]:
     """Return the same with a `Fourier` of the field at hand. Collective."""
-    law = system.law
     found = {name: float(values[name]) for name in described_scalars(system)}
+    found |= mean_observables(fourier)
+    for component, (low, high) in zip(system.law.components, extremes(fourier, owned), strict=True):
+        found |= {f"min_{component}": low, f"max_{component}": high}
+    return found | {entry.name: fourier.mean(entry.expression) for entry in named}
+
+
+def mean_observables(fourier: Fourier) -> dict[str, float]:
+    """Return the observables that are means over the nodes, which a march has, too. Collective."""
+    law = fourier.law
     squares = [fourier.mean(sympy.Symbol(c, real=True) ** 2) for c in law.components]
-    found["mean_square"] = sum(squares)
+    found = {"mean_square": sum(squares)}
     found["energy"] = 0.5 * sum(s for s, on in zip(squares, law.evolving, strict=True) if on)
     if len(law.components) > 1:
         found |= {f"mean_square_{c}": s for c, s in zip(law.components, squares, strict=True)}
     for balance in balances_of(law):
         if balance.name == "energy" or balance.origin == "law file":
             found |= _rates(fourier, balance.name, balance.terms)
-    for component, (low, high) in zip(law.components, extremes(fourier, owned), strict=True):
-        found |= {f"min_{component}": low, f"max_{component}": high}
-    for entry in named:
-        found[entry.name] = fourier.mean(entry.expression)
     return found
 
 

@@ -22,6 +22,7 @@ COMMANDS = {
     "cancel": "stop a submitted run",
     "leg": "run one leg of a submitted run; batch scripts call it",
     "check": "tell with numbers whether a state can be trusted, and certify it or not",
+    "observe": "show observables of a state, or means over many beside a march",
     "info": "tell what a state file holds",
     "plot": "draw a state",
     "excerpt": "cut a window of a state and make it periodic, to solve it",

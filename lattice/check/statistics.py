@@ -1,0 +1,105 @@
+"""Statistics of a field: spectra, correlation lengths and histograms, of a state, of many, or of a march."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from lattice.check.resolution import AxisSpectrum
+
+Array = NDArray[np.float64]
+
+BINS = 61
+LAGS = 400
+
+
+@dataclass(frozen=True)
+class Histogram:
+    """How often values occur.
+
+    Parameters
+    ----------
+    component : str
+    edges : ndarray, shape (bins + 1,)
+    density : ndarray, shape (bins,)
+        Integrates to 1.
+    """
+
+    component: str
+    edges: Array
+    density: Array
+
+
+def correlation(spectrum: AxisSpectrum, lags: Array) -> Array:
+    """Return the two-point correlation of the fluctuations at given distances, 1 at distance 0.
+
+    The sum of `energy * cos(k*r)` over the fluctuating modes (Wiener and Khinchin); 1 for a constant.
+    """
+    energy = np.array(spectrum.energy[1:])
+    total = energy.sum()
+    if not total > 0.0:
+        return np.ones_like(lags)
+    found: Array = np.cos(np.outer(lags, spectrum.wavenumbers[1:])) @ energy / total
+    return found
+
+
+def correlation_length(spectrum: AxisSpectrum) -> float:
+    """Return the integral of the two-point correlation up to its first zero, half a period at most.
+
+    Common practice; for a wave of one wavenumber k it is 1/k.
+
+    Examples
+    --------
+    >>> wave = AxisSpectrum("u", "x", (0.0, 2.0, 4.0), (0.0, 0.5, 0.0), 4.0)
+    >>> round(correlation_length(wave), 4)
+    0.5
+    """
+    if len(spectrum.wavenumbers) < 2:
+        return float("nan")
+    half = np.pi / spectrum.wavenumbers[1]
+    lags = np.linspace(0.0, half, LAGS + 1)
+    values = correlation(spectrum, lags)
+    below = np.flatnonzero(values <= 0.0)
+    if not below.size:
+        return _trapezium(values, lags)
+    last = int(below[0])
+    share = values[last - 1] / (values[last - 1] - values[last])
+    values, lags = values[: last + 1].copy(), lags[: last + 1].copy()
+    lags[-1] = lags[-2] + share * (lags[-1] - lags[-2])
+    values[-1] = 0.0
+    return _trapezium(values, lags)
+
+
+def _trapezium(values: Array, lags: Array) -> float:
+    return float(0.5 * ((values[1:] + values[:-1]) * np.diff(lags)).sum())
+
+
+def histograms(
+    owned: Array, components: tuple[str, ...], add: Callable[[Array], Array], ends: Array
+) -> tuple[Histogram, ...]:
+    """Return the histogram of every component.
+
+    Parameters
+    ----------
+    owned : ndarray, shape (..., components)
+        The values at hand.
+    components : tuple of str
+    add : callable
+        Sums an array over the ranks.
+    ends : ndarray, shape (components, 2)
+        Lowest and highest value, the same on all ranks.
+    """
+    found = []
+    for c, component in enumerate(components):
+        low, high = ends[c]
+        if not high > low:
+            low, high = low - 0.5, high + 0.5
+        edges = np.linspace(low, high, BINS + 1)
+        counts = add(np.histogram(owned[..., c], edges)[0].astype(float))
+        total = counts.sum()
+        density = counts / (total * np.diff(edges)) if total else counts
+        found.append(Histogram(component, edges, density))
+    return tuple(found)
