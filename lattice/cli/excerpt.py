@@ -31,7 +31,7 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
         "--blend", metavar="FRACTION", default="0.3", help="part of the window's time blended; default 0.3"
     )
     parser.add_argument(
-        "--blend-space", metavar="FRACTION", default="0.3", help="the same in x and y; default 0.3"
+        "--blend-space", metavar="FRACTION", default="0.5", help="the same in x and y; default 0.5"
     )
     add_output_arguments(parser)
 

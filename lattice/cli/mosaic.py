@@ -45,8 +45,8 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
     parser.add_argument(
         "--blend",
         metavar="FRACTION",
-        default="0.2",
-        help="width of a seam over the shorter neighbour; default 0.2",
+        default="0.5",
+        help="width of a seam over the shorter neighbour; default 0.5",
     )
     add_output_arguments(parser)
 

@@ -157,7 +157,7 @@ class ExcerptStart(Section):
     x: Ends | None = _key("`[from, to]` in the file's x", None, shown="the whole length")
     y: Ends | None = _key("`[from, to]` in the file's y", None, shown="the whole length")
     blend: float = _key("fraction of the window's time that is blended with what follows it", 0.3, ge=0, lt=1)
-    blend_space: float = _key("the same in x and y", 0.3, ge=0, lt=1)
+    blend_space: float = _key("the same in x and y", 0.5, ge=0, lt=1)
     dataset: Name | None = _key("name of the dataset in an HDF5 file of your own", None, shown="`u`")
     covers_t: Positive | None = _key(
         "for an array: the distance between its levels times their number", None, shown="none"
@@ -198,7 +198,7 @@ class MosaicStart(Section):
     )
     members: dict[str, MemberTable] = _key("the members by name, one table each", min_length=1)
     blend: float = _key(
-        "width of the zone that neighbours share, as a fraction of the shorter one", 0.2, ge=0, lt=1
+        "width of the zone that neighbours share, as a fraction of the shorter one", 0.5, ge=0, lt=1
     )
 
 

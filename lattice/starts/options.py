@@ -170,7 +170,7 @@ class ExcerptOptions:
     x: Sequence[float] | None = None
     y: Sequence[float] | None = None
     blend: float = 0.3
-    blend_space: float = 0.3
+    blend_space: float = 0.5
     covers_t: float | None = None
     covers_x: float | None = None
     covers_y: float | None = None
@@ -223,7 +223,7 @@ class MosaicOptions:
 
     rows: Sequence[str]
     members: Mapping[str, MemberOptions]
-    blend: float = 0.2
+    blend: float = 0.5
 
 
 @dataclass(frozen=True)

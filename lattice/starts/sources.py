@@ -65,7 +65,8 @@ def is_state_file(path: str) -> bool:
         if not (Path(path).is_file() and h5py.is_hdf5(path)):
             return False
         with h5py.File(path, "r") as file:
-            return str(file.attrs.get("schema", "")) == SCHEMA
+            schema = file.attrs.get("schema", "")
+            return (schema.decode() if isinstance(schema, bytes) else str(schema)) == SCHEMA
     except OSError:
         return True
 
