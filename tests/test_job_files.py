@@ -454,7 +454,7 @@ def test_the_reference_lists_every_key_with_a_meaning() -> None:
     cells = [[cell.strip() for cell in row.strip("|").split(" | ")] for row in rows]
     assert all(len(row) == 4 and all(row) for row in cells)
     listed = {row[0].strip("`") for row in cells}
-    tables = {"kind", "coarse", "patches"}
+    tables = {"kind", "coarse", "patches", "subspace", "damped", "refine"}
     assert listed >= {key for _, key in KEYS} - tables
     assert listed >= {*CoarseSection.model_fields, *PatchesSection.model_fields}
 

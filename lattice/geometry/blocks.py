@@ -15,8 +15,10 @@ from numpy.typing import NDArray
 
 from lattice.errors import InputError
 from lattice.geometry.block import Block
+from lattice.geometry.folding import FoldedHalo
 from lattice.geometry.halo import Halo
 from lattice.geometry.lattice import Lattice
+from lattice.geometry.subspace import Subspace
 
 if TYPE_CHECKING:
     from mpi4py import MPI
@@ -84,6 +86,15 @@ class Blocks:
     halo : int
         Width of the halo, the same in every axis.
     comm : MPI.Intracomm
+    subspace : Subspace, optional
+        Of which all fields are: then only the part of the lattice that carries them is distributed.
+
+    Attributes
+    ----------
+    lattice : Lattice
+        The lattice that is distributed: `lattice`, or the part of it that carries a subspace.
+    whole : Lattice
+        The lattice as given.
 
     Raises
     ------
@@ -91,9 +102,18 @@ class Blocks:
         If the ranks cannot share the lattice.
     """
 
-    def __init__(self, lattice: Lattice, components: int, halo: int, comm: MPI.Intracomm) -> None:
+    def __init__(
+        self,
+        lattice: Lattice,
+        components: int,
+        halo: int,
+        comm: MPI.Intracomm,
+        subspace: Subspace | None = None,
+    ) -> None:
         from petsc4py import PETSc
 
+        self.whole = lattice
+        lattice = subspace.part(lattice) if subspace else lattice
         self.lattice, self.components, self.halo, self.comm = lattice, components, halo, comm
         self.axes = [a for a, n in enumerate((lattice.nt, lattice.ny, lattice.nx)) if self._has_axis(a, n)]
         check_halo(lattice, halo)
@@ -121,6 +141,7 @@ class Blocks:
         self.shape = (*self.block.shape, components)
         self._halo = Halo(grid, self.halos, self.block.shape, comm)
         self._own_exchange = self.size > OWN_EXCHANGE * comm.size
+        self.folded = FoldedHalo(self, subspace) if subspace else None
 
     def _has_axis(self, axis: int, nodes: int) -> bool:
         return axis == 2 or nodes > 1 or (axis == 1 and self.lattice.dimensions == 2)
@@ -182,6 +203,15 @@ class Blocks:
         before = (np.cumsum(counts.reshape(-1)) - counts.reshape(-1)).reshape(counts.shape)
         return np.asarray(before[pt, py, px] + (dt * shape[1][py] + dy) * shape[2][px] + dx)
 
+    def columns(self, local: Indices) -> tuple[Indices, Array | None]:
+        """Return the global numbers behind numbers of the padded block, and their signs where not all are 1.
+
+        Not collective.
+        """
+        if self.folded:
+            return self.folded.columns[local], self.folded.signs[local]
+        return np.asarray(self.dm.getLGMap().apply(local)), None
+
     def vector(self) -> Any:
         """Return a new field vector, zero. Collective; the caller destroys it."""
         from petsc4py import PETSc
@@ -201,6 +231,9 @@ class Blocks:
 
     def exchange(self, field: Any, padded: Any) -> None:
         """Fill a padded vector from a field vector, halo included. Collective."""
+        if self.folded:
+            self.folded.fill(field, padded)
+            return
         if not self._own_exchange:
             self.dm.globalToLocal(field, padded)
             return
@@ -218,6 +251,8 @@ class Blocks:
 
     def destroy(self) -> None:
         """Free the DMDA. Collective."""
+        if self.folded:
+            self.folded.destroy()
         self.dm.destroy()
 
 

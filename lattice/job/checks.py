@@ -18,6 +18,7 @@ from lattice.job.starts import (
     WavesStart,
     WindowStart,
 )
+from lattice.job.subspace import judge_subspace
 from lattice.job.unknowns import axes, homogeneous_axes, judge_free, open_means, scalar_names
 
 if TYPE_CHECKING:
@@ -56,7 +57,9 @@ def judge(job: Job, law: Law) -> Findings:
     _judge_box(job, law, findings)
     _judge_lattice(job, law, findings)
     _judge_solve(job, law, findings)
-    judge_free(job, law, findings)
+    judge_subspace(job, law, findings)
+    if not findings.problems:
+        judge_free(job, law, findings)
     _judge_start(job, law, findings)
     return findings
 

@@ -9,7 +9,14 @@ from typing import Annotated, Any, Literal, Union, get_args, get_origin
 from pydantic import BaseModel
 from pydantic.fields import FieldInfo
 
-from lattice.job.schema import CoarseSection, DampedSection, Job, PatchesSection, RefineSection
+from lattice.job.schema import (
+    CoarseSection,
+    DampedSection,
+    Job,
+    PatchesSection,
+    RefineSection,
+    SubspaceSection,
+)
 from lattice.job.starts import START_MODELS, MemberTable, Wave
 from lattice.job.wording import value_text
 
@@ -19,6 +26,7 @@ _BELOW: dict[str, dict[str, type[BaseModel]]] = {
     "solve": {
         "[solve.coarse]": CoarseSection,
         "[solve.patches]": PatchesSection,
+        "[solve.subspace]": SubspaceSection,
         "[solve.damped]": DampedSection,
         "[solve.refine]": RefineSection,
     }
@@ -44,7 +52,7 @@ def _table(title: str, model: type[BaseModel]) -> str:
     rows = [
         _row(name, field)
         for name, field in model.model_fields.items()
-        if name not in ("kind", "coarse", "patches", "damped", "refine")
+        if name not in ("kind", "coarse", "patches", "subspace", "damped", "refine")
     ]
     return "\n".join([f"`{title}`: {_first_line(model)}", "", HEADER, *rows])
 

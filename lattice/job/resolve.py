@@ -20,6 +20,7 @@ from lattice.job.starts import (
     StateStart,
     WavesStart,
 )
+from lattice.job.subspace import lost_in_job
 from lattice.job.unknowns import axes, default_free, open_means
 
 if TYPE_CHECKING:
@@ -148,7 +149,8 @@ def _law_from(job: Job, law: Law, parameters: Mapping[str, float]) -> Any:
 def fill_in(job: Job, law: Law, file: Path) -> Job:
     """Return the job with every remaining default written out."""
     means = dict.fromkeys(open_means(law), 0.0) | job.solve.mean
-    free = job.solve.free if job.solve.free is not None else default_free(law, job.lattice.nt, means)
+    lost = lost_in_job(job, law)
+    free = job.solve.free if job.solve.free is not None else default_free(law, job.lattice.nt, means, lost)
     named = tuple(name for name in free if not name.startswith("source_"))
     return changed(
         job,

@@ -18,6 +18,7 @@ from lattice.job.section import key as _key
 from lattice.job.starts import Start, StateStart
 
 if TYPE_CHECKING:
+    from lattice.geometry.subspace import Subspace
     from lattice.laws.law import Law, Parameter
 
 
@@ -39,6 +40,7 @@ __all__ = [
     "SolveSection",
     "Start",
     "StateStart",
+    "SubspaceSection",
 ]
 
 
@@ -201,6 +203,30 @@ class RefineSection(Section):
     )
 
 
+FieldSigns = Literal["law", "odd", "even"] | tuple[Literal[-1, 1], ...]
+
+
+class SubspaceSection(Section):
+    """Symmetries that the state is to have; the lattice then carries the part that they leave free."""
+
+    mirror_x: FieldSigns | None = _key(
+        "the state is its own mirror image in x, its components times signs: `odd` (all -1), `even` (all 1),"
+        " a list of one sign per component, or `law` where the law leaves no choice",
+        None,
+        shown="none",
+    )
+    mirror_y: FieldSigns | None = _key("the same in y", None, shown="none")
+    half_period: tuple[Literal["shift_x", "shift_y", "mirror_x", "mirror_y"], ...] | None = _key(
+        "the state half a period later is the state shifted by half a length, or mirrored; `[]` changes"
+        " signs only",
+        None,
+        shown="none",
+    )
+    half_period_signs: FieldSigns = _key(
+        "signs that come with it, as for `mirror_x`; `law` is 1 where nothing is mirrored", "law"
+    )
+
+
 class SolveSection(Section):
     """What is free, how the equations are solved, when to stop."""
 
@@ -240,6 +266,7 @@ class SolveSection(Section):
     )
     patches: PatchesSection = _key("the `patches` preconditioner's blocks", PatchesSection())
     coarse: CoarseSection = _key("the `coarse` preconditioner's levels", CoarseSection())
+    subspace: SubspaceSection = _key("the invariant subspace that is solved in", SubspaceSection())
     damped: DampedSection = _key("the `damped` stage", DampedSection())
     refine: RefineSection = _key("the `refine` stage", RefineSection())
 
@@ -281,6 +308,12 @@ class Job(Section):
             order_x=section.order_x,
             order_y=section.order_y or section.order_x,
         )
+
+    def make_subspace(self) -> Subspace | None:
+        """Return the subspace that is solved in, None where there is none."""
+        from lattice.job.subspace import subspace_of
+
+        return subspace_of(self, self.make_law())
 
     def make_values(self) -> dict[str, float]:
         """Return all scalars of the problem: box, drifts, sources (0) and the law's parameters."""

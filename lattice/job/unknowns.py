@@ -13,7 +13,7 @@ from typing import TYPE_CHECKING
 from lattice.job.problems import Findings, did_you_mean, listed
 
 if TYPE_CHECKING:
-    from collections.abc import Mapping
+    from collections.abc import Collection, Mapping
 
     from lattice.job.schema import Job
     from lattice.laws.law import Law
@@ -58,10 +58,18 @@ def is_frame_scalar(name: str) -> bool:
     return name.startswith("drift_") or name == "rotation"
 
 
-def default_free(law: Law, nt: int, means: Mapping[str, float]) -> tuple[str, ...]:
-    """Return what is free where the job does not say, for given means."""
+def default_free(
+    law: Law, nt: int, means: Mapping[str, float], lost: Collection[str] = ()
+) -> tuple[str, ...]:
+    """Return what is free where the job does not say; `lost` are conditions that a subspace takes away."""
     frame = [name for name in frame_scalars(law) if name != "rotation" or not mean_that_turns(law, means)]
+    frame = [name for name in frame if _phase_of(name) not in lost]
     return ("period", *frame) if nt > 1 else tuple(frame)
+
+
+def _phase_of(name: str) -> str:
+    """Return the condition that fixes a scalar of the frame."""
+    return "phase_" + name.removeprefix("drift_")
 
 
 def mean_that_turns(law: Law, means: Mapping[str, float]) -> str:
@@ -200,14 +208,19 @@ def _judge_count(free: tuple[str, ...], job: Job, law: Law, findings: Findings) 
 
 
 def _warn_of_held(free: tuple[str, ...], job: Job, law: Law, findings: Findings) -> None:
+    from lattice.job.subspace import lost_in_job
+
+    lost = lost_in_job(job, law)
     drifts = [f"drift_{axis}" for axis in homogeneous_axes(law) if f"drift_{axis}" not in free]
+    drifts = [name for name in drifts if _phase_of(name) not in lost]
     if drifts:
         findings.warn(
             f"{listed(drifts)} is held although the law is the same all along that axis: right for a wave"
             " followed in the resting frame or a state kept in place by a reflection; otherwise add it to"
             " solve.free"
         )
-    if law.rotating_pair and "rotation" not in free and not mean_that_turns(law, job.solve.mean):
+    held = "phase_rotation" in lost
+    if law.rotating_pair and "rotation" not in free and not held and not mean_that_turns(law, job.solve.mean):
         findings.warn(
             f"rotation is held although ({listed(law.rotating_pair)}) may be turned by any angle: right for a"
             " plane wave that is followed by its drift or period, or a state kept from turning by a"

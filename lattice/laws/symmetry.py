@@ -55,15 +55,35 @@ def symmetries_at(law: Law, values: Mapping[str, float]) -> Symmetries:
 
     Where an equation is infinite for those values (`u/nu` at nu = 0) they are those for general ones.
     """
-    fields = frozenset(symbol(name) for name in law.components)
-    zeros = {symbol(p.name): sympy.Integer(0) for p in law.parameters if values.get(p.name, p.default) == 0.0}
-    equations = [
-        Equation(e.component, e.evolving, rebuild(e.expression, zeros, fields)) for e in law.equations
-    ]
+    equations = _equations_at(law, values)
     if any(e.expression.has(sympy.zoo, sympy.nan) for e in equations):
         return law.symmetries
     names = [p.name for p in law.parameters]
     return find_symmetries(equations, law.components, names, law.dimensions)
+
+
+def row_signs(law: Law, reflection: Reflection, values: Mapping[str, float]) -> tuple[int, ...]:
+    """Return what a reflection of the law multiplies each equation by.
+
+    An evolving equation has the sign of its component; a constraint may have another.
+    """
+    bits = _bits(law.components)
+    switches = reflection.x * _FLIP_X + reflection.y * _FLIP_Y + reflection.time * _FLIP_TIME
+    switches += sum(
+        bits[symbol(c)] for c, sign in zip(law.components, reflection.signs, strict=True) if sign < 0
+    )
+    found = []
+    for equation, sign in zip(_equations_at(law, values), reflection.signs, strict=True):
+        mask = _mask(multiply_out(equation.expression), bits, set())
+        found.append(sign if equation.evolving else -1 if _is_odd(mask & switches) else 1)
+    return tuple(found)
+
+
+def _equations_at(law: Law, values: Mapping[str, float]) -> list[Equation]:
+    """Return the equations with the parameters left out whose value is exactly zero."""
+    fields = frozenset(symbol(name) for name in law.components)
+    zeros = {symbol(p.name): sympy.Integer(0) for p in law.parameters if values.get(p.name, p.default) == 0.0}
+    return [Equation(e.component, e.evolving, rebuild(e.expression, zeros, fields)) for e in law.equations]
 
 
 # -- constants added to a component -------------------------------------------------------------------
@@ -218,10 +238,15 @@ def _is_odd(mask: int) -> bool:
     return mask.bit_count() % 2 == 1
 
 
+def _bits(components: Sequence[str]) -> dict[sympy.Symbol, int]:
+    """Return the switch of every symbol that a reflection may change."""
+    signs = {symbol(name): 1 << (_FIRST_SIGN + place) for place, name in enumerate(components)}
+    return signs | {X: _FLIP_X, Y: _FLIP_Y}
+
+
 def _conditions(equations: Sequence[Equation]) -> set[int]:
     """Return the masks that must be even for a reflection to leave the equations unchanged."""
-    bits = {symbol(e.component): 1 << (_FIRST_SIGN + place) for place, e in enumerate(equations)}
-    bits |= {X: _FLIP_X, Y: _FLIP_Y}
+    bits = _bits([e.component for e in equations])
     conditions: set[int] = set()
     for equation in equations:
         expression = multiply_out(equation.expression)

@@ -40,28 +40,34 @@ class AssembledJacobian:
 
     def __init__(self, operator: FieldOperator) -> None:
         self.operator, self.blocks = operator, operator.blocks
-        check_overlap(operator)
+        if not self.blocks.folded:
+            check_overlap(operator)
         tangent = operator.forms["tangent"]
         self._rows = build_once(operator.comm, lambda: Rows(tangent, operator.scheme))
         self._evolving = [e.evolving and operator.lattice.nt > 1 for e in operator.law.equations]
-        self._indptr, self._columns = self._pattern()
+        self._indptr, self._columns, signs = self._pattern()
         self._values = np.zeros(self._columns.size)
+        # Near a mirror a row names columns twice, with signs.
+        self._sums = None if signs is None else RepeatedColumns(self._indptr, self._columns, signs)
+        if self._sums:
+            self._indptr, self._columns = self._sums.indptr, self._sums.columns
         self.matrix: Any = None
 
     def update(self) -> Any:
         """Fill the matrix for the current point and return it."""
         from petsc4py import PETSc
 
-        values = self.operator.values
-        self._rows.prepare(self.operator.geometry(values), values)
+        scalars = self.operator.values
+        self._rows.prepare(self.operator.geometry(scalars), scalars)
         levels, rows, _ = self.blocks.block.shape
         self._rows(self._values.reshape(levels, rows, -1), self.operator.padded_point())
+        values = self._sums.add(self._values) if self._sums else self._values
         if self.matrix is None:
             size = ((self.blocks.owned_size, self.blocks.size),) * 2
-            csr = (self._indptr, self._columns, self._values)
+            csr = (self._indptr, self._columns, values)
             self.matrix = PETSc.Mat().createAIJ(size, csr=csr, comm=self.blocks.comm)
         else:
-            self.matrix.setValuesCSR(self._indptr, self._columns, self._values)
+            self.matrix.setValuesCSR(self._indptr, self._columns, values)
         self.matrix.assemble()
         self._pin_gauge()
         return self.matrix
@@ -78,10 +84,10 @@ class AssembledJacobian:
 
     def _pin_gauge(self) -> None:
         law = self.operator.law
-        if not law.symmetries.gauge:
+        if not self.operator.gauge:
             return
         diagonal = self.blocks.vector()
-        for component in law.symmetries.gauge:
+        for component in self.operator.gauge:
             self.blocks.owned(diagonal)[..., law.components.index(component)] = -GAUGE_PIN
         from petsc4py import PETSc
 
@@ -89,8 +95,8 @@ class AssembledJacobian:
         self.matrix.assemble()
         diagonal.destroy()
 
-    def _pattern(self) -> tuple[NDArray[np.int32], NDArray[np.int32]]:
-        """Return the row pointers and global columns of this rank's rows."""
+    def _pattern(self) -> tuple[NDArray[np.int32], NDArray[np.int32], NDArray[np.float64] | None]:
+        """Return the row pointers and global columns of this rank's rows, and signs where not all are 1."""
         from petsc4py import PETSc
 
         offsets, sizes = self._offsets()
@@ -106,10 +112,10 @@ class AssembledJacobian:
                 " indices can count; use more ranks or another preconditioner",
                 key="solve.preconditioner",
             )
-        table = self.blocks.dm.getLGMap().apply(local)
+        table, signs = self.blocks.columns(local)
         lengths = np.tile(sizes, levels * rows * columns)
         indptr = np.concatenate([[0], np.cumsum(lengths)]).astype(PETSc.IntType)
-        return indptr, np.asarray(table, dtype=PETSc.IntType)
+        return indptr, np.asarray(table, dtype=PETSc.IntType), signs
 
     def _offsets(self) -> tuple[NDArray[np.int64], list[int]]:
         """Return the flat padded offsets of one node's columns, and how many each equation has."""
@@ -128,6 +134,38 @@ class AssembledJacobian:
         """Free the matrix. Collective."""
         if self.matrix is not None:
             self.matrix.destroy()
+
+
+class RepeatedColumns:
+    """Sums the entries of a sparse matrix that stand in one place, with a sign each.
+
+    Parameters
+    ----------
+    indptr, columns : ndarray
+        Row pointers and columns of the entries as they come.
+    signs : ndarray
+        Of the entries.
+
+    Attributes
+    ----------
+    indptr, columns : ndarray
+        Of the sums.
+    """
+
+    def __init__(
+        self, indptr: NDArray[np.int32], columns: NDArray[np.int32], signs: NDArray[np.float64]
+    ) -> None:
+        count = int(columns.max(initial=0)) + 1
+        rows = np.repeat(np.arange(indptr.size - 1, dtype=np.int64), np.diff(indptr))
+        places, self._place = np.unique(rows * count + columns, return_inverse=True)
+        self._signs = signs
+        self.columns = (places % count).astype(columns.dtype)
+        self.indptr = np.searchsorted(places // count, np.arange(indptr.size)).astype(indptr.dtype)
+
+    def add(self, values: NDArray[np.float64]) -> NDArray[np.float64]:
+        """Return the sums."""
+        sums = np.bincount(self._place, weights=values * self._signs, minlength=self.columns.size)
+        return np.asarray(sums, dtype=np.float64)
 
 
 def check_overlap(operator: FieldOperator) -> None:
@@ -154,7 +192,7 @@ def check_overlap(operator: FieldOperator) -> None:
 
 def rescale_gauge(operator: FieldOperator, solution: Any) -> None:
     """Correct the level means of gauge components in a solution of the pinned matrix. Collective."""
-    for component in operator.law.symmetries.gauge:
+    for component in operator.gauge:
         index = operator.law.components.index(component)
         means = operator.level_means(solution, index)
         operator.blocks.owned(solution)[..., index] -= (1.0 - GAUGE_PIN) * means[:, None, None]

@@ -15,6 +15,7 @@ from numpy.typing import NDArray
 
 from lattice.geometry.blocks import Blocks
 from lattice.geometry.lattice import Lattice
+from lattice.geometry.subspace import Subspace
 from lattice.kernels import forms
 from lattice.kernels.build import Geometry, Kernel
 from lattice.kernels.scheme import make_scheme
@@ -43,6 +44,12 @@ def build_once(comm: MPI.Intracomm, make: Callable[[], T]) -> T:
     return result
 
 
+def _odd_in_space(law: Law, component: str, subspace: Subspace | None) -> bool:
+    place = law.components.index(component)
+    mirrors = (subspace.mirror_x, subspace.mirror_y) if subspace else ()
+    return any(signs is not None and signs[place] < 0 for signs in mirrors)
+
+
 class FieldOperator:
     """Residual, tangent and adjoint of a law on a lattice shared by the ranks of a communicator.
 
@@ -53,10 +60,21 @@ class FieldOperator:
     law : Law
     lattice : Lattice
     comm : MPI.Intracomm
+    subspace : Subspace, optional
+        Of which all fields are; vectors hold the part of the lattice that carries them.
+
+    Attributes
+    ----------
+    lattice, whole : Lattice
+        The lattice of the vectors, and the one it is a part of: the same without a subspace.
+    gauge : tuple of str
+        Gauge components; those that a mirror makes odd in space have no constant that is free.
     """
 
-    def __init__(self, law: Law, lattice: Lattice, comm: MPI.Intracomm) -> None:
-        self.law, self.lattice, self.comm = law, lattice, comm
+    def __init__(
+        self, law: Law, lattice: Lattice, comm: MPI.Intracomm, subspace: Subspace | None = None
+    ) -> None:
+        self.law, self.whole, self.comm = law, lattice, comm
         self.forms = {
             "residual": forms.residual_form(law),
             "tangent": forms.tangent_form(law),
@@ -65,12 +83,14 @@ class FieldOperator:
         }
         reaching = [self.forms[name] for name in ("residual", "tangent", "adjoint")]
         self.scheme = make_scheme(lattice, reaching)
-        self.blocks = Blocks(lattice, len(law.components), self.scheme.halo_x, comm)
+        self.blocks = Blocks(lattice, len(law.components), self.scheme.halo_x, comm, subspace)
+        self.lattice = self.blocks.lattice
+        self.gauge = tuple(c for c in law.symmetries.gauge if not _odd_in_space(law, c, subspace))
         self._kernels: dict[str, Kernel] = {}
         self._point = self.blocks.padded_vector()
         self._other = self.blocks.padded_vector()
-        self._levels = comm.Split(self.blocks.block.t0, comm.rank) if law.symmetries.gauge else None
-        self._gauge = [law.components.index(c) for c in law.symmetries.gauge]
+        self._levels = comm.Split(self.blocks.block.t0, comm.rank) if self.gauge else None
+        self._gauge = [law.components.index(c) for c in self.gauge]
         self.values: dict[str, float] = {}
 
     def kernel(self, name: str) -> Kernel:
@@ -94,15 +114,10 @@ class FieldOperator:
 
     def geometry(self, values: Mapping[str, float]) -> Geometry:
         """Return spacings and coordinates of this rank's padded block for given period and lengths."""
-        lattice, blocks = self.lattice, self.blocks
-        length_y = values.get("length_y", 1.0)
-        return Geometry(
-            values["period"] / lattice.nt,
-            length_y / lattice.ny,
-            values["length_x"] / lattice.nx,
-            blocks.coordinates(length_y, 1),
-            blocks.coordinates(values["length_x"], 2),
-        )
+        whole, part, blocks = self.whole, self.lattice, self.blocks
+        dt = values["period"] / whole.nt
+        dy, dx = values.get("length_y", 1.0) / whole.ny, values["length_x"] / whole.nx
+        return Geometry(dt, dy, dx, blocks.coordinates(dy * part.ny, 1), blocks.coordinates(dx * part.nx, 2))
 
     def residual(self, u: Any, values: Mapping[str, float], out: Any) -> None:
         """Set `out` to the residual of the field vector `u`."""

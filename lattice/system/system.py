@@ -15,9 +15,13 @@ import numpy as np
 from numpy.typing import NDArray
 
 from lattice.errors import LatticeError
+from lattice.geometry.blocks import Blocks
+from lattice.geometry.folding import Unfolding
 from lattice.geometry.lattice import Lattice
+from lattice.geometry.subspace import Subspace
 from lattice.kernels.forms import frame_names
 from lattice.laws.law import Law
+from lattice.system.invariant import check_means, check_subspace, held_scalars, lost_conditions
 from lattice.system.operator import FieldOperator
 from lattice.system.phases import check_independence, flat_start
 from lattice.system.unknowns import FRAME, LOOSE, Values, loose_unknowns, pair_unknowns
@@ -49,9 +53,15 @@ class System:
     loose : sequence of str
         Names of further scalars to be free, fixed by no condition, for least squares: the residual has a
         zero in their place, and the Jacobian a row of zeros.
+    subspace : Subspace, optional
+        Of which all fields are: then vectors hold the part of the lattice that carries it.
 
     Attributes
     ----------
+    lattice, whole_lattice : Lattice
+        The lattice of the vectors, and the one given: the same without a subspace.
+    whole_blocks : Blocks
+        How `whole_field` is distributed.
     loose_weight : float
         What stands for that zero on the diagonal of the Jacobian where an inverse of it is made.
     """
@@ -65,16 +75,23 @@ class System:
         means: Mapping[str, float],
         comm: MPI.Intracomm,
         loose: Sequence[str] = (),
+        subspace: Subspace | None = None,
     ) -> None:
-        self.law, self.lattice, self.comm = law, lattice, comm
+        self.law, self.comm, self.subspace = law, comm, subspace
         self.values: Values = dict(values)
         for name in frame_names(law):
             self.values.setdefault(name, 0.0)
-        self.unknowns = pair_unknowns(law, lattice, free, self.values)
+        if subspace:
+            check_subspace(law, subspace, self.values)
+        lost = lost_conditions(law, subspace)
+        check_means(means, lost)
+        self._held = held_scalars(law, lost)
+        self.unknowns = pair_unknowns(law, lattice, free, self.values, lost)
         self.unknowns += loose_unknowns(loose, self.unknowns, self.values)
         self.means = dict(means)
         self.loose_weight = 1.0
-        self.operator = FieldOperator(law, lattice, comm)
+        self.operator = FieldOperator(law, lattice, comm, subspace)
+        self.lattice, self.whole_lattice = self.operator.lattice, lattice
         self.blocks = self.operator.blocks
         self.root_size = float(np.sqrt(self.blocks.size))
         self.last = comm.rank == comm.size - 1
@@ -82,6 +99,8 @@ class System:
         self._field_in, self._field_out = self.blocks.vector(), self.blocks.vector()
         self._templates: dict[str, Any] = {}
         self._offsets: dict[str, float] = {}
+        self.whole_blocks = Blocks(lattice, self.blocks.components, 0, comm) if subspace else self.blocks
+        self._unfolding = Unfolding(self.blocks, self.whole_blocks, subspace) if subspace else None
 
     def vector(self) -> Any:
         """Return a new vector of unknowns; the caller destroys it."""
@@ -102,13 +121,25 @@ class System:
         array = x.getArray(readonly=1)
         return np.array(array[: self.blocks.owned_size]).reshape(self.blocks.shape)
 
+    def whole_field(self, x: Any) -> Array:
+        """Return a copy of this rank's part of the whole field, as `whole_blocks` cut it. Collective."""
+        owned = self.field_of(x)
+        return self._unfolding.unfold(owned) if self._unfolding else owned
+
+    def project(self, owned: Array) -> Array:
+        """Return this rank's part of the unknown field from that of a whole one. Collective.
+
+        The nearest one in the subspace, where there is one.
+        """
+        return self._unfolding.project(owned) if self._unfolding else owned
+
     def values_of(self, x: Any) -> Values:
         """Return every scalar by name, on every rank."""
         numbers = self.border_of(x)
         found = {
             u.name: float(z * u.unit / self.root_size) for u, z in zip(self.unknowns, numbers, strict=True)
         }
-        return {**self.values, **found}
+        return {**self.values, **found, **self._held}
 
     def border_of(self, x: Any) -> Array:
         """Return the border part of a vector of unknowns, on every rank."""
@@ -264,4 +295,7 @@ class System:
         """Free every vector and the operator. Collective."""
         for vector in (*self.columns, *self._templates.values(), self._field_in, self._field_out):
             vector.destroy()
+        if self._unfolding:
+            self._unfolding.destroy()
+            self.whole_blocks.destroy()
         self.operator.destroy()

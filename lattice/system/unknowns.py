@@ -8,7 +8,7 @@ that the law leaves open is given and leaves room for a source.
 from __future__ import annotations
 
 import math
-from collections.abc import Mapping, Sequence
+from collections.abc import Collection, Mapping, Sequence
 from dataclasses import dataclass
 
 from lattice.errors import InputError
@@ -45,20 +45,39 @@ class Unknown:
 
 
 def pair_unknowns(
-    law: Law, lattice: Lattice, free: Sequence[str], values: Mapping[str, float]
+    law: Law,
+    lattice: Lattice,
+    free: Sequence[str],
+    values: Mapping[str, float],
+    lost: Collection[str] = (),
 ) -> tuple[Unknown, ...]:
     """Pair every free scalar, and the source of every open mean, with a condition.
+
+    Parameters
+    ----------
+    law : Law
+    lattice : Lattice
+    free : sequence of str
+    values : mapping of str to float
+    lost : collection of str
+        Conditions that the fields of a subspace do not leave.
 
     Raises
     ------
     InputError
-        If more scalars are free than conditions can fix.
+        If more scalars are free than conditions can fix, or one that a subspace holds.
     """
     phases = ["phase_t"] if lattice.nt > 1 else []
     phases += [f"phase_{axis}" for axis in "xy"[: law.dimensions] if law.symmetries.homogeneous[axis]]
     phases += ["phase_rotation"] if law.rotating_pair else []
     own = {"period": "phase_t", **{name: phase for phase, name in FRAME.items()}}
+    phases = [phase for phase in phases if phase not in lost]
     asked = [name for name in free if not name.startswith("source_")]
+    held = [name for name in asked if own.get(name) in lost]
+    if held:
+        raise InputError(
+            f"must not name {held[0]}: solve.subspace holds it at 0; remove it", key="solve.free"
+        )
     paired = {name: own[name] for name in asked if own.get(name) in phases}
     left = [phase for phase in phases if phase not in paired.values()]
     for name in asked:
@@ -71,7 +90,7 @@ def pair_unknowns(
                 )
             paired[name] = left.pop(0)
     pairs = [Unknown(name, paired[name], _unit(name, values)) for name in asked]
-    pairs += [Unknown(f"source_{c}", f"mean_{c}", 1.0) for c in sourced(law)]
+    pairs += [Unknown(f"source_{c}", f"mean_{c}", 1.0) for c in sourced(law) if f"mean_{c}" not in lost]
     return tuple(pairs)
 
 
