@@ -5,6 +5,8 @@ from __future__ import annotations
 from importlib import import_module
 from typing import TYPE_CHECKING, Any, Protocol
 
+from lattice.errors import InputError
+
 if TYPE_CHECKING:
     from collections.abc import Callable
 
@@ -84,6 +86,11 @@ def make_preconditioner(
 
     if name == "auto":
         name = choose_preconditioner(system, report or _silent)
+    if system.subspace is not None and name != "direct":
+        raise InputError(
+            f"must be 'direct' (or 'auto') in a solve.subspace, got '{name}': it knows the whole lattice only",
+            key="solve.preconditioner",
+        )
     if name in _FIELD_INVERSES:
         return Bordering(system, _load(_FIELD_INVERSES[name])(system, options))
     made: Preconditioner = _load(_BORDERED[name])(system, options, report or _silent)
@@ -94,6 +101,9 @@ def choose_preconditioner(system: System, report: Callable[[str], None]) -> str:
     """Return "direct" for a box that one LU serves, "coarse" otherwise, and report why."""
     size, most = system.blocks.size, DIRECT_UNKNOWNS[system.law.dimensions]
     steady = system.lattice.nt == 1
+    if system.subspace is not None:
+        report(f"preconditioner direct: {size} unknowns of a subspace")
+        return "direct"
     if size <= most or steady:
         report(f"preconditioner direct: {size} unknowns{', one level' if steady else f', at most {most}'}")
         return "direct"
