@@ -2,6 +2,9 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
+from typing import TYPE_CHECKING
+
 import numpy as np
 
 from lattice.classify.alignment import Aligner
@@ -10,6 +13,9 @@ from lattice.classify.spectra import Complex, Real, Spectra
 from lattice.geometry.blocks import Blocks
 from lattice.geometry.subspace import Subspace
 from lattice.laws.law import Law, Reflection
+
+if TYPE_CHECKING:
+    from lattice.system.system import System
 
 
 def centred(law: Law, subspace: Subspace, owned: Real, blocks: Blocks) -> tuple[Real, float]:
@@ -71,3 +77,18 @@ def _symmetries(subspace: Subspace) -> list[tuple[Reflection, dict[str, float]]]
 
 def _shifted(spectra: Spectra, coefficients: Complex, shift: dict[str, float]) -> Real:
     return spectra.backward(Aligner(spectra, (), None).moved(coefficients, tuple(shift.values()), 0.0))
+
+
+def into_subspace(system: System, owned: Real, report: Callable[[str], None]) -> Real:
+    """Return this rank's part of the unknown field for a whole start: the start itself without a subspace.
+
+    Collective. In a subspace the start is shifted to the mirrors and made symmetric.
+    """
+    if system.subspace is None:
+        return owned
+    moved, distance = centred(system.law, system.subspace, owned, system.whole_blocks)
+    report(
+        f"subspace: {system.blocks.size} of {system.whole_blocks.size} numbers carry the field; the start is "
+        f"symmetric to {distance:.1e} of its size"
+    )
+    return system.project(moved)
