@@ -112,9 +112,10 @@ def _excess(ratio: float, order: float) -> float:
 
 
 def observed_order(values: Sequence[float], ratios: Sequence[float]) -> float | None:
-    """Return the order shown by three lattices, coarsest first, by fixed-point iteration [2]_.
+    """Return the order p shown by three lattices, coarsest first, spacings in any ratios [2]_.
 
-    None where the differences show none: zero, or growing.
+    It solves `(coarse - medium)/(medium - fine) = r^p (R^p - 1)/(r^p - 1)`, R the coarser ratio and r the
+    finer, by bisection; None where the differences show none: zero, of unlike signs, or not falling.
 
     Examples
     --------
@@ -122,39 +123,42 @@ def observed_order(values: Sequence[float], ratios: Sequence[float]) -> float | 
     2.0
     """
     coarse, medium, fine = values
-    to_coarse, to_fine = coarse - medium, medium - fine
-    if to_coarse == 0.0 or to_fine == 0.0:
+    if medium == fine:
         return None
-    quotient = to_coarse / to_fine
-    sign, ratio_coarse, ratio_fine = math.copysign(1.0, quotient), ratios[0], ratios[1]
-    order = abs(math.log(abs(quotient))) / math.log(ratio_fine)
-    for _ in range(200):
-        if not 0.0 < order <= LARGEST_ORDER:
-            return None
-        shift = math.log((ratio_fine**order - sign) / (ratio_coarse**order - sign))
-        updated = abs(math.log(abs(quotient)) + shift) / math.log(ratio_fine)
-        if abs(updated - order) <= 1e-10:
-            return updated
-        order = updated
-    return order
+    quotient = (coarse - medium) / (medium - fine)
+    low, high = 0.0, LARGEST_ORDER
+    if not _fall(0.0, ratios) < quotient <= _fall(high, ratios):
+        return None
+    for _ in range(60):
+        middle = 0.5 * (low + high)
+        low, high = (middle, high) if _fall(middle, ratios) < quotient else (low, middle)
+    return 0.5 * (low + high)
 
 
-def convergence_kind(values: Sequence[float], noise: float) -> str:
+def _fall(order: float, ratios: Sequence[float]) -> float:
+    """Return by what the differences fall from lattice to lattice for an order; its limit for order 0."""
+    coarser, finer = ratios
+    if order == 0.0:
+        return math.log(coarser) / math.log(finer)
+    return float(finer**order) * _excess(coarser, order) / _excess(finer, order)
+
+
+def convergence_kind(values: Sequence[float], ratios: Sequence[float], noise: float) -> str:
     """Return how three values, coarsest first, approach a limit.
 
     Examples
     --------
-    >>> convergence_kind([1.16, 1.04, 1.01], 0.0), convergence_kind([1.1, 0.9, 1.0], 0.0)
-    ('monotone', 'oscillating')
+    >>> [convergence_kind(v, [2.0, 2.0], 0.0) for v in ([1.16, 1.04, 1.01], [1.1, 0.9, 1.0])]
+    ['monotone', 'oscillating']
     """
     coarse, medium, fine = values
     to_coarse, to_fine = coarse - medium, medium - fine
     if max(abs(to_coarse), abs(to_fine)) <= noise:
         return "exact"
-    quotient = to_fine / to_coarse if to_coarse else math.inf
-    if abs(quotient) >= 1.0:
+    fall = abs(to_coarse / to_fine) if to_fine else math.inf
+    if fall <= _fall(0.0, ratios):
         return "diverging"
-    return "monotone" if quotient > 0.0 else "oscillating"
+    return "monotone" if to_coarse * to_fine >= 0.0 else "oscillating"
 
 
 def band_of(series: Series) -> Band:
@@ -166,7 +170,7 @@ def band_of(series: Series) -> Band:
     if len(series.values) < 3:
         return _band_of_two(series)
     last, ratios = series.values[-3:], series.ratios[-2:]
-    kind = convergence_kind(last, series.noise)
+    kind = convergence_kind(last, ratios, series.noise)
     if kind == "exact":
         return _band(series, kind, series.nominal, SAFETY_ASSUMED, None)
     order = observed_order(last, ratios) if kind == "monotone" else None

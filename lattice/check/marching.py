@@ -168,7 +168,7 @@ def march_check(subject: Subject) -> MarchCheck:
     found: list[tuple[int, float, float, float]] = []
     error: Exception | None = None
     try:
-        found = _march_own(subject, scale, own, dt)
+        found = _march_own(subject, scale, own, dt, rate)
     except (LatticeError, OSError) as caught:
         error = caught
     raise_together(subject.comm, error)
@@ -230,7 +230,7 @@ def _segments(subject: Subject, rate: float) -> list[tuple[int, int]]:
 
 
 def _march_own(
-    subject: Subject, scale: Real, segments: list[tuple[int, int]], dt: float
+    subject: Subject, scale: Real, segments: list[tuple[int, int]], dt: float, rate: float
 ) -> list[tuple[int, float, float, float]]:
     """Return first level, mismatch, growth and the marcher's error of this rank's segments."""
     marcher = _Marcher(subject, scale)
@@ -239,17 +239,17 @@ def _march_own(
     batch = max(1, BATCH_VALUES // size)
     found = []
     for length in sorted({stop - start for start, stop in segments}):
+        time = length * marcher.spacing if subject.lattice.nt > 1 else steady_time(rate)
         alike = [start for start, stop in segments if stop - start == length]
         for first in range(0, len(alike), batch):
-            found += _march_batch(subject, marcher, alike[first : first + batch], length)
+            found += _march_batch(subject, marcher, alike[first : first + batch], length, time)
     return found
 
 
 def _march_batch(
-    subject: Subject, marcher: _Marcher, starts: list[int], length: int
+    subject: Subject, marcher: _Marcher, starts: list[int], length: int, time: float
 ) -> list[tuple[int, float, float, float]]:
     nt, stepper = subject.lattice.nt, marcher.stepper
-    time = length * marcher.spacing if nt > 1 else steady_time(0.0)
     slices = np.concatenate([_read(subject, start, start + 1) for start in starts])
     targets = np.concatenate([_read(subject, (s + length) % nt, (s + length) % nt + 1) for s in starts])
     spectra = stepper.to_spectrum(slices)

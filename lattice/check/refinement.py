@@ -18,6 +18,8 @@ from lattice.check.convergence import Band, Series, band_of
 from lattice.check.observables import Named, measure
 from lattice.errors import LatticeError
 from lattice.geometry.lattice import Lattice
+from lattice.laws.calculus import order_of
+from lattice.laws.law import Law
 from lattice.solve.newton import Newton, Step
 from lattice.solve.refine import carry, refined_lattice
 from lattice.solve.registry import make_preconditioner
@@ -32,6 +34,9 @@ Report = Callable[[str], None]
 
 ROUNDING = 1e-12
 """Relative size of differences between lattices that are rounding errors."""
+WANTED, ACCEPTED = 1e-11, 1e-9
+"""Residual that is wanted on refined lattices, and that is enough where a solve goes no further, in units of
+the equations' largest term where that is above 1."""
 
 
 @dataclass(frozen=True)
@@ -105,6 +110,7 @@ def refine(
     options: Any,
     report: Report,
     stop: StopFlag,
+    term: float,
 ) -> Refinement:
     """Solve a state again on refined lattices.
 
@@ -129,12 +135,14 @@ def refine(
         Takes lines for the user.
     stop : StopFlag
         Looked at between steps.
+    term : float
+        Root mean square of the equations' largest term.
     """
     levels: list[Level] = []
     system, owned, values = subject.system, subject.owned, dict(subject.values)
     for number in range(count):
         lattice = refined_lattice(subject.lattice, factor ** (number + 1))
-        level, solved = _solve(subject, system, owned, values, lattice, named, options, report, stop)
+        level, solved = _solve(subject, system, owned, values, lattice, named, options, report, stop, term)
         if number:
             system.destroy()
         levels.append(level)
@@ -159,6 +167,7 @@ def _solve(
     options: Any,
     report: Report,
     stop: StopFlag,
+    term: float,
 ) -> tuple[Level, tuple[System, Array, dict[str, float]]]:
     began = time.perf_counter()
     free = tuple(u.name for u in subject.system.unknowns if not u.name.startswith("source_"))
@@ -167,7 +176,9 @@ def _solve(
     x = system.vector()
     system.pack(start, values, x)
     report(f"refinement: {_nodes(lattice)} nodes, {system.blocks.size} field unknowns")
-    lines = Steps(report)
+    lines, unit = Steps(report), max(1.0, term)
+    floor = rounding_floor(subject.law, lattice, values, math.sqrt(_square(system, start)))
+    options = options.model_copy(update={"residual_rms": max(WANTED * unit, floor)})
     try:
         system.set_reference(x)
         newton = Newton(
@@ -177,6 +188,8 @@ def _solve(
         newton.destroy()
         converged, reason, steps = result.converged, result.reason, len(result.steps) - 1
         residual = result.steps[-1].residual_rms if result.steps else math.nan
+        # Where rounding stops Newton's method just short of what is wanted, the state is solved all the same.
+        converged = converged or (residual <= ACCEPTED * unit and not result.interrupted)
     except LatticeError as error:
         converged, reason, steps, residual = False, str(error), 0, math.nan
     solved, found = system.field_of(x), dict(system.values_of(x))
@@ -205,6 +218,22 @@ class Steps:
     def after(self, step: Step, x: Any) -> None:
         """Report one step."""
         self.report(f"  step {step.number}: residual_rms {step.residual_rms:.3e}")
+
+
+def rounding_floor(law: Law, lattice: Lattice, values: Mapping[str, float], size: float) -> float:
+    """Return the residual that rounding alone leaves: of the highest derivatives of a field of a size.
+
+    A difference of order d sums numbers of size `(2/h)^d` to a result of order 1.
+    """
+    orders = [order_of(equation.expression) for equation in law.equations]
+    steps = (values["length_x"] / lattice.nx, values.get("length_y", 1.0) / lattice.ny)
+    amplified = max((2.0 / steps[0]) ** a * (2.0 / steps[1]) ** b for a, b, _ in orders)
+    highest = max((2.0 / min(steps[: law.dimensions])) ** total for _, _, total in orders)
+    return float(np.finfo(float).eps * size * min(amplified, highest))
+
+
+def _square(system: System, owned: Array) -> float:
+    return float(system.comm.allreduce(float((owned**2).sum()))) / system.lattice.nodes
 
 
 def _nodes(lattice: Lattice) -> str:

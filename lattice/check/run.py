@@ -47,9 +47,6 @@ if TYPE_CHECKING:
 Report = Callable[[str], None]
 T = TypeVar("T")
 
-REFINED_RESIDUAL = 1e-11
-"""Residual, in units of the equations' largest term where that is above 1, wanted on refined lattices."""
-
 
 @dataclass(frozen=True)
 class CheckOptions:
@@ -193,10 +190,8 @@ class _Check:
     def _fourier(self, subject: Subject) -> Fourier:
         return Fourier(subject.law, subject.system.blocks, subject.owned, subject.values)
 
-    def _solve_options(self, residuals: Residuals | None = None) -> SolveSection:
-        size = max((e.term_rms for e in residuals.equations), default=1.0) if residuals else 1.0
-        wanted = REFINED_RESIDUAL * max(1.0, size)
-        return SolveSection(preconditioner=self.options.preconditioner, residual_rms=wanted, newton_steps=15)
+    def _solve_options(self) -> SolveSection:
+        return SolveSection(preconditioner=self.options.preconditioner, newton_steps=15)
 
     def _linear(self, residuals: Residuals, exact: Any) -> tuple[Sensitivity | None, Correction | None, str]:
         """Return the sensitivity and the correction to first order, or why there are none."""
@@ -264,9 +259,10 @@ class _Check:
             named,
             self.options.factor,
             self.options.refinements,
-            self._solve_options(found.residuals),
+            self._solve_options(),
             self.report,
             self.stop,
+            max(e.term_rms for e in found.residuals.equations),
         )
 
 

@@ -99,6 +99,8 @@ def _others(found: Findings) -> Iterator[str]:
     if found.march is not None:
         m = found.march
         segments = f"{len(m.mismatches)} segments of up to {m.levels} levels (time {m.time:.3g})"
+        if found.levels == 1:
+            segments = f"over a time of {m.time:.3g}"
         yield f"march               {segments}: mismatch {m.largest:.1e},"
         yield (
             f"                    errors grow {m.largest_growth:.2f}-fold (rate {m.rate:.2g}); marcher's own "
