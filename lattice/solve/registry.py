@@ -88,7 +88,8 @@ def make_preconditioner(
         name = choose_preconditioner(system, report or _silent)
     if system.subspace is not None and name != "direct":
         raise InputError(
-            f"must be 'direct' (or 'auto') in a solve.subspace, got '{name}': it knows the whole lattice only",
+            f"must be 'direct' (or 'auto') in a solve.subspace, got '{name}':"
+            " it knows the whole lattice only",
             key="solve.preconditioner",
         )
     if name in _FIELD_INVERSES:
