@@ -14,6 +14,7 @@ from numpy.typing import NDArray
 
 from lattice.errors import InputError
 from lattice.geometry.blocks import Blocks
+from lattice.geometry.timing import event
 
 if TYPE_CHECKING:
     from mpi4py import MPI
@@ -71,14 +72,16 @@ class Transform:
 
         Collective. The array is reused by the next call.
         """
-        self._mover.to_pencil(field, self._real)
-        self._plan.forward(self._real, self._spectrum)
+        with event("FFT"):
+            self._mover.to_pencil(field, self._real)
+            self._plan.forward(self._real, self._spectrum)
         return self._spectrum
 
     def backward(self, spectrum: Complex, field: Any) -> None:
         """Set a field vector from its spectrum; the spectrum is not changed. Collective."""
-        self._plan.backward(spectrum, self._real)
-        self._mover.to_blocks(self._real, field)
+        with event("FFT"):
+            self._plan.backward(spectrum, self._real)
+            self._mover.to_blocks(self._real, field)
 
     def empty_spectrum(self) -> Complex:
         """Return an uninitialised array for this rank's part of a spectrum."""

@@ -1,14 +1,7 @@
-"""Named PETSc log events, so that `-log_view` shows where the time goes."""
+"""The phases of `lattice.geometry.timing`, where this layer and those above look for them."""
 
 from __future__ import annotations
 
-from functools import cache
-from typing import Any
+from lattice.geometry.timing import event
 
-
-@cache
-def event(name: str) -> Any:
-    """Return a PETSc log event to be used as a context manager."""
-    from petsc4py import PETSc
-
-    return PETSc.Log.Event(f"Lattice {name}")
+__all__ = ["event"]
