@@ -62,7 +62,8 @@ def run(options: argparse.Namespace) -> int:
     job = load_job(options.job, options.overrides)
     if job.start.kind != "recurrence":
         raise InputError(
-            f"must be 'recurrence', got '{job.start.kind}'; such as --set start='{{ kind = \"recurrence\" }}'",
+            f"must be 'recurrence', got '{job.start.kind}'; "
+            "such as --set start='{ kind = \"recurrence\" }'",
             file=options.job,
             key="start.kind",
         )

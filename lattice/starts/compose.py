@@ -162,8 +162,8 @@ def plan_excerpt(options: ExcerptOptions, nodes: Nodes) -> Composition:
     found = {}
     for axis, name in zip("tyx", ("nt", "ny", "nx"), strict=True):
         cut = cuts[axis]
-        kept = source.nodes["tyx".index(axis)] * cut.length / cut.covered
-        found[name] = _count(name, kept, nodes, timeless=cut.nodes == 1)
+        kept = cut.nodes * cut.length / cut.covered
+        found[name] = _count(name, kept, nodes, fewest=min(cut.nodes, FEWEST))
     values = {**law.defaults, **excerpt_values(options, source, law)}
     if source.nodes[0] == 1:
         values["period"] = 1.0
@@ -180,7 +180,8 @@ def plan_composed_mosaic(options: MosaicOptions, nodes: Nodes) -> Composition:
     layout = plan_mosaic(options, law, 2 if timed else 1)
     found = {}
     for place, name in enumerate(("nt", "ny", "nx")):
-        found[name] = _count(name, _finest(layout, place), nodes, timeless=place == 0 and not timed)
+        fewest = 1 if place == 0 and not timed else FEWEST
+        found[name] = _count(name, _finest(layout, place), nodes, fewest)
     if law.dimensions == 1:
         found["ny"] = 1
     return Composition("mosaic", options, law, _lattice(lattice, found), {**law.defaults, **layout.values})
@@ -255,14 +256,15 @@ def _density(layout: Layout, number: int, axis: int) -> float:
     return source.nodes[axis] / (source.covers[axis] * layout.stretch(cell)[axis])
 
 
-def _count(name: str, kept: float, nodes: Nodes, timeless: bool) -> int:
+def _count(name: str, kept: float, nodes: Nodes, fewest: int) -> int:
+    """Return the number of nodes of an axis: the one given, else about those that keep the spacing."""
     if nodes.get(name) is not None:
         return int(nodes[name])
-    if timeless:
+    if fewest == 1:
         return 1
     whole = round(kept)
     even = whole if math.isclose(kept, whole, rel_tol=1e-9) else 2 * round(0.5 * kept)
-    return max(FEWEST, even)
+    return max(fewest, even)
 
 
 def _lattice(like: Lattice, nodes: Mapping[str, int]) -> Lattice:

@@ -25,7 +25,7 @@ from lattice.starts.folding import shares
 from lattice.starts.frame import MeanTurn, frame_that_aligns, turned
 from lattice.starts.march import WINDOW_TOLERANCE, Marcher
 from lattice.starts.options import RecurrenceOptions, Report, silent
-from lattice.starts.returns import Comparison, Recurrence, ReturnScan, reflected
+from lattice.starts.returns import Comparison, Recurrence, ReturnScan, reflected, vertex
 from lattice.starts.stepper import Values, followed_step, suggest_dt
 from lattice.starts.streaming import broadcast_slabs, on_root
 
@@ -66,7 +66,7 @@ class Found:
 
 
 @dataclass(frozen=True)
-class _Plan:
+class Plan:
     """What all ranks must know of the window: how long one recurrence lasts, and whether it is an image."""
 
     lag: float
@@ -189,14 +189,17 @@ class Returner(Marcher):
             self.every,
         )
 
-    def plan(self) -> _Plan:
+    def plan(self) -> Plan:
         """Scan, pick a recurrence, and find its period and frame."""
         if self.lattice.nt == 1:
             raise InputError(
                 "start.kind = 'recurrence' needs lattice.nt > 1: a recurrence is a field in time"
             )
         found = self.scan()
-        number = self._chosen(found)
+        return self.plan_of(found, self._chosen(found))
+
+    def plan_of(self, found: Found, number: int) -> Plan:
+        """Find the period and the frame of one of the recurrences of the scan, by rank from 1."""
         beginning = self._beginnings[number - 1]
         self.spectrum, best = beginning.spectrum, beginning.recurrence
         if self.start.dt is None:
@@ -207,7 +210,7 @@ class Returner(Marcher):
         values = {**frame, "period": self.lag * (2.0 if self.image else 1.0)}
         values |= {f"source_{self._name(row)}": -slope for row, slope in self.running.items()}
         self._told_of(found, number, best, values)
-        return _Plan(self.lag, self.image is not None, values)
+        return Plan(self.lag, self.image is not None, values)
 
     def shares_of_slices(self) -> Iterator[Real]:
         """Yield the march's samples in the order of `shares`, shape (ny, nx, C)."""
@@ -327,19 +330,20 @@ class Returner(Marcher):
     def _refined(self, best: Recurrence) -> tuple[float, Complex]:
         """Return the lag at which the distance is smallest, and the spectrum then."""
         comparison = self._scan.comparisons[best.image]
-        first = self._image_of(self.spectrum)
+        first = comparison.prepared(self._image_of(self.spectrum)[None])
         step, begin = self.every / FINER, max(best.lag - self.every, 0.5 * self.every)
-        spectrum = self.stepper.advance(self.spectrum, begin, self.start.spin_up + best.time)
-        nearest: tuple[float, float, Complex] = (math.inf, begin, spectrum)
+        spectrum, squares = self._after(begin, best), []
         for n in range(2 * FINER + 1):
             if n:
                 spectrum = self.stepper.advance(spectrum, step, self.start.spin_up + best.time)
             held = self._seen(spectrum, begin + n * step, self._held())
-            pair = (comparison.prepared(s[None]) for s in (first, held))
-            distance = float(comparison.distances(*pair)[0])
-            if distance < nearest[0]:
-                nearest = (distance, begin + n * step, spectrum)
-        return nearest[1], nearest[2]
+            squares.append(float(comparison.distances(first, comparison.prepared(held[None]))[0]) ** 2)
+        lowest = min(max(1, int(np.argmin(squares))), len(squares) - 2)
+        lag = begin + (lowest + vertex(np.array(squares[lowest - 1 : lowest + 2]))) * step
+        return lag, self._after(lag, best)
+
+    def _after(self, time: float, best: Recurrence) -> Complex:
+        return self.stepper.advance(self.spectrum, time, self.start.spin_up + best.time)
 
     def _held(self) -> Values:
         return {n: 0.0 if n in self.matched else v for n, v in self.frame.items()}

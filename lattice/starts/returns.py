@@ -115,7 +115,7 @@ class Comparison:
         """Return the distances of pairs of prepared spectra, shapes (n, E, rows, columns)."""
         parts = self._parts(first, last)
         surface = self._surfaces(parts)
-        peak = surface.reshape(len(surface), -1).max(axis=1)
+        peak = _peaks(surface)
         both = 0.5 * (self.sizes(first) + self.sizes(last))
         ratio = np.divide(2.0 * (both - peak), both, out=np.zeros_like(both), where=both > 0.0)
         found: Real = np.sqrt(np.maximum(0.0, ratio))
@@ -272,7 +272,7 @@ class ReturnScan:
         minima &= farthest >= EXCURSION * middle
         times = 2.0 if image else 1.0
         for place in np.flatnonzero(minima) + 1:
-            lag = (place + 1 + _vertex(here[place - 1 : place + 2] ** 2)) * self.every
+            lag = (place + 1 + vertex(here[place - 1 : place + 2] ** 2)) * self.every
             if self.shortest <= times * lag / self.every <= self.longest:
                 time = (self._closed - 2) * self.every
                 self._keep(Recurrence(time, float(lag), float(here[place]), image))
@@ -291,12 +291,39 @@ def _alike(one: Recurrence, other: Recurrence) -> bool:
     return one.image == other.image and close and math.isclose(one.lag, other.lag, rel_tol=ALIKE_IN_PERIOD)
 
 
-def _vertex(values: Real) -> float:
+def _peaks(surface: Real) -> Real:
+    """Return the largest value of each periodic surface, shape (n, rows, columns), between its nodes.
+
+    The parabola through the largest node and its neighbours, along each axis.
+    """
+    numbers = np.arange(len(surface))
+    place = surface.reshape(len(surface), -1).argmax(axis=1)
+    row, column = np.unravel_index(place, surface.shape[1:])
+    middle = surface[numbers, row, column]
+    peak: Real = middle.copy()
+    for axis, nodes in enumerate(surface.shape[1:]):
+        if nodes < 3:
+            continue
+        step = (1, 0) if axis == 0 else (0, 1)
+        left, right = (
+            surface[
+                numbers,
+                (row + sign * step[0]) % surface.shape[1],
+                (column + sign * step[1]) % surface.shape[2],
+            ]
+            for sign in (-1, 1)
+        )
+        bend = 2.0 * middle - left - right
+        peak += np.divide(0.125 * (left - right) ** 2, bend, out=np.zeros_like(bend), where=bend > 0.0)
+    return peak
+
+
+def vertex(values: Real) -> float:
     """Return where between -1 and 1 the parabola through three values at -1, 0, 1 is lowest.
 
     Examples
     --------
-    >>> _vertex(np.array([4.0, 1.0, 2.0]))
+    >>> vertex(np.array([4.0, 1.0, 2.0]))
     0.25
     """
     left, middle, right = (float(v) for v in values)
