@@ -22,7 +22,7 @@ law.name = "kuramoto-sivashinsky"
 box = { period = 32.5, length_x = 22.0 }
 lattice = { nt = 84, nx = 64 }
 start = { kind = "march", seed = 133, dt = 0.1 }
-solve = { preconditioner = "direct", residual_rms = 1e-10 }
+solve = { preconditioner = "direct", residual_rms = 1e-10, newton_steps = 1000 }
 output.picture = false
 """
 HALVED = ("--", "-snes_linesearch_type", "basic", "-snes_linesearch_damping", "0.5")

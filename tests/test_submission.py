@@ -131,12 +131,8 @@ def test_a_study_asks_with_its_core_hours_before_it_floods_a_queue(project: Path
 
 @pytest.mark.long
 def test_the_members_of_a_study_run_a_few_at_once_and_one_that_fails_stops_no_other(project: Path) -> None:
-    for name, change in (("good", ""), ("bad", "solve.newton_steps = 1\n"), ("other", "")):
-        (project / f"{name}.toml").write_text(
-            change + FILM.replace("solve = {", "solve = {")
-            if not change
-            else FILM.replace("1e-10 }", "1e-10, newton_steps = 1 }")
-        )
+    for name, steps in (("good", 40), ("bad", 1), ("other", 40)):
+        (project / f"{name}.toml").write_text(FILM.replace("= 1000", f"= {steps}"))
     done = lattice("submit", "good.toml", "bad.toml", "other.toml", "--at-once", "1", "--yes", cwd=project)
     submitted(done)
     folders = [project / "runs" / name for name in ("good", "bad", "other")]

@@ -68,6 +68,12 @@ def open_leg(events: Sequence[Event]) -> Event | None:
     return None if newest["event"] == "ended" and not newest.get("goes_on") else newest
 
 
+def may_be_requeued(events: Sequence[Event]) -> bool:
+    """Whether the newest leg was ended from outside, as a scheduler does that puts its job back in the queue."""
+    newest = last(events, "submitted", "began", "ended", "halted")
+    return newest is not None and newest.get("by_request") is True and not is_cancelled(events)
+
+
 def halt_reason(events: Sequence[Event]) -> str:
     """Return why no leg follows the newest, empty where one does or may."""
     newest = last(events, "submitted", "began", "ended", "halted")

@@ -98,6 +98,10 @@ class _Files:
         return legs.newest_job(self.events)
 
     @property
+    def may_be_queued(self) -> bool:
+        return legs.open_leg(self.events) is not None or legs.may_be_requeued(self.events)
+
+    @property
     def system(self) -> str:
         return self.ticket.site.scheduler if self.ticket else ""
 
@@ -131,7 +135,7 @@ def view_run(folder: Path) -> RunView:
 
 
 def _ask(system: str, files: Sequence[_Files]) -> Jobs:
-    wanted = [one.job for one in files if one.system == system and one.job and legs.open_leg(one.events)]
+    wanted = [one.job for one in files if one.system == system and one.job and one.may_be_queued]
     return scheduler(system).jobs(sorted(set(wanted))) if wanted else {}
 
 
@@ -171,7 +175,7 @@ def _view(files: _Files, jobs: Jobs) -> RunView:
 
 
 def _queued_text(files: _Files, queued: QueuedJob | None, answered: bool) -> str:
-    if legs.open_leg(files.events) is None:
+    if not files.may_be_queued:
         return ""
     if not answered:
         return "no answer"
@@ -185,7 +189,7 @@ def _standing(files: _Files, queued: QueuedJob | None, answered: bool) -> tuple[
     if files.held:
         return "running", ""
     open_leg = legs.open_leg(files.events)
-    if open_leg is not None and queued is not None and queued.state != "ended":
+    if files.may_be_queued and queued is not None and queued.state != "ended":
         return queued.state, queued.word if queued.state == "waiting" else ""
     if open_leg is not None and not answered:
         return "unknown", f"the scheduler gives no answer; {open_leg['event']} {open_leg['time']}"

@@ -258,17 +258,19 @@ def _resume(options: argparse.Namespace, wishes: Wishes) -> int:
 def _after(options: argparse.Namespace, ticket: Ticket) -> str | None:
     """Return the id of the job to wait for: given, or the newest of the run in a folder."""
     from lattice.batch.legs import LegLog, newest_job
+    from lattice.batch.ticket import read_ticket
 
-    if options.after is None:
+    given: str | None = options.after
+    if given is None:
         return None
-    folder = Path(options.after)
+    folder = Path(given)
     if not folder.is_dir():
-        return str(options.after)
+        return given
     job = newest_job(LegLog(folder).events())
+    if job and (site := read_ticket(folder).site_name) != ticket.site_name:
+        raise InputError(f"must be a run of the same site, {given} is one of {site}", key="--after")
     if not job:
-        raise InputError(
-            f"must be a job's id or the folder of a submitted run, got '{options.after}'", key="--after"
-        )
+        raise InputError(f"must be a job's id or the folder of a submitted run, got '{given}'", key="--after")
     return job
 
 
