@@ -80,6 +80,7 @@ ENDINGS: list[tuple[dict[str, Any] | None, int | str, bool, float | None, tuple[
     (None, 137, False, None, ("failed", True)),
     (None, 70, False, None, ("failed", True)),
     ({"outcome": "failed", "reason": "no room"}, LOST, False, None, ("failed", True)),
+    ({"outcome": "failed", "reason": "ranks died"}, 137, True, None, ("interrupted", False)),
     ({"outcome": "running"}, LOST, False, None, None),
     (None, LOST, False, None, None),
 ]

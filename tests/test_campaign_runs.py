@@ -166,7 +166,7 @@ def test_after_a_kill_orphans_are_taken_in_and_nothing_runs_twice(
     assert finish(first)[0] == -signal.SIGKILL
     code, text = finish(begin(path, "--at-once", "2"))
     assert code == 0, text
-    assert text.count("runs already; waiting for it") == 2
+    assert text.count("waiting for it, it runs already on") == 2
     assert results(tmp_path) == results(uninterrupted[0])
     assert attempts(tmp_path) == [1, 1, 1]
 

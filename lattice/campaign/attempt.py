@@ -151,6 +151,15 @@ def adopt(number: int, files: MemberFiles) -> Attempt | None:
     return attempt
 
 
+def whereabouts(files: MemberFiles) -> str:
+    """Return where a member runs, as far as its locks tell, and what to do if it does not."""
+    signed, other = _signature(files), read_holder(files.run / "run.lock")
+    host, process = signed or ((other.host, other.process) if other is not None else ("", 0))
+    left = files.run / "run.lock" if other is not None else files.lock
+    where = f" on {host} (process {process})" if host else ""
+    return f"runs already{where}; if that process is gone, remove {left}"
+
+
 def is_running(files: MemberFiles) -> bool:
     """Whether a process works on a member, here or on another machine."""
     if not files.run.is_dir():

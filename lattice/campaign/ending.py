@@ -85,16 +85,16 @@ def _ending(
     files: MemberFiles, summary: dict[str, Any], code: int | str, stopping: bool, limit: float | None
 ) -> tuple[str, str, bool] | None:
     """Return outcome, reason and whether that is final."""
-    word = str(summary.get("outcome", ""))
+    word, reason = str(summary.get("outcome", "")), str(summary.get("reason") or "")
     told = word not in ("", RUNNING) and (code == LOST or code in _SUMMARY_CODES)
     if told and word not in (INTERRUPTED, FAILED):
-        return word, str(summary.get("reason", "")), True
+        return word, reason, True
     if limit is not None:
         return INTERRUPTED, f"stopped at its limit of {limit:g} s", True
-    if told and word == FAILED:
-        return FAILED, str(summary.get("reason", "")), True
-    if stopping or told or code in _INTERRUPTED_CODES:
-        return INTERRUPTED, str(summary.get("reason") or "stopped before its end"), False
+    if stopping or code in _INTERRUPTED_CODES or (told and word == INTERRUPTED):
+        return INTERRUPTED, reason or "stopped before its end", False
+    if word == FAILED:
+        return FAILED, reason, True
     if code == LOST:
         return None
     return FAILED, _failure(files.log, code), True

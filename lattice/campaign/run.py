@@ -16,6 +16,7 @@ from lattice.campaign.attempt import (
     is_running,
     own_environment,
     solve_command,
+    whereabouts,
 )
 from lattice.campaign.ending import CONVERGED, FAILED, RUNNING, Ending, ending
 from lattice.campaign.folder import CampaignFolder, Record
@@ -194,8 +195,8 @@ class _Runner:
         running = adopt(member.number, files)
         if running is not None:
             if self.only is not None:
-                raise InputError(f"runs already, see {files.lock}", key=f"member {member.number}")
-            self.report(f"member {member.number} ({member.label}): runs already; waiting for it")
+                raise InputError(whereabouts(files), key=f"member {member.number}")
+            self.report(f"member {member.number} ({member.label}): waiting for it, it {whereabouts(files)}")
             self.active.append(running)
             return
         record = self.folder.record(member.number)

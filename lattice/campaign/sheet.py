@@ -35,8 +35,9 @@ MOST_PANELS = 60
 """More would be too small to see; the sheet says how many there are."""
 COLUMNS = 6
 PIXELS = 400
+LABEL_LETTERS = 32
 DOTS_PER_INCH = 130
-PANEL_WIDTH, PANEL_HEIGHT = 2.1, 2.2
+PANEL_WIDTH, PANEL_HEIGHT, LINE_HEIGHT = 2.1, 2.2, 1.3
 
 
 @dataclass(frozen=True)
@@ -100,7 +101,8 @@ def _figure(panels: Sequence[Panel], states: int) -> Figure:
 
     columns = min(COLUMNS, max(3, len(panels)))
     lines = -(-len(panels) // columns)
-    size = (columns * PANEL_WIDTH + 1.0, lines * (PANEL_HEIGHT + 0.75) + 0.9)
+    high = LINE_HEIGHT if all(panel.plane is None for panel in panels) else PANEL_HEIGHT
+    size = (columns * PANEL_WIDTH + 1.0, lines * (high + 0.75) + 0.9)
     figure = Figure(figsize=size, dpi=DOTS_PER_INCH, layout="constrained")
     grid = figure.subplots(lines, columns, squeeze=False)
     limits = _limits(panels)
@@ -114,6 +116,7 @@ def _figure(panels: Sequence[Panel], states: int) -> Figure:
             axes.set_axis_off()
     if image is not None:
         bar = figure.colorbar(image, ax=grid, fraction=0.02, aspect=40, pad=0.01)
+        bar.ax.tick_params(labelsize=7)
         bar.set_label(f"{panels[0].meta.components[0]} (dimensionless)")
     title = "\n".join(wrapped(_title(panels, states).split(" "), " ", size[0] * 10))
     figure.suptitle(title, x=0.01, ha="left", fontsize=10, fontweight="bold")
@@ -144,7 +147,7 @@ def _draw(axes: Axes, panel: Panel, limits: Limits, largest: tuple[float, float]
         fine = trigonometric(panel.line, 4)
         axes.plot(np.linspace(0.0, wide, len(fine)), fine, color=LINE_COLOURS[0], linewidth=1.1)
         axes.set_xlim(0.0, largest[1])
-        axes.set_ylim(*limits.ends)
+        axes.set_ylim(limits.centre - 1.06 * limits.half, limits.centre + 1.06 * limits.half)
         return None
     high = extent(panel.meta, panel.axes[0])
     image = axes.imshow(
@@ -177,7 +180,15 @@ def _label(panel: Panel) -> str:
     repeats = row.record.repeats if row.record else ()
     if any(count > 1 for count in repeats):
         kind += f", repeats {' x '.join(map(str, repeats))}"
-    return "\n".join(line for line in (f"member {row.member}", " ".join(sizes), kind) if line)
+    varied = [f"{key.rpartition('.')[2]} {value:g}" for key, value in _numbers(row).items()]
+    first = wrapped([f"member {row.member}", *varied], ", ", LABEL_LETTERS)[0]
+    return "\n".join(line for line in (first, " ".join(sizes), kind) if line)
+
+
+def _numbers(row: Row) -> dict[str, float]:
+    """Return the numbers a member differs by, without those of the box, which the state itself tells."""
+    plain = {key: value for key, value in row.values.items() if not key.startswith("box.")}
+    return {key: value for key, value in plain.items() if isinstance(value, (int, float))}
 
 
 def _save(figure: Figure, out: Path) -> None:
