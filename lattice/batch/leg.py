@@ -97,7 +97,8 @@ class _Leg:
         cores = self.ticket.site.cores(self.ticket.ranks_of(self.number))
         facts: dict[str, Any] = {
             "leg": self.number, "code": end.code, "outcome": end.outcome, "reason": end.reason,
-            "by_request": end.by_request, "new_steps": new_steps, "seconds": round(seconds, 1), "core_hours": cores * seconds / 3600,
+            "by_request": end.by_request, "new_steps": new_steps,
+            "seconds": round(seconds, 1), "core_hours": cores * seconds / 3600,
         }  # fmt: skip
         decision = decide(self.ticket, [*self.log.events(), {"event": "ended", **facts}], end)
         self._note("ended", **facts, goes_on=decision.goes_on, halt=decision.reason)

@@ -69,7 +69,7 @@ def open_leg(events: Sequence[Event]) -> Event | None:
 
 
 def may_be_requeued(events: Sequence[Event]) -> bool:
-    """Whether the newest leg was ended from outside, as a scheduler does that puts its job back in the queue."""
+    """Whether the newest leg was ended from outside, as by a scheduler that puts its job back."""
     newest = last(events, "submitted", "began", "ended", "halted")
     return newest is not None and newest.get("by_request") is True and not is_cancelled(events)
 
