@@ -109,11 +109,11 @@ def run_campaign(
     folder = CampaignFolder(campaign.folder.absolute())
     lock = FolderLock(folder.lock)
     try:
-        _compare_plans(campaign, folder, choices.force)
         folder.path.mkdir(parents=True, exist_ok=True)
         if only is None:
             lock.take()
         try:
+            _compare_plans(campaign, folder, choices.force)
             folder.keep_plan(plan_of(campaign), campaign.file)
             with Signals() as signals:
                 return _Runner(campaign, folder, report, choices, signals, only).go()

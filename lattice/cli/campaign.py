@@ -5,6 +5,7 @@ from __future__ import annotations
 import argparse
 import json
 import sys
+from contextlib import suppress
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
@@ -148,7 +149,9 @@ def _warn(campaign: Campaign) -> None:
 
 
 def _say(text: str) -> None:
-    print(text, flush=True)
+    """Print a line of progress; a terminal that has gone away does not end the members."""
+    with suppress(OSError):
+        print(text, flush=True)
 
 
 def _list(options: argparse.Namespace, campaign: Campaign) -> int:
@@ -225,7 +228,8 @@ def _folder_of(options: argparse.Namespace) -> Path:
 
 
 def _complain(text: str) -> None:
-    print(text, file=sys.stderr, flush=True)
+    with suppress(OSError):
+        print(text, file=sys.stderr, flush=True)
 
 
 def _print_report(options: argparse.Namespace, folder: CampaignFolder, rows: list[Row], tally: Tally) -> None:
