@@ -120,7 +120,8 @@ def main() -> int:
         runs.append(run)
         scalars = row.get("scalars") or {}
         print(
-            f"{row['number']:3d} t {row['time']:7.1f} distance {row['distance']:.3f} period {row['start_period']:7.3f}"
+            f"{row['number']:3d} t {row['time']:7.1f} distance {row['distance']:.3f}"
+            f" period {row['start_period']:7.3f}"
             f" -> {row['outcome']:14s} {row.get('residual_rms') or float('nan'):.1e} period"
             f" {scalars.get('period', float('nan')):8.4f} length {scalars.get('length_x', float('nan')):8.4f}"
             f" {row.get('kind') or '':18s} {row['seconds']:6.1f} s"
@@ -128,9 +129,8 @@ def main() -> int:
             flush=True,
         )
     settled = sum(row["settled"] for row in rows)
-    print(
-        f"{settled} of {len(rows)} become states; {sum(bool(r['settled'] and not r['same_as']) for r in rows)} differ"
-    )
+    different = sum(bool(row["settled"] and not row["same_as"]) for row in rows)
+    print(f"{settled} of {len(rows)} become states, {different} different ones")
     out = options.out or options.folder / "recurrent.json"
     out.write_text(json.dumps({"machine": describe(), "command": " ".join(sys.argv), "rows": rows}, indent=1))
     return 0

@@ -159,7 +159,7 @@ def test_shift_between_the_ends_becomes_the_drift():
 
 
 def test_a_recurrence_is_picked_by_rank_or_by_time():
-    options = {"seed": 3, "spin_up": 60.0, "march_time": 90.0, "match_drift": ("x",), "longest": 30.0, "dt": 0.15}
+    options = {"seed": 3, "spin_up": 60.0, "march_time": 120.0, "match_drift": ("x",), "longest": 30.0, "dt": 0.15}
     grid, values = Lattice(20, 1, 32), film(period=20.0, length_x=22.0)
     found = find_recurrences(RecurrenceOptions(**options), grid, values, FILM).recurrences
     assert [r.distance for r in found] == sorted(r.distance for r in found)
