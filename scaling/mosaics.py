@@ -5,8 +5,8 @@
 Small states of the film law first: windows of a march at L = 22, T = 20, solved one seed after the other
 until there are enough that differ and are periodic in time. Then layouts of two side by side and of two by
 two, members drawn and reflected at random, each composed as by `lattice mosaic` and solved by
-`lattice solve` (damped stage, Newton's method, two refinements by 1.4). Started again with the same folder, it goes on
-where it was.
+`lattice solve` (damped stage, Newton's method, two refinements by 1.4). Started again with the same folder,
+it goes on where it was.
 """
 
 from __future__ import annotations
