@@ -110,6 +110,7 @@ def _noise(values: tuple[float, ...], scale: float) -> float:
 def _holds(band: Any, values: tuple[float, ...]) -> dict[str, Any]:
     return {
         "half": band.half,
+        "sharpness": band.half / max(abs(values[-1] - band.value), 1e-300),
         "twice refined": bool(abs(values[2] - band.value) <= band.half),
         "finest": bool(abs(values[-1] - band.value) <= band.half),
     }
@@ -132,6 +133,9 @@ def shares(rows: list[dict[str, Any]]) -> dict[str, dict[str, float]]:
                 "observables": sum(flat) / len(flat),
                 "states": sum(all(state) for state in states) / len(states),
                 "count": len(flat),
+                "sharpness": _median(
+                    [o[kind]["sharpness"] for r in rows for o in r["observables"].values() if o[kind]]
+                ),
             }
     flat = [o["extrapolated"] for r in rows for o in r["observables"].values()]
     found["extrapolated from two refinements: finest"] = {
@@ -139,6 +143,12 @@ def shares(rows: list[dict[str, Any]]) -> dict[str, dict[str, float]]:
         "count": len(flat),
     }
     return found
+
+
+def _median(numbers: list[float]) -> float:
+    import statistics
+
+    return float(statistics.median(numbers))
 
 
 def main() -> None:
@@ -164,9 +174,10 @@ def main() -> None:
     summary = {"all": shares(solved), "not refused": shares(trusted)} if trusted else {"all": shares(solved)}
     print(f"\n{len(rows)} states, {len(solved)} solved on all lattices, {len(trusted)} not refused")
     for name, share in (summary.get("not refused") or summary["all"]).items():
+        sharp = f", median width {share['sharpness']:.1f} errors" if "sharpness" in share else ""
         mark = "" if share["observables"] >= WANTED else f"   below {WANTED:g}"
         whole = f", all of a state {share['states']:.0%}" if "states" in share else ""
-        print(f"  {name:<48}{share['observables']:.1%} of {share['count']:.0f}{whole}{mark}")
+        print(f"  {name:<48}{share['observables']:.1%} of {share['count']:.0f}{whole}{sharp}{mark}")
     if options.out:
         record = {"machine": describe(), "factor": FACTOR, "rows": rows, "summary": summary}
         options.out.write_text(json.dumps(record, indent=1))

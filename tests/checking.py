@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
+from dataclasses import replace
 from pathlib import Path
 from typing import Any
 
@@ -29,9 +30,8 @@ def store(
     from mpi4py import MPI
 
     law = load_law(law) if isinstance(law, str) else law
-    meta = StateMeta.of_law(
-        law, lattice, solved.values, **({"free": tuple(free), "outcome": "converged"} | changes)
-    )
+    meta = StateMeta.of_law(law, lattice, solved.values, free=tuple(free), outcome="converged")
+    meta = replace(meta, **changes)
     field = np.ascontiguousarray(solved.field)
     write_state(path, field, Block.whole(lattice), meta, MPI.COMM_SELF)
     return path

@@ -62,9 +62,8 @@ def test_proved_periodic_states_lie_inside_their_bands(tmp_path, length, period,
     # The correction to first order, without any solve, comes near, too: within a fifth of the true error.
     quick = check(tmp_path / "odd.h5", refinements=0).findings.bands["period"]
     assert quick.best == pytest.approx(period, abs=0.2 * abs(quick.value - period))
-    assert "u(t + T/2, x + Lx/2) = u" in " ".join(found.findings.periodicity.symmetries).replace(
-        "  ", " "
-    ) or (found.findings.periodicity.symmetries)
+    # Independent recomputation, to 1e-15: half a period later the state is half a length further on.
+    assert "u(t + T/2, x + Lx/2) = u(t, x)" in found.findings.periodicity.symmetries
 
 
 @pytest.fixture(scope="module")
@@ -140,11 +139,11 @@ def test_a_state_of_another_law_than_it_names_is_refused_for_that(odd, tmp_path)
 
 
 def test_an_under_resolved_state_is_refused_for_its_resolution(tmp_path):
-    lattice, state = odd_film(17.631043132046, 12, 12, order=4)
+    lattice, state = odd_film(17.631043132046, 24, 20, order=2)
     found = check(store(tmp_path / "coarse.h5", FILM, lattice, state, ("period", "drift_x")))
     assert found.verdict == "not certified"
     assert "residual" not in failed(found)
-    assert failed(found) & {"truncation", "resolution", "representation"}
+    assert "representation" in failed(found)
     assert "march" in failed(found)
 
 

@@ -25,6 +25,8 @@ class Thresholds:
         may mean for the field.
     truncation, truncation_wide : float
         Residual with exact derivatives in units of the largest term.
+    correction, correction_wide : float
+        The field's discretisation error to first order in units of its fluctuation.
     tail, tail_wide : float
         Share of the fluctuating energy in the last third of the wavenumbers, per axis.
     unrepresented, unrepresented_wide : float
@@ -45,6 +47,8 @@ class Thresholds:
     error_bound: float = 1e-4
     truncation: float = 0.02
     truncation_wide: float = 0.2
+    correction: float = 0.03
+    correction_wide: float = 0.2
     tail: float = 1e-4
     tail_wide: float = 1e-2
     unrepresented: float = 1e-3
@@ -64,6 +68,7 @@ DESCRIPTIONS = {
     "residual": "residual of each equation, in units of its largest term",
     "error_bound": "linear bound of the field's error, residual_rms/sigma_min, in units of the fluctuation",
     "truncation": "residual with exact derivatives, in units of the largest term",
+    "correction": "discretisation error of the field to first order, in units of the fluctuation",
     "tail": "share of the fluctuating energy in the last third of the wavenumbers, per axis",
     "unrepresented": "share beyond the wavenumber at which a first derivative errs by a tenth",
     "march": "mismatch of marched slices, in units of the fluctuation",

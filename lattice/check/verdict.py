@@ -111,6 +111,9 @@ class _Judge:
         size = self.found.fluctuation or 1.0
         why = "linear bound of the field's error in units of its fluctuation"
         yield self._number("error_bound", sensitivity.error_bound / size, "error_bound", why)
+        if math.isfinite(self.found.correction):
+            why = "discretisation error to first order in units of the fluctuation"
+            yield self._number("correction", self.found.correction, "correction", why)
 
     def _periodicity(self) -> Iterator[Criterion]:
         found = self.found.periodicity

@@ -14,7 +14,7 @@ if TYPE_CHECKING:
     from lattice.check.certificate import Certificate
     from lattice.check.findings import Findings
 
-COLUMNS = 100
+COLUMNS, LABEL = 100, 26
 
 
 def to_text(certificate: Certificate) -> str:
@@ -81,33 +81,45 @@ def _spectra(found: Findings) -> Iterator[str]:
 
 
 def _others(found: Findings) -> Iterator[str]:
-    yield f"kind                {found.periodicity.text}"
+    yield from _row("kind", found.periodicity.text)
     for line in found.periodicity.symmetries:
-        yield f"                    {line}"
+        yield from _row("", line)
     for b in found.balances:
         if b.origin == "conserved":
-            yield f"{b.name:<20}wanders by {b.error:.1e} of the field from level to level"
+            yield from _row(b.name, f"wanders by {b.error:.1e} of the field from level to level")
         else:
-            yield f"{b.name + ' balance':<20}loss/gain {b.computed_to_expected:.8f}, expected 1 ({b.origin})"
+            text = f"loss/gain {b.computed_to_expected:.8f}, expected 1 ({b.origin})"
+            yield from _row(f"balance, {b.name}", text)
     if found.sensitivity is not None:
         s = found.sensitivity
-        settled = "" if s.settled and s.exact else ", an upper bound: iteration stopped early"
-        yield f"sensitivity         sigma_min {s.smallest[0]:.3e}{settled}"
-        yield f"                    |du| <= |R|/sigma_min = {s.error_bound:.1e} rms, a linear estimate"
+        settled = "" if s.settled and s.exact else ", an upper bound: the iteration was stopped early"
+        yield from _row("sensitivity", f"sigma_min {s.smallest[0]:.3e}{settled};")
+        yield from _row("", f"|du| <= |R|/sigma_min = {s.error_bound:.1e} rms, a linear estimate")
     if math.isfinite(found.correction):
-        yield f"discretisation      error about {found.correction:.1e} of the fluctuation, to first order"
-    if found.march is not None:
-        m = found.march
-        segments = f"{len(m.mismatches)} segments of up to {m.levels} levels (time {m.time:.3g})"
-        if found.levels == 1:
-            segments = f"over a time of {m.time:.3g}"
-        yield f"march               {segments}: mismatch {m.largest:.1e},"
-        yield (
-            f"                    errors grow {m.largest_growth:.2f}-fold (rate {m.rate:.2g}); marcher's own "
-            f"error {m.marcher_error:.1e}"
-        )
+        text = f"error about {found.correction:.1e} of the fluctuation, to first order"
+        yield from _row("discretisation", text)
+    yield from _marches(found)
+
+
+def _marches(found: Findings) -> Iterator[str]:
+    m = found.march
+    if m is None:
+        yield from _row("march", found.march_failure)
+        return
+    segments = f"{len(m.mismatches)} segments of up to {m.levels} levels (time {m.time:.3g})"
+    if found.levels == 1:
+        segments = f"over a time of {m.time:.3g}"
+    growth = f"errors grow {m.largest_growth:.2f}-fold (local rate {m.rate:.2g})"
+    error = f"the marcher's own error is {m.marcher_error:.1e}"
+    yield from _row("march", f"{segments}: mismatch {m.largest:.1e}, {growth}; {error}")
     if math.isfinite(found.single_march):
-        yield f"single march        one march over the whole period misses by {found.single_march:.1e}"
+        yield from _row("single march", f"one march over the period misses by {found.single_march:.1e}")
+
+
+def _row(label: str, text: str) -> Iterator[str]:
+    """Yield a labelled line, wrapped below its own start."""
+    for k, line in enumerate(textwrap.wrap(text, COLUMNS - LABEL, break_on_hyphens=False) or [""]):
+        yield f"{label if k == 0 else '':<{LABEL}}{line}".rstrip()
 
 
 def _levels(found: Findings) -> Iterator[str]:
@@ -127,12 +139,11 @@ def _bands(found: Findings) -> Iterator[str]:
         return
     how = "refinement" if found.refinement and found.refinement.bands else "the correction to first order"
     yield f"observables, bands from {how}"
-    yield "                    value on its lattice    band (+-)   extrapolated          band (+-)  order"
+    yield f"  {'':<27}{'value on its lattice':<21}{'band (+-)':<12}{'extrapolated':<18}{'band (+-)':<11}order"
     for b in found.bands.values():
         order = b.kind if b.order is None else f"{b.order:.2f}" + ("" if b.near_nominal else f" {b.kind}")
-        yield (
-            f"  {b.name:<18}{b.value:<20.12g}{b.half:>13.2e}   {b.best:<20.12g}{b.best_half:>11.2e}  {order}"
-        )
+        own, best = f"{b.value:<21.11g}{b.half:<12.2e}", f"{b.best:<18.11g}{b.best_half:<11.2e}"
+        yield f"  {b.name:<27}{own}{best}{order}"
 
 
 def _short(value: float) -> str:
