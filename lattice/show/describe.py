@@ -12,6 +12,7 @@ from typing import Any
 
 from lattice.show.planes import extent
 from lattice.show.verdict import residual_text
+from lattice.store.certificates import read_certificate
 from lattice.store.layout import SCHEMA, SCHEMA_VERSION
 from lattice.store.runfolder import lattice_numbers
 from lattice.store.statefile import read_meta
@@ -22,7 +23,7 @@ LABEL = 14
 CAUTION = (
     "This state carries no certificate. A small residual shows that it solves the equations of its "
     "lattice, not that the lattice resolves the law or that the law describes the plant. Do not base a "
-    "design decision on it: check it on finer lattices first, and follow the site's rules and licensed "
+    "design decision on it: run `lattice check` on it first, and follow the site's rules and licensed "
     "practice."
 )
 MEANINGS = {
@@ -47,7 +48,9 @@ def describe_state(path: str | os.PathLike[str], more: Sequence[tuple[str, str]]
     sections = [_law(meta), _scalars(meta), _lattice(meta), _outcome(meta)]
     sections += [[line for label, text in more for line in _row(label, text)], _origin(meta)]
     text = "\n\n".join("\n".join(section) for section in sections if section)
-    caution = textwrap.fill(CAUTION, COLUMNS, initial_indent="Caution: ", subsequent_indent="         ")
+    caution = textwrap.fill(
+        caution_of(path), COLUMNS, initial_indent="Caution: ", subsequent_indent="         "
+    )
     return f"{os.fspath(path)}\n\n{text}\n\n{caution}\n"
 
 
@@ -59,8 +62,22 @@ def state_json(path: str | os.PathLike[str], classification: Mapping[str, Any] |
     content = {"schema": SCHEMA, "schema_version": SCHEMA_VERSION, **asdict(meta)}
     content["lattice"] = lattice_numbers(meta.lattice)
     content["scalars"] = content.pop("values")
-    content["caution"] = CAUTION
+    stored = read_certificate(path)
+    content["certificate"] = stored and {"verdict": stored.record.get("verdict"), "holds": stored.valid}
+    content["caution"] = caution_of(path)
     return json.dumps(plain(content), indent=2, allow_nan=False, ensure_ascii=False) + "\n"
+
+
+def caution_of(path: str | os.PathLike[str]) -> str:
+    """Return what is to be said of a state's certificate: its verdict, that it no longer holds, or none."""
+    stored = read_certificate(path)
+    if stored is None:
+        return CAUTION
+    if not stored.valid:
+        changed = " and ".join(stored.changed)
+        return f"This state's certificate no longer holds: {changed} changed. Run `lattice check` again."
+    record = stored.record
+    return f"This state is {record['verdict']} ({record['written']}). {record['caution']}"
 
 
 def _row(label: str, text: str) -> list[str]:

@@ -16,7 +16,7 @@ import numpy as np
 from lattice.errors import LatticeError
 from lattice.store.layout import LIBRARY_FORMAT
 from lattice.store.replacement import discard, partial_path, publish
-from lattice.store.statefile import StateFile
+from lattice.store.statefile import StateFile, read_meta
 from lattice.store.statemeta import plain
 
 CERTIFICATE = "lattice-record/certificate"
@@ -108,11 +108,12 @@ def read_certificate(path: str | os.PathLike[str]) -> StoredCertificate | None:
     """
     import h5py
 
-    now = input_checksums(path)
+    read_meta(path)  # refuses what is no sound state file
     with h5py.File(path, "r") as file:
         text = bytes(file[CERTIFICATE][()]) if CERTIFICATE in file else b""
     if not text:
         return None
+    now = input_checksums(path)
     try:
         record = json.loads(text)
         sums = dict(record["inputs"])
