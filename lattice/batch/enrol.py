@@ -53,11 +53,14 @@ def record_inputs(ticket: Ticket, file: Path, overrides: Sequence[str], version:
 
 
 def place(entry: Entry) -> None:
-    """Make a run's folder with its ticket and job; an earlier run's files are moved aside."""
+    """Make a run's folder with its ticket and job; an earlier run's files are moved aside.
+
+    A command without a job text, such as a campaign's member, looks after its own earlier files.
+    """
     try:
         entry.folder.mkdir(parents=True, exist_ok=True)
-        set_aside(entry.folder)
         if entry.job_text:
+            set_aside(entry.folder)
             write_text_whole(entry.folder / INPUT, entry.job_text)
         write_ticket(entry.folder, entry.ticket)
     except OSError as error:
@@ -80,7 +83,7 @@ def submit_further(folder: Path, ticket: Ticket, number: int, after: str | None)
     return hand_over(Script(ticket, folder, number), system, LegLog(folder), after)
 
 
-def submit_study(folder: Path, entries: Sequence[Entry], after: str | None) -> str:
+def submit_study(folder: Path, name: str, entries: Sequence[Entry], after: str | None) -> str:
     """Submit runs as one job array, which is kept in a folder; return the array's id."""
     for entry in entries:
         place(entry)
@@ -88,7 +91,7 @@ def submit_study(folder: Path, entries: Sequence[Entry], after: str | None) -> s
     system = scheduler(ticket.site.scheduler)
     folder.mkdir(parents=True, exist_ok=True)
     write_study(folder, Study(tuple(entry.folder for entry in entries), ticket.site.concurrent))
-    array = system.submit(write_script(study_script(folder, entries)), after)
+    array = system.submit(write_script(study_script(folder, name, entries)), after)
     for number, entry in enumerate(entries):
         ranks = entry.ticket.ranks_of(1)
         job = system.member(array, number)
@@ -96,16 +99,16 @@ def submit_study(folder: Path, entries: Sequence[Entry], after: str | None) -> s
     return array
 
 
-def study_script(folder: Path, entries: Sequence[Entry]) -> Script:
+def study_script(folder: Path, name: str, entries: Sequence[Entry]) -> Script:
     """Return the script of a job array."""
-    ticket = replace(entries[0].ticket, name=folder.name)
+    ticket = replace(entries[0].ticket, name=name)
     return Script(ticket, folder, members=len(entries))
 
 
 def study_folder(entries: Sequence[Entry]) -> Path:
-    """Return the folder a study is kept in: the deepest that holds all its runs, or a new one in it."""
+    """Return a new folder for a study's script: in the deepest folder that holds all its runs."""
     common = Path(os.path.commonpath([str(entry.folder.parent) for entry in entries]))
     number = 1
-    while (common / f"study-{number}" / STUDY).exists():
+    while (common / f"array-{number}" / STUDY).exists():
         number += 1
-    return common / f"study-{number}"
+    return common / f"array-{number}"

@@ -25,7 +25,7 @@ class Local:
             ["/bin/bash", str(script)],
             stdin=subprocess.DEVNULL, stdout=subprocess.DEVNULL, stderr=subprocess.DEVNULL,
             start_new_session=True, close_fds=True,
-            env=clean_environment(os.environ) | {"LATTICE_AFTER": after or ""},
+            env=clean_environment(os.environ) | {"LATTICE_AFTER": after or "", "LATTICE_MEMBER": ""},
         )  # fmt: skip
         job = job_of(process.pid)
         # It must outlive this process; who waits for it then is the system.
@@ -51,8 +51,8 @@ class Local:
         raise SchedulerError("this machine has no queue; use chain = 'submit'")
 
     def own_job(self, environ: Mapping[str, str]) -> str:
-        """Return the job of the script that started this process."""
-        return job_of(os.getppid())
+        """Return the job of the script that started this process; a study's member is one by itself."""
+        return job_of(os.getpid() if environ.get("LATTICE_MEMBER") else os.getppid())
 
     def member(self, array: str, place: int) -> str:
         """Return the id of a study's member: all run in one job."""

@@ -100,6 +100,22 @@ def further_ticket(folder: Path, wishes: Wishes) -> tuple[Ticket, int]:
     return replace(ticket, queue=choose_queue(ticket, wishes.queue or old.queue or None)), number
 
 
+def further_legs(folder: Path, ticket: Ticket) -> Ticket:
+    """Return a ticket whose legs come on top of those that a folder's run has used.
+
+    Raises
+    ------
+    InputError
+        Where that run is active.
+    """
+    view = view_run(folder)
+    if view.outcome in ("running", "waiting"):
+        raise InputError(
+            f"holds a run that is {view.outcome}; wait for it, or `lattice cancel` it", file=str(folder)
+        )
+    return replace(ticket, legs=ticket.legs + len(of_kind(LegLog(folder).events(), "began")))
+
+
 def choose_queue(ticket: Ticket, wanted: str | None) -> str:
     """Return the queue wanted, else the site's first that takes the ticket; empty where the site names none.
 

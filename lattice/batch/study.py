@@ -107,7 +107,13 @@ class _Pool:
         command = [sys.executable, "-m", "lattice", "leg", str(member), "--number", "1"]
         with (member / LOG).open("ab") as output:
             self._running.append(
-                subprocess.Popen(command, stdin=subprocess.DEVNULL, stdout=output, stderr=output)
+                subprocess.Popen(
+                    command,
+                    stdin=subprocess.DEVNULL,
+                    stdout=output,
+                    stderr=output,
+                    env={**os.environ, "LATTICE_MEMBER": "1"},
+                )
             )
 
     def finish(self) -> list[int]:

@@ -58,6 +58,8 @@ class RunView:
         The newest leg, and how many there may be; 0 for runs that were not submitted.
     site, job, queued : str
         Where it was submitted, the newest job's id, and what the scheduler says of it.
+    begun : bool
+        Whether the newest leg has begun.
     """
 
     folder: Path
@@ -75,6 +77,7 @@ class RunView:
     site: str = ""
     job: str = ""
     queued: str = ""
+    begun: bool = False
 
     @property
     def active(self) -> bool:
@@ -170,6 +173,7 @@ def _view(files: _Files, jobs: Jobs) -> RunView:
         legs=files.ticket.legs if files.ticket else 0,
         site=files.ticket.site_name if files.ticket else "",
         job=files.job,
+        begun=newest is not None and newest["event"] == "began",
         queued=_queued_text(files, queued, jobs is not None),
     )
 
@@ -190,6 +194,8 @@ def _standing(files: _Files, queued: QueuedJob | None, answered: bool) -> tuple[
         return "running", ""
     open_leg = legs.open_leg(files.events)
     if files.may_be_queued and queued is not None and queued.state != "ended":
+        if files.system == "local" and open_leg is not None and open_leg["event"] == "submitted":
+            return "waiting", "for others of this machine"
         return queued.state, queued.word if queued.state == "waiting" else ""
     if open_leg is not None and not answered:
         return "unknown", f"the scheduler gives no answer; {open_leg['event']} {open_leg['time']}"

@@ -51,9 +51,12 @@ def _cancel(view: RunView, now: bool) -> str:
     from lattice.batch.scheduler import SchedulerError, scheduler
     from lattice.batch.ticket import read_ticket
 
-    system: Scheduler = scheduler(read_ticket(view.folder).site.scheduler)
+    kind = read_ticket(view.folder).site.scheduler
+    system: Scheduler = scheduler(kind)
     # First, so that whatever ends the job, no further leg follows.
     stop_run(view.folder, "lattice cancel")
+    if kind == "local" and not view.begun:
+        return f"job {view.job} will not begin it"
     try:
         if view.outcome == "waiting" or now:
             system.cancel(view.job)

@@ -113,10 +113,14 @@ def _entries(options: argparse.Namespace, wishes: Wishes) -> list[Entry]:
     name, site = load_site(options.site)
     if options.at_once is not None:
         site = site.model_copy(update={"concurrent": options.at_once})
-    if len(options.jobs) == 1 and _is_campaign(options.jobs[0]):
-        entries = _members(options, name, site, wishes)
-    else:
-        entries = [_entry(options, Path(job), name, site, wishes) for job in options.jobs]
+    campaigns = [job for job in options.jobs if _is_campaign(job)]
+    if campaigns and len(options.jobs) > 1:
+        raise InputError(
+            "is a campaign file; submit it alone, it is a job array by itself", file=campaigns[0]
+        )
+    if campaigns:
+        return _members(options, name, site, wishes)
+    entries = [_entry(options, Path(job), name, site, wishes) for job in options.jobs]
     folders = [entry.folder for entry in entries]
     if len(set(folders)) < len(folders):
         raise InputError(
@@ -171,7 +175,7 @@ def _folder(options: argparse.Namespace, file: Path, site: Site, own: str | None
 def _members(options: argparse.Namespace, name: str, site: Site, wishes: Wishes) -> list[Entry]:
     """Return the members of a campaign that have not ended."""
     from lattice.batch.enrol import Entry, record_inputs
-    from lattice.batch.prepare import new_ticket
+    from lattice.batch.prepare import further_legs, new_ticket
     from lattice.campaign.folder import CampaignFolder
     from lattice.campaign.reader import read_campaign
     from lattice.store.versions import package_version
@@ -188,9 +192,9 @@ def _members(options: argparse.Namespace, name: str, site: Site, wishes: Wishes)
             continue
         command = ["campaign", str(file), "--out", str(folder.path), "--member", str(member.number)]
         ticket = new_ticket(f"{file.stem}-{member.number}", command, name, site, wishes, ())
-        entries.append(
-            Entry(folder.member(member.number).run, record_inputs(ticket, file, (), package_version()))
-        )
+        run = folder.member(member.number).run
+        ticket = further_legs(run, record_inputs(ticket, file, (), package_version()))
+        entries.append(Entry(run, ticket))
     if not entries:
         raise InputError(
             "has no member left to run; `lattice campaign FILE --report` shows them", file=str(file)
@@ -218,13 +222,13 @@ def _submit_study(options: argparse.Namespace, entries: Sequence[Entry]) -> int:
     from lattice.batch.prepare import cost_text
     from lattice.batch.render import render
 
-    folder = study_folder(entries)
+    folder, name = study_folder(entries), Path(options.jobs[0]).stem
     if options.dry_run:
-        print(render(study_script(folder, entries)), end="")
+        print(render(study_script(folder, name, entries)), end="")
         return 0
     print(cost_text(entries[0].ticket, len(entries)))
     _confirm(options, entries[0].ticket, len(entries))
-    array = submit_study(folder, entries, _after(options, entries[0].ticket))
+    array = submit_study(folder, name, entries, _after(options, entries[0].ticket))
     print(f"submitted as job array {array}: {len(entries)} runs, script in {folder}")
     print("the order of the runs and their folders: study.json there; watch with `lattice runs`")
     return 0
