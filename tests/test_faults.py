@@ -257,3 +257,18 @@ def test_what_a_run_has_written_is_known_even_if_the_clock_was_set_back(tmp_path
     os.utime(tmp_path / "new", (1e9, 1e9))
     (tmp_path / "new").replace(state)
     assert before.wrote_state()
+
+
+@pytest.mark.long
+def test_a_pause_of_all_processes_loses_nothing(project: Path) -> None:
+    process = start(project, HALVED)
+    wait_for(lambda: len(entries(project / "run")) > 2, 90, "no steps")
+    paused = [process.pid, *descendants(process.pid)]
+    for one in paused:
+        os.kill(one, signal.SIGSTOP)
+    time.sleep(5.0)
+    for one in reversed(paused):
+        os.kill(one, signal.SIGCONT)
+    assert process.wait(120) == 0
+    steps = [entry["step"] for entry in entries(project / "run")]
+    assert steps == list(range(len(steps)))

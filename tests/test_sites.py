@@ -29,7 +29,7 @@ EXAMPLES = sorted((ROOT / "jobs" / "sites").glob("*.toml"))
         ({}, "scheduler: is required; add scheduler = ..."),
         ({"scheduler": "slurn"}, "scheduler: must be one of slurm, pbs, local, got 'slurn'"),
         ({"scheduler": "slurm"}, "cores_per_node is required for scheduler = 'slurm'; add it"),
-        ({**SLURM, "acount": "x"}, "acount: is not a key of a site file (did you mean 'account'?); known are"),
+        ({**SLURM, "accounts": "x"}, "accounts: is not a key of a site file (did you mean 'account'?); known are"),
         ({**SLURM, "account": "x\n#SBATCH --exclusive"}, "account: must be one line of printable text"),
         ({**SLURM, "modules": ("petsc", "a\nrm -rf x")}, "modules[2]: must be one line of printable text"),
         ({**SLURM, "directives": ("--x\nrm y",)}, "directives[1]: must be one line of printable text"),

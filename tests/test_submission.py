@@ -261,3 +261,25 @@ def test_pbs_scripts_run_a_job_over_several_legs_under_a_stub_of_qsub(project: P
     assert {event["reason"] for event in events(folder, "ended")[:-1]} == {
         "stopped by the end of the wall clock"
     }
+
+
+@pytest.mark.long
+def test_a_campaign_becomes_an_array_and_its_members_go_on_one_by_one(project: Path) -> None:
+    (project / "many.toml").write_text('job = "film.toml"\n[[vary]]\nstart.seed = [133, 134]\n')
+    dry = lattice("submit", "many.toml", "--dry-run", cwd=project)
+    assert "leg" in dry.stdout and "--study" in dry.stdout and not (project / "runs").exists()
+    submitted(lattice("submit", "many.toml", "--at-once", "1", "--yes", cwd=project))
+    runs = find_runs(project / "runs")
+    assert len(runs) == 2
+    second = runs[1]
+    done = lattice("cancel", second, cwd=project)
+    assert done.returncode == 0, done.stderr
+    wait_for(lambda: not any(found.active for found in view_runs(runs)), 90, "not ended")
+    assert view_run(runs[0]).outcome == "converged" and view_run(second).outcome in (
+        "cancelled",
+        "interrupted",
+    )
+    submitted(lattice("submit", "many.toml", "--yes", cwd=project))
+    wait_for(ended(second), 90, "not ended")
+    assert view_run(second).outcome in ("converged", "not converged")
+    assert len(events(runs[0], "began")) == 1, "what has ended is not run again"
