@@ -283,3 +283,18 @@ def test_a_campaign_becomes_an_array_and_its_members_go_on_one_by_one(project: P
     wait_for(ended(second), 90, "not ended")
     assert view_run(second).outcome in ("converged", "not converged")
     assert len(events(runs[0], "began")) == 1, "what has ended is not run again"
+
+
+@pytest.mark.long
+def test_a_run_waits_for_all_legs_of_the_one_before_it(project: Path) -> None:
+    first, second = project / "first", project / "second"
+    pace = ("--", "-snes_linesearch_type", "basic", "-snes_linesearch_damping", "0.3")
+    submitted(
+        lattice("submit", "film.toml", "--out", "first", "--time", "12s", "--legs", "9", *pace, cwd=project)
+    )
+    submitted(lattice("submit", "film.toml", "--out", "second", "--after", "first", cwd=project))
+    wait_for(lambda: not view_run(second).active and events(second, "ended"), 150, "not ended")
+    legs = len(events(first, "began"))
+    assert legs >= 2 and view_run(first).outcome == view_run(second).outcome == "converged"
+    assert events(second, "began")[0]["time"] >= events(first, "ended")[-1]["time"]
+    assert len(events(second, "began")) == 1

@@ -14,12 +14,13 @@ from typing import IO, Any
 from lattice.batch.chain import LegEnd, decide
 from lattice.batch.codes import CONVERGED, INTERRUPTED
 from lattice.batch.ending import Ending
-from lattice.batch.legs import LegLog, is_cancelled
+from lattice.batch.legs import LegLog, is_cancelled, last
 from lattice.batch.render import Script
 from lattice.batch.scheduler import Scheduler, scheduler
 from lattice.batch.submission import hand_over
 from lattice.batch.supervise import Supervisor
 from lattice.batch.ticket import Ticket, read_ticket
+from lattice.batch.watch import view_run
 from lattice.errors import LatticeError
 from lattice.store.aftermath import kept_steps
 from lattice.store.runfolder import read_summary
@@ -48,7 +49,7 @@ def run_leg(folder: Path, number: int, output: IO[bytes] | None = None) -> int:
     ticket, log = read_ticket(folder), LegLog(folder)
     system = scheduler(ticket.site.scheduler)
     _wait_for(system, os.environ.get("LATTICE_AFTER", ""))
-    if is_cancelled(log.events()):
+    if is_cancelled(log.events()) or _waits_on(folder, ticket, number, log, system):
         return INTERRUPTED
     return _Leg(folder, ticket, number, log, system).go(output)
 
@@ -57,6 +58,18 @@ def _wait_for(system: Scheduler, job: str) -> None:
     """Wait for another job's end where the scheduler leaves that to the job itself."""
     while job and (known := (system.jobs([job]) or {}).get(job)) and known.state != "ended":
         time.sleep(WAIT_POLL)
+
+
+def _waits_on(folder: Path, ticket: Ticket, number: int, log: LegLog, system: Scheduler) -> bool:
+    """Queue behind the run to wait for, where that has gone on in a further job meanwhile."""
+    newest = last(log.events(), "submitted")
+    if not ticket.after or newest is None:
+        return False
+    other = view_run(Path(ticket.after))
+    if other.outcome not in ("running", "waiting") or other.job == newest.get("after"):
+        return False
+    hand_over(Script(ticket, folder, number), system, log, after=other.job)
+    return True
 
 
 @dataclass(frozen=True)

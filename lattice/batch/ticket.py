@@ -46,6 +46,8 @@ class Ticket:
         Most core hours over all legs, None without limit.
     memory_mb_per_rank : int or None
         Memory to ask the scheduler for, None for its own rule.
+    after : str
+        Folder of the run whose last leg this one waits for, empty where there is none.
     inputs : dict
         Where the job came from: file, overrides, checksum.
     made : dict
@@ -63,6 +65,7 @@ class Ticket:
     core_hours: float | None = None
     memory_mb_per_rank: int | None = None
     petsc_options: tuple[str, ...] = ()
+    after: str = ""
     inputs: dict[str, Any] = field(default_factory=dict)
     made: dict[str, str] = field(default_factory=dict)
 

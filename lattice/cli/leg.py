@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import argparse
-import signal
 from pathlib import Path
 
 EPILOG = """\
@@ -25,8 +24,6 @@ def run(options: argparse.Namespace) -> int:
     from lattice.batch.leg import run_leg
     from lattice.batch.study import run_members
 
-    if signal.getsignal(signal.SIGUSR1) is signal.SIG_IGN:
-        signal.signal(signal.SIGUSR1, signal.SIG_DFL)
     folder = Path(options.folder).absolute()
     if options.study:
         return run_members(folder)

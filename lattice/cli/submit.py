@@ -7,6 +7,7 @@ import sys
 import tomllib
 from collections.abc import Sequence
 from contextlib import suppress
+from dataclasses import replace
 from pathlib import Path
 from typing import TYPE_CHECKING
 
@@ -158,7 +159,14 @@ def _entry(options: argparse.Namespace, file: Path, name: str, site: Site, wishe
     command = ["solve", str(folder / INPUT), "--out", str(folder), "--resume"]
     ticket = new_ticket(file.stem, command, name, site, wishes, options.petsc_options)
     ticket = record_inputs(ticket, file, options.overrides, package_version())
-    return Entry(folder, ticket, job_to_toml(job))
+    return Entry(folder, _behind(options, ticket), job_to_toml(job))
+
+
+def _behind(options: argparse.Namespace, ticket: Ticket) -> Ticket:
+    """Return the ticket with the folder of the run that it waits for, if it does."""
+    if options.after is None or not Path(options.after).is_dir():
+        return ticket
+    return replace(ticket, after=str(Path(options.after).absolute()))
 
 
 def _folder(options: argparse.Namespace, file: Path, site: Site, own: str | None) -> Path:
