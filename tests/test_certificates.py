@@ -20,15 +20,19 @@ from tests.solving import TURN, Solved, mean_square, nodes, solve
 # modes, residual below 1e-14), not published.
 WAVES = [
     pytest.param(11.5429484715, 0.2263360073, 0.9451636980, id="alpha=13.5"),
-    pytest.param(12.1673360279, 0.3877627861, 1.3351206129, id="alpha=15"),
+    pytest.param(12.1673360279, 0.3877627861, 1.3351206129, id="alpha=15", marks=pytest.mark.long),
 ]
 # Time-periodic odd states: that they exist at nu = 0.127 and 0.125 is proved by P. Zgliczynski, Found. Comput.
 # Math. 4 (2004) 157-185 and Topol. Methods Nonlinear Anal. 36 (2010) 197-262 (the values of nu from memory);
 # nu = 0.130 besides. L, T, <u^2>, <u_x^2>: independent recomputation, not published.
 ODD = [
-    pytest.param(17.426420614060, 15.3240978080, 2.3609154737, 1.6071490683, id="nu=0.130"),
+    pytest.param(
+        17.426420614060, 15.3240978080, 2.3609154737, 1.6071490683, id="nu=0.130", marks=pytest.mark.long
+    ),
     pytest.param(17.631043132046, 17.6719178249, 2.0493857238, 1.4328914645, id="nu=0.127"),
-    pytest.param(17.771531752633, 19.8144559229, 1.8289773868, 1.3010053394, id="nu=0.125"),
+    pytest.param(
+        17.771531752633, 19.8144559229, 1.8289773868, 1.3010053394, id="nu=0.125", marks=pytest.mark.long
+    ),
 ]
 
 

@@ -94,6 +94,7 @@ class _Marcher:
         self.scale = scale[self.stepper.operator.evolving]
         self.pair = self._pair()
         self.spacing = self.values["period"] / self.lattice.nt
+        self.typical = 1.0
 
     def _pair(self) -> Pair | None:
         if self.law.rotating_pair is None:
@@ -133,22 +134,21 @@ class _Marcher:
         rough = self.stepper.to_spectrum(noise)
         modes = self.stepper.modes
         k2 = modes.kx**2 + modes.ky**2
-        typical = self.typical_wavenumber(spectra)
-        rough = rough * np.exp(-k2 / (2.0 * typical**2)) * self.scale[:, None, None]
+        rough = rough * np.exp(-k2 / (2.0 * self.typical**2)) * self.scale[:, None, None]
         rough[..., 0, 0] = 0.0
         size = self.distance(rough, np.zeros_like(rough))
         factors = np.divide(DISTURBANCE, size, out=np.zeros_like(size), where=size > 0.0)
         result: Complex = spectra + rough * factors[:, None, None, None]
         return result
 
-    def typical_wavenumber(self, spectra: Complex) -> float:
-        """Return the root mean square wavenumber of slices."""
+    def find_typical(self, spectra: Complex) -> None:
+        """Set the size of disturbances to the root mean square wavenumber of slices."""
         modes = self.stepper.modes
         energy = (np.abs(spectra) ** 2).sum(axis=(0, 1))
         energy[0, 0] = 0.0
         total = float(energy.sum())
         k2 = modes.kx**2 + modes.ky**2
-        return math.sqrt(float((energy * k2).sum()) / total) if total > 0.0 else 1.0
+        self.typical = math.sqrt(float((energy * k2).sum()) / total) if total > 0.0 else 1.0
 
 
 def march_check(subject: Subject) -> MarchCheck:
@@ -162,13 +162,15 @@ def march_check(subject: Subject) -> MarchCheck:
         On every rank: a law that cannot be marched, or a field that blows up.
     """
     scale = fluctuation(subject)
-    rate, dt = on_root(subject.comm, lambda: _probe(subject, scale))
+    rate, dt, typical = on_root(subject.comm, lambda: _probe(subject, scale))
     starts = _segments(subject, rate)
     own = starts[subject.comm.rank :: subject.comm.size]
     found: list[tuple[int, float, float, float]] = []
     error: Exception | None = None
     try:
-        found = _march_own(subject, scale, own, dt, rate)
+        marcher = _Marcher(subject, scale)
+        marcher.stepper, marcher.typical = marcher.stepper.with_step(dt), typical
+        found = _march_own(subject, marcher, own, rate)
     except (LatticeError, OSError) as caught:
         error = caught
     raise_together(subject.comm, error)
@@ -194,14 +196,18 @@ def fluctuation(subject: Subject) -> Real:
     return np.where(scale > 1e-12, scale, 1.0)
 
 
-def _probe(subject: Subject, scale: Real) -> tuple[float, float]:
-    """Return the largest local growth rate of errors at a few slices, and a step for all. On one rank."""
+def _probe(subject: Subject, scale: Real) -> tuple[float, float, float]:
+    """Return the largest local growth rate of errors at a few slices, a step and the size of disturbances.
+
+    On one rank.
+    """
     marcher, nt = _Marcher(subject, scale), subject.lattice.nt
     levels = sorted({k * nt // PROBES for k in range(PROBES)})
     slices = np.concatenate([_read(subject, level, level + 1) for level in levels])
     marcher.choose_step(slices)
     time = min(marcher.values["period"], 8.0 * marcher.stepper.dt) if nt > 1 else 8.0 * marcher.stepper.dt
     spectra = marcher.stepper.to_spectrum(slices)
+    marcher.find_typical(spectra)
     disturbed = marcher.disturbed(spectra, levels)
     # Twice: the first part of the way lets the disturbance turn into what grows.
     both = marcher.stepper.advance(np.concatenate([spectra, disturbed]), time)
@@ -209,7 +215,7 @@ def _probe(subject: Subject, scale: Real) -> tuple[float, float]:
     both = marcher.stepper.advance(both, time)
     second = marcher.distance(*np.split(both, 2))
     rates = np.log(np.maximum(second, 1e-300) / np.maximum(first, 1e-300)) / time
-    return max(float(rates.max()), 0.0), marcher.stepper.dt
+    return max(float(rates.max()), 0.0), marcher.stepper.dt, marcher.typical
 
 
 def steady_time(rate: float) -> float:
@@ -230,11 +236,9 @@ def _segments(subject: Subject, rate: float) -> list[tuple[int, int]]:
 
 
 def _march_own(
-    subject: Subject, scale: Real, segments: list[tuple[int, int]], dt: float, rate: float
+    subject: Subject, marcher: _Marcher, segments: list[tuple[int, int]], rate: float
 ) -> list[tuple[int, float, float, float]]:
     """Return first level, mismatch, growth and the marcher's error of this rank's segments."""
-    marcher = _Marcher(subject, scale)
-    marcher.stepper = marcher.stepper.with_step(dt)
     size = subject.lattice.ny * subject.lattice.nx * len(subject.law.components)
     batch = max(1, BATCH_VALUES // size)
     found = []

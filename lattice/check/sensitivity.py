@@ -7,8 +7,8 @@ as right-hand side, `J du = -R_exact`, the same inverse gives the discretisation
 
 References
 ----------
-.. [1] V. Pereyra, "Iterated deferred corrections for nonlinear boundary value problems", Numer. Math. 11
-   (1968) 111-125 (from memory).
+.. [1] V. Pereyra, "Iterated deferred corrections for nonlinear boundary value problems", Numerische
+   Mathematik 11 (1968) 111-125 (from memory).
 """
 
 from __future__ import annotations
