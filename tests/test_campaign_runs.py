@@ -162,7 +162,8 @@ def test_after_a_kill_orphans_are_taken_in_and_nothing_runs_twice(
     path, files = written(tmp_path, THREE), CampaignFolder(tmp_path / "runs")
     first = begin(path, "--at-once", "2")
     # Both members have just been started: neither has come to take its run folder's own lock.
-    kill_when(first, lambda: files.member(1).lock.exists() and is_running(files.member(1)), signal.SIGKILL)
+    lock = files.member(1).lock
+    kill_when(first, lambda: lock.exists() and lock.read_text() != "", signal.SIGKILL)
     assert finish(first)[0] == -signal.SIGKILL
     code, text = finish(begin(path, "--at-once", "2"))
     assert code == 0, text
