@@ -1,26 +1,22 @@
-"""Put the job reference, as the program prints it, into README between its two marks."""
+"""Write jobs/reference.md, the keys of job files as the program knows them."""
 
 from __future__ import annotations
 
-import sys
 from pathlib import Path
 
 from lattice.job.reference import job_reference
 
-BEGIN, END = "<!-- job reference -->\n", "<!-- end of job reference -->\n"
+HEAD = """# Keys of a job file
 
+TOML. A key that is unknown, of the wrong type or in conflict with another is refused with file, key, value,
+requirement and remedy, before any rank allocates anything. File names are relative to the job file or,
+failing that, to the current folder. `lattice solve JOB --set section.key=value` replaces one value.
 
-def main() -> int:
-    """Rewrite README; return 1 if its marks are missing."""
-    readme = Path(__file__).parent.parent / "README.md"
-    before, begin, rest = readme.read_text(encoding="utf-8").partition(BEGIN)
-    _, end, after = rest.partition(END)
-    if not (begin and end):
-        print(f"{readme}: needs the lines {BEGIN.strip()} and {END.strip()}", file=sys.stderr)
-        return 1
-    readme.write_text(f"{before}{begin}{job_reference().strip()}\n{end}{after}", encoding="utf-8")
-    return 0
+Written by `.ci/write_reference.py`; change `lattice/job/schema.py` instead.
+
+"""
+PAGE = Path(__file__).parent.parent / "jobs" / "reference.md"
 
 
 if __name__ == "__main__":
-    sys.exit(main())
+    PAGE.write_text(f"{HEAD}{job_reference().strip()}\n", encoding="utf-8")
