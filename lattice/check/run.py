@@ -46,6 +46,8 @@ if TYPE_CHECKING:
 
 Report = Callable[[str], None]
 T = TypeVar("T")
+SLOW = ("sensitivity", "march", "single march")
+"""Parts whose begin is told, too."""
 
 
 @dataclass(frozen=True)
@@ -142,6 +144,8 @@ class _Check:
 
     def _timed(self, name: str, work: Callable[[], T]) -> T:
         began = time.perf_counter()
+        if name in SLOW:
+            self.report(f"{name} ..")
         result = work()
         self.seconds[name] = time.perf_counter() - began
         self.report(f"{name}: {self.seconds[name]:.2f} s")
