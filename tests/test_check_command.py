@@ -33,6 +33,8 @@ def test_json_and_exit_codes_tell_the_verdict(wave, capsys):
     assert "verdict: CERTIFIED" in text
     assert "says nothing about the plant" in " ".join(text.split())
     assert max(len(line) for line in text.splitlines() if "state.h5" not in line) <= 100
+    assert main(["check", str(wave), "--refinements", "0"]) == 6
+    assert "keeps its certificate" in capsys.readouterr().out
     assert read_certificate(wave).record["verdict"] == "certified"
     assert main(["info", str(wave)]) == 0
     assert "This state is certified" in capsys.readouterr().out

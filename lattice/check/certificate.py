@@ -37,12 +37,15 @@ class Certificate:
     findings : Findings
     record : dict
         Everything as plain data, as it is stored and printed by `--json`.
+    note : str
+        What became of it in the state file.
     """
 
     verdict: str
     criteria: tuple[Criterion, ...]
     findings: Findings
     record: dict[str, Any]
+    note: str = ""
 
     @property
     def reasons(self) -> tuple[str, ...]:

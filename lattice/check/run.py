@@ -33,13 +33,13 @@ from lattice.check.sensitivity import (
 )
 from lattice.check.subject import Subject, foreign_law, open_subject
 from lattice.check.thresholds import Thresholds
-from lattice.check.verdict import FAILED, Criterion, judge
+from lattice.check.verdict import FAILED, REFUSED, Criterion, judge
 from lattice.errors import LatticeError
 from lattice.job.schema import SolveSection
 from lattice.solve.petsc import start_petsc
 from lattice.solve.stop import StopFlag
 from lattice.starts.streaming import on_root
-from lattice.store.certificates import attach_certificate, input_checksums
+from lattice.store.certificates import attach_certificate, input_checksums, read_certificate
 
 if TYPE_CHECKING:
     from mpi4py import MPI
@@ -138,9 +138,20 @@ class _Check:
             datetime.now(UTC).isoformat(timespec="seconds"),
         )
         self.subject.destroy()
-        if self.options.store:
-            on_root(self.comm, lambda: attach_certificate(self.path, certificate.record))
-        return certificate
+        note = on_root(self.comm, lambda: self._keep(certificate)) if self.options.store else ""
+        return replace(certificate, note=note)
+
+    def _keep(self, certificate: Certificate) -> str:
+        """Write the certificate into the state file, on one rank; tell what was done.
+
+        A check without refinement that finds nothing wrong does not replace one with refinement.
+        """
+        stored = read_certificate(self.path)
+        quick = self.options.refinements == 0 and not any(c.result == FAILED for c in certificate.criteria)
+        if quick and stored is not None and stored.valid and stored.record.get("verdict") != REFUSED:
+            return f"{self.path} keeps its certificate of {stored.record.get('written')}."
+        attach_certificate(self.path, certificate.record)
+        return f"The certificate is kept in {self.path}, and holds until the state changes."
 
     def _timed(self, name: str, work: Callable[[], T]) -> T:
         began = time.perf_counter()

@@ -185,8 +185,8 @@ def _check(options: argparse.Namespace, state: Path, wanted: CheckOptions, comm:
             print(to_json(certificate), end="")
         else:
             print(f"\n{state}\n\n{to_text(certificate)}", end="", flush=True)
-            if wanted.store:
-                print(f"\nThe certificate is kept in {state}, and holds until the state changes.")
+            if certificate.note:
+                print(f"\n{certificate.note}")
     # A rank that left early with another code than 0 would have the launcher kill the rest.
     comm.Barrier()
     codes = {"certified": CERTIFIED, "certified with wide bands": CERTIFIED_WIDE}
