@@ -17,9 +17,9 @@ from numpy.typing import NDArray
 
 from lattice.check.fourier import Fourier
 from lattice.check.observables import mean_observables, read_named
-from lattice.check.observation import Observation, correlation_lengths
+from lattice.check.observation import Observation
 from lattice.check.resolution import AxisSpectrum, measure_resolution
-from lattice.check.statistics import Histogram, histograms
+from lattice.check.statistics import Histogram, correlation_lengths, histograms
 from lattice.errors import InputError
 from lattice.geometry.blocks import Blocks
 from lattice.geometry.lattice import Lattice
@@ -125,8 +125,8 @@ def combine(observations: Sequence[Observation], weight: str) -> Ensemble:
         raise InputError(f"states of one law are wanted, got several ({names}); observe them apart")
     raw = np.array([_weight(o, weight) for o in observations])
     weights = raw / raw.sum()
-    shared = [n for n in _numbers(observations[0]) if all(n in _numbers(o) for o in observations)]
-    table = np.array([[_numbers(o)[name] for name in shared] for o in observations])
+    shared = [n for n in observations[0].observables if all(n in o.observables for o in observations)]
+    table = np.array([[o.observables[name] for name in shared] for o in observations])
     means = weights @ table
     spreads = np.sqrt(np.maximum(weights @ (table - means) ** 2, 0.0))
     return Ensemble(
@@ -135,10 +135,6 @@ def combine(observations: Sequence[Observation], weight: str) -> Ensemble:
         dict(zip(shared, spreads.tolist(), strict=True)),
         float(1.0 / (weights**2).sum()),
     )
-
-
-def _numbers(observation: Observation) -> dict[str, float]:
-    return observation.observables | observation.lengths
 
 
 def _weight(observation: Observation, weight: str) -> float:

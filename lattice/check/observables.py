@@ -12,6 +12,8 @@ from numpy.typing import NDArray
 from lattice.check.balances import balances_of
 from lattice.check.extrema import extremes
 from lattice.check.fourier import Fourier
+from lattice.check.resolution import measure_resolution
+from lattice.check.statistics import correlation_lengths
 from lattice.errors import InputError
 from lattice.laws.law import Law
 from lattice.laws.notation import read_expression
@@ -104,7 +106,8 @@ def measure_with(
     found |= mean_observables(fourier)
     for component, (low, high) in zip(system.law.components, extremes(fourier, owned), strict=True):
         found |= {f"min_{component}": low, f"max_{component}": high}
-    return found | {entry.name: fourier.mean(entry.expression) for entry in named}
+    lengths = correlation_lengths(measure_resolution(fourier, owned))
+    return found | {entry.name: fourier.mean(entry.expression) for entry in named} | lengths
 
 
 def mean_observables(fourier: Fourier) -> dict[str, float]:

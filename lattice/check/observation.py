@@ -13,7 +13,7 @@ from numpy.typing import NDArray
 from lattice.check.fourier import Fourier
 from lattice.check.observables import measure_with, read_named
 from lattice.check.resolution import AxisSpectrum, measure_resolution
-from lattice.check.statistics import Histogram, correlation_length, histograms
+from lattice.check.statistics import Histogram, histograms
 from lattice.check.subject import Subject, open_subject
 from lattice.store.certificates import read_certificate
 
@@ -39,8 +39,6 @@ class Observation:
     certificate : str
         Its verdict, or why there is none that holds.
     spectra : tuple of AxisSpectrum
-    lengths : dict of str to float
-        Correlation lengths and the correlation time, as `correlation_length_<axis>_<component>`.
     histograms : tuple of Histogram
     """
 
@@ -50,7 +48,6 @@ class Observation:
     bands: dict[str, tuple[float, float]]
     certificate: str
     spectra: tuple[AxisSpectrum, ...]
-    lengths: dict[str, float]
     histograms: tuple[Histogram, ...]
 
     def record(self) -> dict[str, Any]:
@@ -66,7 +63,7 @@ class Observation:
                     if name in self.bands
                     else {}
                 )
-                for name, value in (self.observables | self.lengths).items()
+                for name, value in self.observables.items()
             },
             "spectra": [
                 {
@@ -109,17 +106,11 @@ def observe(path: str | os.PathLike[str], comm: MPI.Intracomm, given: Sequence[s
         bands,
         words,
         spectra,
-        correlation_lengths(spectra),
         histograms(subject.owned, subject.law.components, comm.allreduce, _ends(subject)),
     )
     fourier.destroy()
     subject.destroy()
     return found
-
-
-def correlation_lengths(spectra: Sequence[AxisSpectrum]) -> dict[str, float]:
-    """Return the correlation length of every spectrum by name."""
-    return {f"correlation_length_{s.axis}_{s.component}": correlation_length(s) for s in spectra}
 
 
 def _ends(subject: Subject) -> Array:

@@ -16,6 +16,7 @@ from numpy.typing import NDArray
 
 from lattice.check.convergence import Band, Series, band_of
 from lattice.check.observables import Named, measure
+from lattice.check.statistics import CORRELATION
 from lattice.errors import LatticeError
 from lattice.geometry.lattice import Lattice
 from lattice.laws.calculus import order_of
@@ -277,6 +278,8 @@ def scale_of(name: str, subject: Subject, own: Mapping[str, float]) -> float:
     for unknown in subject.system.unknowns:
         if unknown.name == name:
             return abs(unknown.unit)
+    if name.startswith(CORRELATION):
+        return abs(own[name])
     size = own.get("mean_square", 1.0)
     return math.sqrt(size) if name.startswith(("min_", "max_")) else size
 

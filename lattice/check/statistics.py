@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -14,6 +14,9 @@ Array = NDArray[np.float64]
 
 BINS = 61
 LAGS = 400
+CORRELATION = "correlation_length"
+"""Begin of the names of correlation lengths, that in t being a time. They jump where a correlation that had
+kept above zero first touches it, so that no certificate depends on them."""
 
 
 @dataclass(frozen=True)
@@ -57,24 +60,31 @@ def correlation_length(spectrum: AxisSpectrum) -> float:
     >>> round(correlation_length(wave), 4)
     0.5
     """
-    if len(spectrum.wavenumbers) < 2:
+    energy, k = np.array(spectrum.energy[1:]), np.array(spectrum.wavenumbers[1:])
+    total = energy.sum()
+    if not total > 0.0:
         return float("nan")
-    half = np.pi / spectrum.wavenumbers[1]
+    end = _first_zero(spectrum, float(np.pi / k[0]))
+    return float((energy * np.sin(k * end) / k).sum() / total)
+
+
+def _first_zero(spectrum: AxisSpectrum, half: float) -> float:
+    """Return the first zero of the correlation; half a period where it has none before."""
     lags = np.linspace(0.0, half, LAGS + 1)
-    values = correlation(spectrum, lags)
-    below = np.flatnonzero(values <= 0.0)
+    below = np.flatnonzero(correlation(spectrum, lags) <= 0.0)
     if not below.size:
-        return _trapezium(values, lags)
-    last = int(below[0])
-    share = values[last - 1] / (values[last - 1] - values[last])
-    values, lags = values[: last + 1].copy(), lags[: last + 1].copy()
-    lags[-1] = lags[-2] + share * (lags[-1] - lags[-2])
-    values[-1] = 0.0
-    return _trapezium(values, lags)
+        return half
+    low, high = float(lags[below[0] - 1]), float(lags[below[0]])
+    for _ in range(50):
+        middle = 0.5 * (low + high)
+        positive = correlation(spectrum, np.array([middle]))[0] > 0.0
+        low, high = (middle, high) if positive else (low, middle)
+    return 0.5 * (low + high)
 
 
-def _trapezium(values: Array, lags: Array) -> float:
-    return float(0.5 * ((values[1:] + values[:-1]) * np.diff(lags)).sum())
+def correlation_lengths(spectra: Sequence[AxisSpectrum]) -> dict[str, float]:
+    """Return the correlation length of every spectrum by name."""
+    return {f"{CORRELATION}_{s.axis}_{s.component}": correlation_length(s) for s in spectra}
 
 
 def histograms(

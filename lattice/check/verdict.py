@@ -7,9 +7,11 @@ from collections.abc import Iterator
 from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
+from lattice.check.statistics import CORRELATION
 from lattice.check.thresholds import Thresholds
 
 if TYPE_CHECKING:
+    from lattice.check.convergence import Band
     from lattice.check.findings import Findings
 
 PASSED, WIDE, FAILED, NOT_RUN = "passed", "wide", "failed", "not run"
@@ -185,8 +187,7 @@ class _Judge:
         yield self._bands()
 
     def _orders(self) -> Criterion:
-        bands = self.found.refinement.bands.values() if self.found.refinement else ()
-        seen = [b for b in bands if b.kind != "exact"]
+        seen = [b for b in self._judged().values() if b.kind != "exact"]
         # Errors that cancel by chance show any order; where the widened band is narrow, it does no harm.
         odd = [b for b in seen if not b.near_nominal and self._relative(b.name) > 0.1 * self.limits.band]
         if not odd:
@@ -199,10 +200,14 @@ class _Judge:
         return Criterion("order", WIDE, math.nan if order is None else order, odd[0].nominal, why)
 
     def _bands(self) -> Criterion:
-        bands = self.found.refinement.bands if self.found.refinement else {}
-        worst = max(bands, key=self._relative)
+        worst = max(self._judged(), key=self._relative)
         why = f"half width of the band of {worst}, relative to its size,"
         return self._number("bands", self._relative(worst), "band", why)
+
+    def _judged(self) -> dict[str, Band]:
+        """Return the bands that the verdict depends on."""
+        bands = self.found.refinement.bands if self.found.refinement else {}
+        return {name: band for name, band in bands.items() if not name.startswith(CORRELATION)}
 
     def _relative(self, name: str) -> float:
         assert self.found.refinement is not None

@@ -162,7 +162,7 @@ def _one(observation: Observation) -> str:
     lines = [f"{observation.path}: {observation.meta.title or observation.meta.law}"]
     lines.append(f"certificate: {observation.certificate}")
     lines.append(f"{'observable':<26}{'value':>18}{'band (+-)':>12}{'extrapolated':>18}")
-    for name, value in (observation.observables | observation.lengths).items():
+    for name, value in observation.observables.items():
         line = f"{name:<26}{value:>18.11g}"
         if name in observation.bands:
             half, best = observation.bands[name]
