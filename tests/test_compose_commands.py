@@ -47,6 +47,7 @@ def test_an_excerpt_is_written_drawn_and_ready_to_be_solved(folder, capsys):
     assert (job.box.period, job.box.length_x, job.box.drift_x) == (8.0, 12.0, -0.2)
     assert job.law.parameters["dispersion"] == 0.4
     assert job.start.file.endswith("piece.h5")
+    assert job.solve.stages == ("damped", "newton", "refine")
     assert job.make_lattice() == state.meta.lattice
 
 

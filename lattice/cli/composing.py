@@ -145,6 +145,9 @@ def job_text(planned: Composition, out: Path, origin: str) -> str:
     if law.dimensions == 2:
         tables["lattice"] |= {"ny": lattice.ny, "order_y": lattice.order_y}
     tables["start"] = {"kind": "state", "file": out.name}
+    if lattice.nt > 1:
+        # A state file counts as near a state unless told otherwise.
+        tables["solve"] = {"stages": ["damped", "newton", "refine"]}
     box = f"# Box, drift and parameters come from {out.name}; give [box] values to change them."
     return f"{MARK}{origin}.\n{box}\n\n{tomli_w.dumps(tables)}"
 
