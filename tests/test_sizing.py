@@ -32,7 +32,7 @@ from lattice.sizing.fit import fit_speeds
 from lattice.sizing.layouts import candidates, cheapest, compare, lay_out, warnings_of
 from lattice.sizing.measure import Sample
 from lattice.sizing.problem import problem_of
-from lattice.sizing.sample import waves
+from lattice.sizing.sample import linearise_at_waves
 from lattice.solve.direct import Direct
 from lattice.solve.petsc import start_petsc
 from lattice.system.system import System
@@ -67,7 +67,7 @@ def test_counts_and_factors_are_those_of_the_matrix(name: str, lattice: Lattice)
     system, values, free = system_of(name, lattice)
     problem = problem_of(system.law, lattice, free, values)
     x = system.vector()
-    waves(system, x)
+    linearise_at_waves(system, x)
     direct = Direct(system)
     direct.update()
     factor = direct._lu._ksp.getPC().getFactorMatrix()

@@ -121,12 +121,20 @@ def _calibrate(options: argparse.Namespace) -> None:
 
     counts = options.ranks or ((1, 2) if _cores() > 1 else (1,))
     found = calibrate(counts, _launch(options), report)
-    path = calibration_path(options.name or options.site)
+    path = calibration_path(_calibration_name(options))
     save_calibration(found, path)
     for note in found.notes:
         print(f"caution: {note}", file=sys.stderr)
     report(f"calibrated in {found.seconds:.0f} s: {calibration_text(found)}")
     report(f"its own measurements fit within {found.error:.0%}; kept in {path}")
+
+
+def _calibration_name(options: argparse.Namespace) -> str | None:
+    """Return the name of the calibration meant: given, the site's, None for this machine's."""
+    from lattice.batch.sites import load_site
+
+    name, site = load_site(options.site)
+    return options.name or (None if site.scheduler == "local" else name)
 
 
 def _cores() -> int:
@@ -177,7 +185,7 @@ def _calibration(options: argparse.Namespace) -> Calibration | None:
     """Return the calibration named, the site's, or where the site is this machine, the host's."""
     from lattice.sizing.calibration import calibration_path, load_calibration
 
-    name = options.name or options.site
+    name = _calibration_name(options)
     found = load_calibration(calibration_path(name))
     if found is None and options.name:
         raise InputError(

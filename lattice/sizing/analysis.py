@@ -11,12 +11,13 @@ from collections.abc import Mapping, Sequence
 from dataclasses import replace
 from typing import TYPE_CHECKING, Any
 
+from lattice.errors import InputError
 from lattice.geometry.lattice import Lattice
 from lattice.laws.law import Law
 from lattice.sizing.factors import Factors, assumed, growth
 from lattice.sizing.problem import Problem, problem_of
 from lattice.sizing.sample import waves
-from lattice.solve.direct import choose_pins, lu_package
+from lattice.solve.direct import lu_package
 from lattice.system.assembly import AssembledJacobian
 from lattice.system.system import System
 
@@ -47,10 +48,14 @@ def analyse(
     problem = problem_of(law, lattice, free, values, subspace)
     if lu_package(comm.size) != "mumps":
         return assumed(problem.numbers, problem.nonzeros, problem.axes)
-    if problem.nonzeros <= MOST_NONZEROS:
-        return _analysed(law, lattice, values, free, comm, subspace)
-    sizes = [_shrunk(lattice, problem, most) for most in (MOST_NONZEROS // 4, MOST_NONZEROS)]
-    parts = [_analysed(law, small, _shrunk_values(values, small, lattice), free, comm) for small in sizes]
+    try:
+        if problem.nonzeros <= MOST_NONZEROS:
+            return _analysed(law, lattice, values, free, comm, subspace)
+        sizes = [_shrunk(lattice, problem, most) for most in (MOST_NONZEROS // 4, MOST_NONZEROS)]
+        parts = [_analysed(law, small, _shrunk_values(values, small, lattice), free, comm) for small in sizes]
+    except InputError:
+        # A part, such as a slab, may be too thin for a periodic lattice of its own.
+        return assumed(problem.numbers, problem.nonzeros, problem.axes)
     return growth(parts[0], parts[1], problem.numbers, problem.axes)
 
 
@@ -84,15 +89,14 @@ def _analysed(
     subspace: Subspace | None = None,
 ) -> Factors:
     system = System(law, lattice, values, free, {}, comm, (), subspace)
-    x = system.vector()
-    waves(system, x)
+    field = system.blocks.vector()
+    system.blocks.owned(field)[...] = waves(system)
+    # No conditions, no pins: they change no entry's place, and the loops they need would be compiled.
+    system.operator.linearise(field, system.values)
     assembled = AssembledJacobian(system.operator)
-    matrix = assembled.update()
-    assembled.add_to_diagonal(choose_pins(system, matrix))
-    found = analysis_of(matrix)
-    assembled.destroy()
-    x.destroy()
-    system.destroy()
+    found = analysis_of(assembled.update())
+    for item in (assembled, field, system):
+        item.destroy()
     return found
 
 

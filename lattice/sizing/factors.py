@@ -58,6 +58,8 @@ class Factors:
         return asdict(self)
 
 
+SAFETY = 1.25
+"""Over what the growth laws alone give: memory that is missing costs more than memory that is left."""
 SHARED = 0.35
 """By how much the memory of all ranks together grows for every doubling of the ranks (measured at two ranks:
 0.32 in one space dimension, 0.34 in two)."""
@@ -160,5 +162,5 @@ def assumed(unknowns: int, nonzeros: int, long_axes: int) -> Factors:
     else:
         per_law, work = 4.0 * width, 10.0 * width**2
     filled = per_law * entries(n)
-    megabytes = BYTES_PER_ENTRY * filled / 1e6
+    megabytes = SAFETY * BYTES_PER_ENTRY * filled / 1e6
     return Factors(int(n), nonzeros, filled, work * flops(n), megabytes, megabytes, "law")

@@ -16,7 +16,7 @@ from typing import TYPE_CHECKING, Any
 from lattice.geometry.lattice import Lattice
 from lattice.laws.catalogue import load_law
 from lattice.sizing.problem import Problem, problem_of
-from lattice.sizing.sample import waves
+from lattice.sizing.sample import linearise_at_waves
 from lattice.solve.direct import Direct
 from lattice.solve.smoothers import inverse_blocks
 from lattice.spectral.transform import Transform
@@ -72,7 +72,7 @@ def _measure_case(name: str, shape: tuple[int, int, int], comm: MPI.Intracomm) -
     system = System(law, lattice, values, free, {}, comm)
     problem = problem_of(law, lattice, free, values)
     x = system.vector()
-    waves(system, x)
+    linearise_at_waves(system, x)
     case = _Case(system, problem, x, comm)
     samples = [*case.products(), *case.transforms(), case.written(values)]
     if LU_FROM <= problem.numbers <= LU_TO:

@@ -5,6 +5,7 @@ from __future__ import annotations
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
+from numpy.typing import NDArray
 
 if TYPE_CHECKING:
     from lattice.system.system import System
@@ -13,8 +14,15 @@ WAVE = 9.0
 """About the length of the waves, in the units of the film laws."""
 
 
-def waves(system: System, x: Any) -> None:
-    """Set a vector of unknowns to a few waves of size one, and linearise there. Collective."""
+def linearise_at_waves(system: System, x: Any) -> None:
+    """Set a vector of unknowns to waves, with the phase conditions there, and linearise. Collective."""
+    system.pack(waves(system), system.values, x)
+    system.set_reference(x)
+    system.linearise(x)
+
+
+def waves(system: System) -> NDArray[np.float64]:
+    """Return this rank's part of a field of a few waves of size one."""
     lattice, block, values = system.lattice, system.blocks.block, system.values
     angles = [
         2.0 * np.pi * np.arange(low, high) / nodes
@@ -29,9 +37,7 @@ def waves(system: System, x: Any) -> None:
     for c in range(system.blocks.components):
         field[..., c] = np.cos(kx * z + ky * y + t + c) + np.cos((kx + 1) * z - 2 * t + 0.3 + 2 * c)
         field[..., c] += np.cos((kx + 2) * z - (ky + 1) * y + t + 0.9)
-    system.pack(field, values, x)
-    system.set_reference(x)
-    system.linearise(x)
+    return field
 
 
 def _number(length: float, nodes: int) -> int:

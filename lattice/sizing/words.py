@@ -24,7 +24,8 @@ def describe(layout: Layout, calibration: Calibration | None, name: str) -> list
     for leg in estimate.legs:
         lines += ["", *_leg_lines(leg)]
     lines += ["", f"memory: {_mb(estimate.rank_mb)} on the fullest rank, {_mb(estimate.all_ranks_mb)} in all"]
-    lines[-1] += f" (within {MEMORY_ERROR:.0%})"
+    rough = any(leg.lu_origin == "law" for leg in estimate.legs)
+    lines[-1] += " (its LU good to a factor of two)" if rough else f" (within {MEMORY_ERROR:.0%})"
     lines += _time_lines(layout, calibration, name)
     lines.append(
         f"files: state {_mb(estimate.state_mb)}, at most {_mb(estimate.scratch_mb)} in the run's folder"
