@@ -34,6 +34,9 @@ class Findings:
         Parts that may be left out or fail; None then.
     march_failure, sensitivity_failure : str
         Why.
+    march_result : str
+        What a missing march means: "not run" where it was left out, "wide" where the law cannot be marched,
+        "failed" where the slices blow up.
     correction : float
         Estimate of the field's discretisation error to first order, in units of the fluctuation.
     observables : dict of str to float
@@ -55,6 +58,7 @@ class Findings:
     balances: tuple[Balance, ...]
     march: MarchCheck | None
     march_failure: str
+    march_result: str
     sensitivity: Sensitivity | None
     sensitivity_failure: str
     correction: float

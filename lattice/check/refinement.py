@@ -60,6 +60,8 @@ class Level:
     observables : dict of str to float
     reason : str
         How the solve ended.
+    interrupted : bool
+        Whether a signal ended it.
     """
 
     shape: tuple[int, int, int]
@@ -71,6 +73,7 @@ class Level:
     seconds: float
     observables: dict[str, float]
     reason: str
+    interrupted: bool = False
 
 
 @dataclass(frozen=True)
@@ -177,7 +180,7 @@ def _solve(
     x = system.vector()
     system.pack(start, values, x)
     report(f"refinement: {_nodes(lattice)} nodes, {system.blocks.size} field unknowns")
-    lines, unit = Steps(report), max(1.0, term)
+    lines, unit, interrupted = Steps(report), max(1.0, term), False
     floor = rounding_floor(subject.law, lattice, values, math.sqrt(_square(system, start)))
     options = options.model_copy(update={"residual_rms": max(WANTED * unit, floor)})
     try:
@@ -189,8 +192,9 @@ def _solve(
         newton.destroy()
         converged, reason, steps = result.converged, result.reason, len(result.steps) - 1
         residual = result.steps[-1].residual_rms if result.steps else math.nan
+        interrupted = result.interrupted
         # Where rounding stops Newton's method just short of what is wanted, the state is solved all the same.
-        converged = converged or (residual <= ACCEPTED * unit and not result.interrupted)
+        converged = converged or (residual <= ACCEPTED * unit and not interrupted)
     except LatticeError as error:
         converged, reason, steps, residual = False, str(error), 0, math.nan
     solved, found = system.field_of(x), dict(system.values_of(x))
@@ -206,6 +210,7 @@ def _solve(
         time.perf_counter() - began,
         observables,
         reason,
+        interrupted,
     )
     return level, (system, solved, found)
 

@@ -33,8 +33,8 @@ from lattice.check.sensitivity import (
 )
 from lattice.check.subject import Subject, foreign_law, open_subject
 from lattice.check.thresholds import Thresholds
-from lattice.check.verdict import FAILED, REFUSED, Criterion, judge
-from lattice.errors import LatticeError
+from lattice.check.verdict import FAILED, NOT_RUN, REFUSED, WIDE, Criterion, judge
+from lattice.errors import InputError, LatticeError
 from lattice.job.schema import SolveSection
 from lattice.solve.petsc import start_petsc
 from lattice.solve.stop import StopFlag
@@ -175,7 +175,7 @@ class _Check:
         )
         fourier.destroy()
         sensitivity, correction, failure = self._timed("sensitivity", lambda: self._linear(residuals, exact))
-        march, march_failure = self._timed("march", self._march)
+        march, march_failure, march_result = self._timed("march", self._march)
         single = float("nan")
         if self.options.single_march and march is not None:
             single = self._timed("single march", lambda: single_march(subject))
@@ -191,6 +191,7 @@ class _Check:
             balances=balances,
             march=march,
             march_failure=march_failure,
+            march_result=march_result,
             sensitivity=sensitivity,
             sensitivity_failure=failure,
             correction=correction.relative if correction else float("nan"),
@@ -225,13 +226,16 @@ class _Check:
             inverse.destroy()
         return sensitivity, correction, failure
 
-    def _march(self) -> tuple[MarchCheck | None, str]:
+    def _march(self) -> tuple[MarchCheck | None, str, str]:
+        """Return the march, or why there is none and what that means."""
         if not self.options.march:
-            return None, "the slices were not marched"
+            return None, "the slices were not marched", NOT_RUN
         try:
-            return march_check(self.subject), ""
+            return march_check(self.subject), "", ""
+        except InputError as error:
+            return None, f"the law cannot be marched: {error}", WIDE
         except LatticeError as error:
-            return None, f"the slices cannot be marched: {error}"
+            return None, f"the slices cannot be marched: {error}", FAILED
 
     def _first_order(
         self, own: dict[str, float], correction: Correction | None, scales: dict[str, float]

@@ -160,7 +160,7 @@ class _Judge:
     def _march(self) -> Iterator[Criterion]:
         march = self.found.march
         if march is None:
-            yield Criterion("march", NOT_RUN, math.nan, math.nan, self.found.march_failure)
+            yield Criterion("march", self.found.march_result, math.nan, math.nan, self.found.march_failure)
             return
         why = f"largest mismatch of {len(march.mismatches)} marched segments in units of the fluctuation"
         judged = self._number("march", march.largest, "march", why)
@@ -178,6 +178,10 @@ class _Judge:
         lost = next((level for level in found.levels if not level.converged), None)
         if lost is not None:
             nodes = " x ".join(str(n) for n in lost.shape if n > 1)
+            if lost.interrupted:
+                why = f"refinement to {nodes} nodes was {lost.reason}"
+                yield Criterion("refinement", NOT_RUN, lost.residual_rms, math.nan, why)
+                return
             why = f"the state did not survive refinement to {nodes} nodes: {lost.reason}"
             yield Criterion("refinement", FAILED, lost.residual_rms, math.nan, why)
             return
