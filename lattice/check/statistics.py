@@ -12,7 +12,7 @@ from lattice.check.resolution import AxisSpectrum
 
 Array = NDArray[np.float64]
 
-BINS = 61
+MOST_BINS = 61
 LAGS = 400
 CORRELATION = "correlation_length"
 """Begin of the names of correlation lengths, that in t being a time. They jump where a correlation that had
@@ -103,11 +103,13 @@ def histograms(
         Lowest and highest value, the same on all ranks.
     """
     found = []
+    values = float(add(np.array([float(owned[..., 0].size)]))[0])
+    bins = min(MOST_BINS, round(2.0 * values ** (1.0 / 3.0)))  # Rice's rule
     for c, component in enumerate(components):
         low, high = ends[c]
         if not high > low:
             low, high = low - 0.5, high + 0.5
-        edges = np.linspace(low, high, BINS + 1)
+        edges = np.linspace(low, high, bins + 1)
         counts = add(np.histogram(owned[..., c], edges)[0].astype(float))
         total = counts.sum()
         density = counts / (total * np.diff(edges)) if total else counts

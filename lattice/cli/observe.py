@@ -195,23 +195,24 @@ def _panels(observations: Sequence[Observation], march: MarchStatistics | None) 
     names = {"t": "frequency", "x": "wavenumber in x", "y": "wavenumber in y"}
     several = len(observations) > 1
     every = [(o, {(s.component, s.axis): s for s in o.spectra}) for o in observations]
+    labels = {id(o): _label(o.path) if several and len(every) <= 5 else "" for o in observations}
     of_march = {(s.component, s.axis): s for s in march.spectra} if march else {}
     for key in every[0][1]:
         component, axis = key
-        spectra = [(o.path if several else "", found[key]) for o, found in every if key in found]
+        spectra = [(labels[id(o)], found[key]) for o, found in every if key in found]
         densities, correlations = [], []
         if key in of_march:
             spectra = [("march", of_march[key]), *spectra]
         for label, s in spectra:
             k = np.array(s.wavenumbers)
             grey = label == "march"
-            shown = label if (len(spectra) <= 5 or grey) else ""
+            shown = "" if panels and not grey else label  # told once
             # Per unit of wavenumber, so that boxes of different lengths can be compared.
             densities.append(Curve(shown, k[1:], np.array(s.energy[1:]) / k[1], grey))
             lags = np.linspace(0.0, math.pi / k[1], 200)
             correlations.append(Curve(shown, lags, correlation(s, lags), grey))
         title = f"{component}: energy by {names[axis]}"
-        limit = every[0][1][key].limit
+        limit = None if several else every[0][1][key].limit
         panels.append(Panel(title, names[axis], "density", tuple(densities), True, limit))
         panels.append(
             Panel(
@@ -222,12 +223,17 @@ def _panels(observations: Sequence[Observation], march: MarchStatistics | None) 
             )
         )
     for c, component in enumerate(observations[0].meta.components):
-        found = [(o.path if several and len(every) <= 5 else "", o.histograms[c]) for o in observations]
+        found = [("", o.histograms[c]) for o in observations]
         if march is not None:
             found = [("march", march.histograms[c]), *found]
         curves = tuple(
-            Curve(label, 0.5 * (h.edges[1:] + h.edges[:-1]), h.density, label == "march")
-            for label, h in found
+            Curve("", 0.5 * (h.edges[1:] + h.edges[:-1]), h.density, label == "march") for label, h in found
         )
         panels.append(Panel(f"{component}: how often", component, "density", curves, steps=True))
     return panels
+
+
+def _label(path: str) -> str:
+    """Return a short name for a state: its file's, or its run's."""
+    file = Path(path)
+    return file.parent.name if file.name == "state.h5" else file.stem

@@ -137,15 +137,17 @@ def _panel(axes: Axes, panel: Panel) -> None:
     if panel.limit is not None and panel.limit < max(ends):
         axes.axvline(panel.limit, color=BAD, linewidth=0.9, linestyle=(0, (4, 2)))
         axes.text(
-            panel.limit, 0.97, " not represented", transform=axes.get_xaxis_transform(), va="top",
+            panel.limit, 0.03, " not represented", transform=axes.get_xaxis_transform(), va="bottom",
             fontsize=7.5, color=BAD,
         )  # fmt: skip
     if any(c.label for c in panel.curves):
-        axes.legend(loc="best", handlelength=1.4)
+        axes.legend(loc="upper right", handlelength=1.4)
 
 
 def _curve(axes: Axes, panel: Panel, curve: Curve, colour: str) -> None:
-    shown = curve.y > 0.0 if panel.logarithmic else np.ones(curve.y.size, dtype=bool)
+    shown = (
+        curve.y > 10.0**-DECADES * curve.y.max() if panel.logarithmic else np.ones(curve.y.size, dtype=bool)
+    )
     width = 2.4 if curve.reference else 1.1
     style: dict[str, Any] = {"color": colour, "linewidth": width, "label": curve.label or None}
     style |= {"alpha": 0.6, "zorder": 1} if curve.reference else {"zorder": 2}
