@@ -62,8 +62,8 @@ class Band:
         Observed order; None where there are too few lattices or no differences to see.
     nominal : float
     kind : str
-        "monotone", "oscillating", "diverging", "exact" (no difference beyond noise) or "assumed" (two
-        lattices, or the correction to first order).
+        "monotone", "oscillating", "diverging", "exact" (no difference beyond noise between the finest two) or
+        "assumed" (two lattices, or the correction to first order).
     values : tuple of float
         On all lattices.
     """
@@ -153,7 +153,7 @@ def convergence_kind(values: Sequence[float], ratios: Sequence[float], noise: fl
     """
     coarse, medium, fine = values
     to_coarse, to_fine = coarse - medium, medium - fine
-    if max(abs(to_coarse), abs(to_fine)) <= noise:
+    if abs(to_fine) <= noise:
         return "exact"
     fall = abs(to_coarse / to_fine) if to_fine else math.inf
     if fall <= _fall(0.0, ratios):
