@@ -71,7 +71,7 @@ def write_recurrences(options: argparse.Namespace) -> list[dict[str, Any]]:
         from lattice.geometry.block import Block
 
         write_state(file, field, Block.whole(lattice), replace(meta), MPI.COMM_SELF)
-        composed = Composition("state", ExcerptOptions(str(file)), law, lattice, dict(meta.values))
+        composed = Composition("excerpt", ExcerptOptions(str(file)), law, lattice, dict(meta.values))
         file.with_suffix(".toml").write_text(
             job_text(composed, file, f"recurrence {number} of seed {options.seed}")
         )
@@ -132,7 +132,16 @@ def main() -> int:
     different = sum(bool(row["settled"] and not row["same_as"]) for row in rows)
     print(f"{settled} of {len(rows)} become states, {different} different ones")
     out = options.out or options.folder / "recurrent.json"
-    out.write_text(json.dumps({"machine": describe(), "command": " ".join(sys.argv), "rows": rows}, indent=1))
+    out.write_text(
+        json.dumps(
+            {
+                "machine": describe(),
+                "command": " ".join(["python -m scaling.recurrent", *sys.argv[1:]]),
+                "rows": rows,
+            },
+            indent=1,
+        )
+    )
     return 0
 
 

@@ -20,6 +20,7 @@ from lattice.geometry.lattice import Lattice
 from lattice.laws.catalogue import load_law, read_law
 from lattice.laws.law import Law
 from lattice.starts import STARTS
+from lattice.starts.mosaic import report_settled
 from lattice.starts.options import ExcerptOptions, MemberOptions, MosaicOptions
 from lattice.starts.rows import local_rows, trigonometric_rows
 from lattice.starts.seams import piece_samples, window_samples
@@ -266,6 +267,16 @@ def test_members_of_unlike_size_meet_half_way(tmp_path):
     assert (values["period"], values["length_x"]) == (12.0, 40.0)
     assert "mosaic:   a (row 1, column 1) stretched by +20 % in t" in lines
     assert "mosaic:   b (row 1, column 2) stretched by -14 % in t" in lines
+
+
+def test_what_has_become_of_a_mosaic_is_told_by_member(tmp_path):
+    members = {"a": MemberOptions(store(tmp_path / "a.h5", waves((10, 1, 32))))}
+    grid, lines, start = Lattice(10, 1, 64), [], MosaicOptions(("a a",), members)
+    field, values, _ = begin("mosaic", start, grid, {})
+    field[:, :, 32:] *= 3.0  # as far from before as sqrt(2^2/((1 + 3^2)/2)) of both
+    report_settled(start, grid, values, law_of(FILM), field, Block.whole(grid), ALONE, lines.append)
+    assert [line.partition(", changed by ")[2] for line in lines] == ["82 %", "0 %", "89 %"]
+    assert lines[2].startswith("mosaic:   a (row 1, column 2): residual_rms ")
 
 
 @pytest.mark.parametrize(

@@ -3,11 +3,14 @@
 from __future__ import annotations
 
 import argparse
-from collections.abc import Callable
+import os
+from collections.abc import Callable, Mapping
+from dataclasses import asdict, fields
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 from lattice.errors import InputError, LatticeError, StateFileError
+from lattice.starts.options import MemberOptions
 
 MARK = "# Composed from "
 """How a job file begins that was written here, and may be replaced."""
@@ -80,7 +83,7 @@ def _compose(
         return plan()
 
     planned = on_root(comm, checked)
-    job = job_text(planned, out, origin)
+    job = own_job.read_text(encoding="utf-8") if own_job else job_text(planned, out, origin)
     meta = write_composition(planned, out, comm, _printer(comm), job)
     if comm.Get_rank() == 0:
         _tell(meta, out)
@@ -144,12 +147,29 @@ def job_text(planned: Composition, out: Path, origin: str) -> str:
     tables["lattice"] |= {"order_t": lattice.order_t, "order_x": lattice.order_x}
     if law.dimensions == 2:
         tables["lattice"] |= {"ny": lattice.ny, "order_y": lattice.order_y}
-    tables["start"] = {"kind": "state", "file": out.name}
-    if lattice.nt > 1:
-        # A state file counts as near a state unless told otherwise.
-        tables["solve"] = {"stages": ["damped", "newton", "refine"]}
-    box = f"# Box, drift and parameters come from {out.name}; give [box] values to change them."
-    return f"{MARK}{origin}.\n{box}\n\n{tomli_w.dumps(tables)}"
+    tables["start"] = _start_table(planned, out.parent)
+    box = "# Box, drift and parameters come from there; give [box] values to change them."
+    return f"{MARK}{origin}; {out.name} shows it.\n{box}\n\n{tomli_w.dumps(tables)}"
+
+
+def _start_table(planned: Composition, folder: Path) -> dict[str, Any]:
+    """Return the start section of a composition, defaults left out, paths relative to a folder."""
+    defaults = {f.name: f.default for f in (*fields(planned.start), *fields(MemberOptions))}
+    given = {"kind": planned.kind, **_given(asdict(planned.start), defaults)}
+    for table in (given, *given.get("members", {}).values()):
+        if "file" in table:
+            table["file"] = os.path.relpath(table["file"], folder)
+    return given
+
+
+def _given(table: Mapping[str, Any], defaults: Mapping[str, Any]) -> dict[str, Any]:
+    kept: dict[str, Any] = {}
+    for name, value in table.items():
+        if isinstance(value, Mapping):
+            kept[name] = {key: _given(inner, defaults) for key, inner in value.items()}
+        elif name not in defaults or value != defaults[name]:
+            kept[name] = list(value) if isinstance(value, tuple) else value
+    return kept
 
 
 def _tell(meta: StateMeta, out: Path) -> None:

@@ -17,7 +17,7 @@ from numpy.typing import NDArray
 from lattice.geometry.block import Block
 from lattice.geometry.lattice import Lattice
 from lattice.laws.law import Law
-from lattice.starts.distance import Region, report_residual
+from lattice.starts.distance import LISTED, Region, report_residual, residual_field, root_mean_squares
 from lattice.starts.layout import Cell, Layout, make_layout
 from lattice.starts.options import MosaicOptions, Report, silent
 from lattice.starts.sampler import Moment, Stored, add_samples
@@ -80,14 +80,75 @@ def mosaic(
     """
     layout = on_root(comm, lambda: plan_mosaic(start, law, lattice.nt))
     found = {**layout.values, **values}
-    owned = np.zeros((*block.shape, len(law.components)))
-    for cell in layout.cells:
-        _add_cell(cell, layout, start.blend, lattice, found, law, block, comm, owned)
+    owned = _composed(layout, start.blend, lattice, found, law, block, comm)
     for line in _told(layout, lattice):
         report(line)
     regions = cell_regions(layout, lattice)
     report_residual("mosaic", law, lattice, found, owned, block, comm, report, regions)
     return owned, found
+
+
+def report_settled(
+    start: MosaicOptions,
+    lattice: Lattice,
+    values: Values,
+    law: Law,
+    owned: Real,
+    block: Block,
+    comm: MPI.Intracomm,
+    report: Report,
+) -> None:
+    """Report what has become of a mosaic: the residual of each member, and how far it is from what it was.
+
+    Collective. The change is the root mean square difference from the layout on the same nodes of its own
+    box, over the root mean square of both.
+
+    Parameters
+    ----------
+    start : MosaicOptions
+        The job's `start` section.
+    lattice, values, law
+        Of the field solved for.
+    owned : ndarray, shape block.shape + (components,)
+        This rank's part of it.
+    block : Block
+    comm : MPI.Intracomm
+    report : callable
+    """
+    layout = on_root(comm, lambda: plan_mosaic(start, law, lattice.nt))
+    regions = cell_regions(layout, lattice)
+    residual = residual_field(law, lattice, values, owned, block, comm)
+    composed = _composed(layout, start.blend, lattice, layout.values, law, block, comm)
+    fields = (composed - owned, composed, owned)
+    changes, *sizes = (root_mean_squares(field, block, regions, comm) for field in fields)
+    residuals = (np.nan, [np.nan] * len(regions))
+    if residual is not None:
+        residuals = root_mean_squares(residual, block, regions, comm)
+
+    def line(name: str, size: float, change: float, was: float, now: float) -> str:
+        share = 100.0 * change / max(np.sqrt(0.5 * (was * was + now * now)), 1e-300)
+        return f"mosaic: {name}: residual_rms {size:.3e}, changed by {share:.0f} %"
+
+    report(line("solved", residuals[0], changes[0], sizes[0][0], sizes[1][0]))
+    parts = zip(regions, residuals[1], changes[1], sizes[0][1], sizes[1][1], strict=True)
+    for region, size, change, was, now in list(parts)[:LISTED]:
+        report(line(f"  {region.name}", size, change, was, now))
+
+
+def _composed(
+    layout: Layout,
+    blend: float,
+    lattice: Lattice,
+    values: Values,
+    law: Law,
+    block: Block,
+    comm: MPI.Intracomm,
+) -> Real:
+    """Return this rank's part of a mosaic. Collective."""
+    owned = np.zeros((*block.shape, len(law.components)))
+    for cell in layout.cells:
+        _add_cell(cell, layout, blend, lattice, values, law, block, comm, owned)
+    return owned
 
 
 def plan_mosaic(start: MosaicOptions, law: Law, nt: int) -> Layout:
