@@ -208,3 +208,16 @@ def test_a_state_of_the_coarse_lattice_only_is_refused_for_refinement(tmp_path):
     assert criterion(found, "truncation").result == criterion(found, "resolution").result == "passed"
     # Its equations hold nearly, and its nodes resolve it; but the march decays, and the refined lattices lack it.
     assert {"march", "refinement"} <= failed(found) <= {"correction", "march", "refinement", "bands"}
+
+
+def test_the_benchmark_of_the_bands_measures_a_state(tmp_path):
+    from scaling.band_cases import patterns
+    from scaling.bands import measure, shares
+
+    row = measure(next(iter(patterns())), tmp_path)
+    assert row["refused"] == []
+    assert len(row["observables"]["mean_square"]["values"]) == 5
+    found = shares([row])
+    assert found["one refinement: twice refined"]["count"] >= 6
+    assert found["first order: finest"]["observables"] == 1.0
+    assert 1.0 < found["two refinements: finest"]["sharpness"] < 10.0
