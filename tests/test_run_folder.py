@@ -109,6 +109,8 @@ def test_the_summary_has_the_promised_keys(tmp_path: Path) -> None:
         "peak_memory_mb",
         "versions",
         "classification",
+        "stage",
+        "stages",
     ]
     assert found["lattice"] == {"nt": 32, "nx": 48, "order_t": 4, "order_x": 4}
     expected = asdict(SUMMARY)

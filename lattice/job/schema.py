@@ -189,9 +189,8 @@ class DampedSection(Section):
         gt=0,
         lt=1,
     )
-    stall_steps: Count = _key("steps over which the residual must fall by `stall_fall`", 20)
+    stall_steps: Count = _key("steps over which the residual must fall by `stall_fall`", 12)
     stall_fall: float = _key("least relative fall of the residual over `stall_steps`", 0.1, gt=0, lt=1)
-    kicks: int = _key("times a stalled field is shaken and the stage goes on", 2, ge=0)
 
 
 class RefineSection(Section):
@@ -259,7 +258,7 @@ class SolveSection(Section):
         " `refine` solves again on finer lattices",
         None,
         min_length=1,
-        shown="by the residual of the start: newton alone where it is small, else all three",
+        shown="`newton` for `state`, `waves` and `array` starts and where the residual is small; else all",
     )
     nested: int = _key(
         "number of coarser lattices, each with half the nodes per axis, that are solved first", 0, ge=0, le=4

@@ -55,6 +55,11 @@ class TwoLevel:
         The job's solve section; `options.coarse` says what is not to be chosen.
     report : callable
         Takes lines for the log.
+
+    Attributes
+    ----------
+    chosen : dict or None
+        The coarse lattice and the smoother as keys of the job's section solve.coarse, once chosen.
     """
 
     def __init__(self, system: System, options: Any, report: Callable[[str], None]) -> None:
@@ -64,6 +69,7 @@ class TwoLevel:
         self._field, self._other = system.blocks.vector(), system.blocks.vector()
         self._work, self._rest = system.vector(), system.vector()
         self._made: list[Any] = []
+        self.chosen: dict[str, Any] | None = None
 
     def update(self) -> None:
         """Restrict the point of linearisation, set up the coarse solver and the smoother."""
@@ -86,6 +92,9 @@ class TwoLevel:
         self.coarse = System(
             system.law, choice.lattice, system.values, free, system.means, system.comm, loose
         )
+        lattice = choice.lattice
+        self.chosen = {"nt": lattice.nt, "nx": lattice.nx, "order": lattice.order_x}
+        self.chosen |= {"smoother": choice.smoother, **({"ny": lattice.ny} if lattice.ny > 1 else {})}
         self.coarse.unknowns = system.unknowns  # the same units of the scalars on both levels
         self.coarse_transform = Transform(self.coarse.blocks)
         steady = system.lattice.nt == 1

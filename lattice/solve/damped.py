@@ -21,7 +21,6 @@ from typing import TYPE_CHECKING, Any
 from lattice.solve.memory import Memory
 from lattice.solve.normal import LinearOutcome, NormalEquations
 from lattice.solve.normal_preconditioners import Preconditioners
-from lattice.solve.scrambling import scramble
 
 if TYPE_CHECKING:
     from lattice.solve.normal import NormalPreconditioner
@@ -39,8 +38,6 @@ BENT = 0.75
 ACCELERATION_RTOL = 0.1
 LOOSE_RTOL, TIGHT_RTOL, TIGHT_BELOW = 0.03, 0.01, 1e-3
 """Relative tolerances of the steps' solves, above and below this residual."""
-KICK, KICK_DAMPING = 0.1, 0.01
-"""Size of a kick, as a share of the field, and mu after it, as a share of the size of J^T J."""
 
 
 @dataclass(frozen=True)
@@ -137,8 +134,6 @@ class Damped:
             found = self._ending(x, memory)
             if found is None:
                 memory = self._step(x, memory)
-            elif found[0] == "stalled" and memory.kicks < self.options.kicks:
-                memory = self._kick(x, memory)
             else:
                 return DampedResult(*found, memory)
 
@@ -241,21 +236,6 @@ class Damped:
         """Tell whether period and lengths are positive."""
         values = self.system.values_of(x)
         return all(v > 0.0 for n, v in values.items() if n == "period" or n.startswith("length_"))
-
-    def _kick(self, x: Any, memory: Memory) -> Memory:
-        """Shake the field: add one of its own spectrum with foreign phases; return the memory after it."""
-        system, shaken = self.system, self.system.blocks.vector()
-        count, transform = system.blocks.owned_size, self.preconditioners.spectral.transform
-        shaken.getArray()[:] = x.getArray(readonly=1)[:count]
-        system.blocks.owned(shaken)[...] -= system.operator.component_means(shaken)
-        scramble(transform, shaken, shaken, memory.kicks + 1)
-        x.getArray()[:count] += KICK * shaken.getArray(readonly=1)
-        shaken.destroy()
-        rms = self._at(x)
-        self.system.linearise(x)
-        memory = memory.kicked(rms, KICK_DAMPING * self.preconditioners.new_point())
-        self.after_step(DampedStep(memory.step, rms), memory, x, self._residual)
-        return memory
 
     def destroy(self) -> None:
         """Free everything."""

@@ -108,6 +108,20 @@ class Factorisation:
             return _mumps_status(pc)
         return {"INFOG(1)": 0}
 
+    def numbers(self) -> dict[str, float]:
+        """Return what the factors cost: entries and operations of all ranks, and of this one.
+
+        Not collective; empty before the first factorisation, and where another package than MUMPS made it.
+        """
+        pc = self._ksp.getPC() if self._ksp is not None else None
+        if pc is None or self.package != "mumps" or pc.getFactorSolverType() != "mumps":
+            return {}
+        factor = pc.getFactorMatrix()
+        entries = {"entries": factor.getMumpsInfog(29), "own_entries": factor.getMumpsInfo(27)}
+        flops = {"flops": factor.getMumpsRinfog(3), "own_flops": factor.getMumpsRinfo(3)}
+        # A negative count is in millions (MUMPS users' guide).
+        return {name: float(n if n >= 0 else -1e6 * n) for name, n in entries.items()} | flops
+
     def solve(self, r: Any, y: Any, transpose: bool = False) -> None:
         """Set `y` to the solution for right-hand side `r`.
 
@@ -188,6 +202,10 @@ class Direct:
         self.pins = choose_pins(self.system, matrix)
         self._assembled.add_to_diagonal(self.pins)
         self._lu.factor(matrix)
+
+    def numbers(self) -> dict[str, float]:
+        """Return what the factors cost, where that is known; see `Factorisation.numbers`."""
+        return dict(self._lu.numbers()) if isinstance(self._lu, Factorisation) else {}
 
     def apply(self, r: Any, y: Any) -> None:
         """Set `y` to the inverse of the pinned Jacobian times `r`. Collective."""

@@ -25,8 +25,6 @@ class Memory:
         mu from which on the spectral preconditioner serves; 0 where it is not known yet.
     residuals : tuple of float
         Root mean square residuals of the last steps, the latest last.
-    kicks : int
-        Kicks made so far.
     refused : bool
         No damping gave a step.
     """
@@ -35,7 +33,6 @@ class Memory:
     damping: float = 0.0
     spectral_from: float = 0.0
     residuals: tuple[float, ...] = ()
-    kicks: int = 0
     refused: bool = False
 
     def begun(self, residual_rms: float) -> Memory:
@@ -58,10 +55,6 @@ class Memory:
     def with_damping(self, damping: float, refused: bool = False) -> Memory:
         """Return the memory after steps that were not kept."""
         return replace(self, damping=damping, refused=refused)
-
-    def kicked(self, residual_rms: float, damping: float) -> Memory:
-        """Return the memory after a kick."""
-        return replace(self, damping=damping, residuals=(residual_rms,), kicks=self.kicks + 1, refused=False)
 
     def is_flat(self, steps: int, fall: float) -> bool:
         """Tell whether the residual fell by less than a share over the last steps.

@@ -28,19 +28,33 @@ class Preconditioners:
 
     def __init__(self, system: System, make: Callable[[], Preconditioner]) -> None:
         self.system, self._make = system, make
-        self.spectral = SpectralNormal(system)
+        # Modes of the whole lattice mean nothing on the part that carries a subspace.
+        self.spectral = None if system.subspace else SpectralNormal(system)
         self.inverse: InverseNormal | None = None
         self._ready: set[str] = set()
 
     def new_point(self) -> float:
         """Forget set-ups: the system has been linearised elsewhere. Return the scale of J^T J there."""
-        self._ready = {"spectral"}
+        self._ready = set()
+        if self.spectral is None:
+            return self._growth()
         self.spectral.update(1.0)
         return self.spectral.scale
 
+    def _growth(self) -> float:
+        """Return the mean square of J over that of the field itself."""
+        operator = self.system.operator
+        field, image = self.system.blocks.vector(), self.system.blocks.vector()
+        operator.copy_point(field)
+        operator.tangent(field, image)
+        growth = image.norm() / field.norm()
+        field.destroy()
+        image.destroy()
+        return float(growth**2)
+
     def serving(self, damping: float, spectral_from: float) -> tuple[str, NormalPreconditioner]:
         """Return the preconditioner for a damping, ready, and its name."""
-        if damping >= spectral_from:
+        if self.spectral is not None and damping >= spectral_from:
             self.spectral.damp(damping)
             return "spectral", self.spectral
         if self.inverse is None:
@@ -52,6 +66,7 @@ class Preconditioners:
 
     def destroy(self) -> None:
         """Free both."""
-        self.spectral.destroy()
+        if self.spectral is not None:
+            self.spectral.destroy()
         if self.inverse is not None:
             self.inverse.destroy()

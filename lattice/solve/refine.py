@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import itertools
+from collections.abc import Mapping
 from dataclasses import replace
 from typing import Any
 
@@ -17,6 +18,7 @@ from lattice.system.system import System
 
 Array = NDArray[np.float64]
 FEWEST = 4
+EXTENTS = {"nt": "period", "ny": "length_y", "nx": "length_x"}
 
 
 def refined_lattice(lattice: Lattice, factor: float) -> Lattice:
@@ -47,7 +49,7 @@ def carry(source: System, owned: Array, target: System) -> Array:
     source : System
         Where the field is given.
     owned : ndarray, shape (levels, rows, columns, components)
-        This rank's part there.
+        This rank's part there, of the whole field where the system is one of a subspace.
     target : System
         Of the same law, on the same communicator.
 
@@ -56,14 +58,14 @@ def carry(source: System, owned: Array, target: System) -> Array:
     ndarray, shape (levels, rows, columns, components)
         This rank's part on the target's lattice.
     """
-    if source.lattice.shape == target.lattice.shape:
+    if source.whole_lattice.shape == target.whole_lattice.shape:
         return owned.copy()
     between = _between(source, target)
-    stations = [source.blocks, *([between] if between else []), target.blocks]
-    field = _vector(source.blocks, owned)
+    stations = [source.whole_blocks, *([between] if between else []), target.whole_blocks]
+    field = _vector(source.whole_blocks, owned)
     for here, there in itertools.pairwise(stations):
         field = _move(here, field, there)
-    carried = target.blocks.owned(field).copy()
+    carried = target.whole_blocks.owned(field).copy()
     field.destroy()
     if between:
         between.destroy()
@@ -72,11 +74,11 @@ def carry(source: System, owned: Array, target: System) -> Array:
 
 def _between(source: System, target: System) -> Blocks | None:
     """Return blocks with the larger count on every axis, where neither lattice has them all."""
-    pairs = list(zip(source.lattice.shape, target.lattice.shape, strict=True))
+    pairs = list(zip(source.whole_lattice.shape, target.whole_lattice.shape, strict=True))
     if all(a <= b for a, b in pairs) or all(a >= b for a, b in pairs):
         return None
     nt, ny, nx = (max(pair) for pair in pairs)
-    lattice = replace(target.lattice, nt=nt, ny=ny, nx=nx)
+    lattice = replace(target.whole_lattice, nt=nt, ny=ny, nx=nx)
     return Blocks(lattice, target.blocks.components, target.operator.scheme.halo_x, target.comm)
 
 
@@ -96,3 +98,29 @@ def _move(here: Blocks, field: Any, there: Blocks) -> Any:
     for item in (transfer, fine, coarse, field):
         item.destroy()
     return moved
+
+
+def fitted_lattice(lattice: Lattice, values: Mapping[str, float], spacings: Mapping[str, float]) -> Lattice:
+    """Return the lattice whose spacings in a box are as near to given ones as even counts allow.
+
+    Examples
+    --------
+    >>> box = {"period": 26.0, "length_x": 44.0}
+    >>> fitted_lattice(Lattice(nt=40, ny=1, nx=56), box, {"nt": 0.5, "nx": 0.8}).shape
+    (52, 1, 56)
+    """
+    counts = {axis: max(FEWEST, 2 * round(values[EXTENTS[axis]] / h / 2.0)) for axis, h in spacings.items()}
+    return replace(lattice, **counts)
+
+
+def still_fits(
+    lattice: Lattice, values: Mapping[str, float], spacings: Mapping[str, float], most: float
+) -> bool:
+    """Tell whether no spacing has changed by more than a share `most` that another count would mend."""
+    fitted = fitted_lattice(lattice, values, spacings)
+    changes = [
+        abs(values[EXTENTS[axis]] / (getattr(lattice, axis) * h) - 1.0)
+        for axis, h in spacings.items()
+        if getattr(fitted, axis) != getattr(lattice, axis)
+    ]
+    return max(changes, default=0.0) <= most
