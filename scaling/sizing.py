@@ -119,20 +119,31 @@ def _write(case: Case, folder: Path) -> Path:
 def compare(name: str, case: Case, calibration: Any, folder: Path) -> dict[str, Any]:
     """Size a job, run it, and return both."""
     from lattice.job.reader import load_job
-    from lattice.sizing.estimate import Assumptions, estimate
     from lattice.sizing.gather import gather
 
     job = load_job(_write(case, folder))
     began = time.perf_counter()
     knowledge = gather(job, case.ranks)
     gathering = time.perf_counter() - began
-    before = estimate(job, case.ranks, calibration, knowledge)
     summary = _solve(case, folder)
+    row = {"knowledge": knowledge.record(), "summary": summary, "sizing_seconds": gathering}
+    return row | predict(name, case, row, calibration, folder)
+
+
+def predict(name: str, case: Case, row: dict[str, Any], calibration: Any, folder: Path) -> dict[str, Any]:
+    """Return what is predicted for a run, from what was found out about it, beside what was measured."""
+    from lattice.job.reader import load_job
+    from lattice.sizing.estimate import Assumptions, estimate
+    from lattice.sizing.knowledge import Knowledge
+
+    job, summary = load_job(_write(case, folder)), row["summary"]
+    knowledge = Knowledge.of_record(row["knowledge"])
+    before = estimate(job, case.ranks, calibration, knowledge)
     steps = max(1, int(summary["newton_steps"]))
     iterations = max(1, round(summary["linear_iterations"] / steps))
     after = estimate(job, case.ranks, calibration, knowledge, Assumptions(steps=steps, iterations=iterations))
     measured = {key: summary[key] for key in ("command_seconds", "peak_memory_mb", "seconds")}
-    row = {
+    found: dict[str, Any] = {
         "case": name,
         "ranks": case.ranks,
         "nodes": list(case.shape),
@@ -140,7 +151,6 @@ def compare(name: str, case: Case, calibration: Any, folder: Path) -> dict[str, 
         "coarse": before.legs[0].coarse,
         "steps": steps,
         "iterations": iterations,
-        "sizing_seconds": gathering,
         "measured": measured,
         "predicted": after.record(),
         "memory_ratio": before.all_ranks_mb / summary["peak_memory_mb"],
@@ -149,9 +159,9 @@ def compare(name: str, case: Case, calibration: Any, folder: Path) -> dict[str, 
         "problems": list(knowledge.problems),
     }
     if after.seconds is not None and before.seconds is not None:
-        row["time_ratio"] = after.seconds / summary["command_seconds"]
-        row["time_ratio_beforehand"] = before.seconds / summary["command_seconds"]
-    return row
+        found["time_ratio"] = after.seconds / summary["command_seconds"]
+        found["time_ratio_beforehand"] = before.seconds / summary["command_seconds"]
+    return found
 
 
 def passes(row: dict[str, Any]) -> bool:
@@ -187,6 +197,7 @@ def main() -> int:
         description=__doc__, formatter_class=argparse.RawDescriptionHelpFormatter
     )
     parser.add_argument("--cases", default=",".join(CASES))
+    parser.add_argument("--again", action="store_true", help="predict kept runs anew, run nothing")
     parser.add_argument("--calibration", help="a calibration's file; default: this machine's")
     parser.add_argument("--out", default="scaling/results/sizing.json")
     options = parser.parse_args()
@@ -198,9 +209,15 @@ def main() -> int:
     rows = {r["case"]: r for r in json.loads(path.read_text())["rows"]} if path.exists() else {}
     print(HEADER)
     with tempfile.TemporaryDirectory(prefix="lattice-sizing-") as folder:
-        compile_loops(Path(folder))
-        for name in options.cases.split(","):
-            rows[name] = compare(name, CASES[name], calibration, Path(folder) / name)
+        names = list(rows) if options.again else options.cases.split(",")
+        if not options.again:
+            compile_loops(Path(folder))
+        for name in names:
+            place = Path(folder) / name
+            if options.again:
+                rows[name] |= predict(name, CASES[name], rows[name], calibration, place)
+            else:
+                rows[name] = compare(name, CASES[name], calibration, place)
             print(line(rows[name]), flush=True)
     path.parent.mkdir(parents=True, exist_ok=True)
     path.write_text(json.dumps({"machine": describe(), "rows": list(rows.values())}, indent=1) + "\n")

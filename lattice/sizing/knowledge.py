@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import dataclass, field, replace
+from dataclasses import asdict, dataclass, field, replace
 from typing import TYPE_CHECKING, Any
 
 from lattice.errors import InputError
@@ -73,6 +73,27 @@ class Knowledge:
     coarse: Coarse | None = None
     dt: float | None = None
     problems: tuple[str, ...] = ()
+
+    def record(self) -> dict[str, Any]:
+        """Return it as plain data, for JSON."""
+        return {
+            "factors": [[asdict(lattice), f.record()] for lattice, f in self.factors.items()],
+            "exact": [[asdict(lattice), f.record()] for lattice, f in self.exact.items()],
+            "exact_ranks": self.exact_ranks,
+            "coarse": None if self.coarse is None else asdict(self.coarse),
+            "dt": self.dt,
+            "problems": list(self.problems),
+        }
+
+    @classmethod
+    def of_record(cls, record: Mapping[str, Any]) -> Knowledge:
+        """Return the knowledge that `record` wrote."""
+        factors, exact = (
+            {Lattice(**lattice): Factors(**found) for lattice, found in record[name]}
+            for name in ("factors", "exact")
+        )
+        coarse = None if record["coarse"] is None else Coarse(**record["coarse"])
+        return cls(factors, exact, record["exact_ranks"], coarse, record["dt"], tuple(record["problems"]))
 
     def factors_of(self, problem: Problem, ranks: int) -> Factors:
         """Return the factors of a lattice on a number of ranks, from the best source there is."""
