@@ -295,6 +295,20 @@ def test_layouts_that_make_no_sense_are_refused(rows, changes, match, tmp_path):
         mosaic(rows, {"a": MemberOptions(path, **changes)}, Lattice(10, 1, 16))
 
 
+def test_fields_keep_their_place_where_the_law_depends_on_it(tmp_path):
+    path = store(tmp_path / "a.h5", waves((10, 1, 16)), "burgers", length_x=TURN)
+    wide = store(tmp_path / "b.h5", waves((10, 1, 16)), "burgers", length_x=2 * TURN)
+    grid = Lattice(10, 1, 32)
+    with pytest.raises(InputError, match="start.x must be left out: law burgers depends on x"):
+        begin("excerpt", ExcerptOptions(path, x=(0.0, 3.0)), grid, {}, "burgers")
+    with pytest.raises(InputError, match="start.members.a must keep its place .* and is shifted by 1"):
+        mosaic(["a"], {"a": MemberOptions(path, shift_x=1.0)}, grid, "burgers")
+    with pytest.raises(InputError, match="start.members.a must keep its place .* stretched 1.5 times"):
+        mosaic(["a", "b"], {"a": MemberOptions(path), "b": MemberOptions(wide)}, grid, "burgers")
+    _, values, _ = mosaic(["a b"], {"a": MemberOptions(path), "b": MemberOptions(wide)}, grid, "burgers")
+    assert values["length_x"] == pytest.approx(3 * TURN)
+
+
 def test_steady_members_alone_have_no_duration(tmp_path):
     path = store(tmp_path / "a.h5", waves((1, 1, 16)))
     with pytest.raises(InputError, match="row 1 has no duration"):

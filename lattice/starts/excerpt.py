@@ -148,6 +148,11 @@ def _cut(axis: str, start: ExcerptOptions, source: Source, law: Law) -> Cut:
         return Cut(axis, begin, end - begin, end - begin, 1, 0.0)
     blend = start.blend if axis == "t" else start.blend_space
     length = end - begin
+    if window is not None and not law.symmetries.homogeneous.get(axis, True):
+        raise InputError(
+            f"start.{axis} must be left out: law {law.name} depends on {axis}, so that no part of its box "
+            "can stand for the whole"
+        )
     if periodic:
         return Cut(axis, begin, length, covered, nodes, _needed(blend, length, covered))
     _check_held(axis, begin, length, blend, covered * (nodes - 1) / nodes, window is None)

@@ -144,7 +144,24 @@ def make_layout(start: MosaicOptions, law: Law, sources: Mapping[str, Source], n
         _ends([_row_size(cells, "line", n, 1) for n in range(len(rows[0]))]),
         _ends([_row_size(cells, "column", n, 2) for n in range(len(rows[0][0]))]),
     )
+    _check_place(cells, ends, law)
     return Layout(tuple(cells), ends, _values(cells, ends, law, nt))
+
+
+def _check_place(cells: Sequence[Cell], ends: tuple[Sizes, Sizes, Sizes], law: Law) -> None:
+    """Refuse to shift or stretch members along an axis on which the law depends."""
+    for axis, place in (("y", 1), ("x", 2)):
+        if law.symmetries.homogeneous.get(axis, True):
+            continue
+        for cell in cells:
+            shifted, stretch = cell.member.shifts[place], _stretches(cell, ends)[place]
+            if shifted or abs(stretch - 1.0) > 1e-9:
+                what = f"shifted by {shifted:g}" if shifted else f"stretched {stretch:.4g} times"
+                raise InputError(
+                    f"start.members.{cell.member.name} must keep its place and length in {axis}, on which "
+                    f"law {law.name} depends, and is {what}; give members of one length_{axis}, without "
+                    f"shift_{axis}"
+                )
 
 
 def _member(name: str, given: MemberOptions, source: Source, law: Law) -> Member:
