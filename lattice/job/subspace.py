@@ -93,14 +93,20 @@ def judge_subspace(job: Job, law: Law, findings: Findings) -> None:
 
 
 def _check(job: Job, law: Law, subspace: Subspace) -> None:
-    from lattice.system.invariant import check_means, check_subspace, lost_conditions
+    from lattice.system.invariant import check_means, check_subspace, held_scalars, lost_conditions
 
     values = {**law.defaults, **job.law.parameter_values()}
     box = {name: getattr(job.box, name) for name in ("drift_x", "drift_y", "rotation", "period")}
     lengths = {name: getattr(job.box, name) for name in ("length_x", "length_y")}
     given = {name: value for name, value in {**box, **lengths}.items() if value is not None}
     check_subspace(law, subspace, {**values, **given})
-    check_means(job.solve.mean, lost_conditions(law, subspace))
+    lost = lost_conditions(law, subspace)
+    check_means(job.solve.mean, lost)
+    held = [name for name in job.solve.free or () if name in held_scalars(law, lost)]
+    if held:
+        raise InputError(
+            f"must not name {held[0]}: solve.subspace holds it at 0; remove it", key="solve.free"
+        )
     if subspace.half_period and job.lattice.nt == 1:
         raise InputError("needs a state that changes in time: lattice.nt > 1", key=f"{KEY}.half_period")
     subspace.part(job.make_lattice())
