@@ -217,7 +217,7 @@ class _Check:
         try:
             inverse = Inverse(self.subject, self._solve_options(), self.report)
             correction = discretisation_error(self.subject, inverse, exact)
-            start = start_vector(self.subject)
+            start = start_vector(self.subject, correction.owned)
             sensitivity = smallest_singular_values(inverse, residuals.rms, start)
             start.destroy()
         except LatticeError as error:

@@ -34,10 +34,12 @@ if TYPE_CHECKING:
 
 Array = NDArray[np.float64]
 
-EXACT_STEPS, LOOSE_STEPS = 24, 2
+EXACT_STEPS, LOOSE_STEPS = 24, 1
 """Steps of Lanczos' method where one solve is a substitution, and where it is an iteration of its own."""
-SETTLED = 1e-2
+SETTLED = 0.03
 """Relative change of the smallest singular value from one step to the next at which it counts as found."""
+UNSETTLED_MARGIN = 3.0
+"""Factor on the error bound where the smallest singular value is only known from above."""
 LOOSE_RTOL, LOOSE_ITERATIONS = 1e-2, 60
 
 
@@ -52,7 +54,8 @@ class Sensitivity:
     settled : bool
         Whether the smallest no longer changed.
     error_bound : float
-        `residual_rms/sigma_min`, root mean square of the field's error, to first order.
+        `residual_rms/sigma_min`, root mean square of the field's error, to first order; three times that
+        where the value is not settled.
     exact : bool
         Whether the linear solves were exact (LU) or iterations stopped early.
     """
@@ -190,11 +193,14 @@ def smallest_singular_values(inverse: Inverse, residual_rms: float, start: Any) 
         inverse.solve(basis[-1], between, transpose=True)
         inverse.solve(between, image)
         alphas.append(float(image.dot(basis[-1])))
+        norm = float(image.norm())
         for vector in basis * 2:
             image.axpy(-float(image.dot(vector)), vector)
         betas.append(float(image.norm()))
         matrix = np.diag(alphas) + np.diag(betas[:step], 1) + np.diag(betas[:step], -1)
         largest = np.linalg.eigvalsh(matrix)[::-1]
+        # Of a unit vector the image's norm, too, is at most the largest eigenvalue, and soon nearer to it.
+        largest[0] = max(largest[0], norm)
         found.append(1.0 / math.sqrt(largest[0]) if largest[0] > 0.0 else math.inf)
         settled = step > 1 and abs(found[-1] - found[-2]) <= SETTLED * found[-1]
         if settled or betas[-1] <= 1e-12 * largest[0]:
@@ -205,12 +211,21 @@ def smallest_singular_values(inverse: Inverse, residual_rms: float, start: Any) 
     for vector in (*basis[1:], between, image):
         vector.destroy()
     smallest = tuple(1.0 / math.sqrt(v) for v in largest[:3] if v > 0.0)
-    bound = residual_rms / smallest[0] if smallest else math.inf
+    margin = 1.0 if settled and inverse.exact else UNSETTLED_MARGIN
+    bound = margin * residual_rms / smallest[0] if smallest else math.inf
     return Sensitivity(smallest, settled, bound, inverse.exact)
 
 
-def start_vector(subject: Subject) -> Any:
-    """Return a vector of unknowns with a part in every direction, the same on any number of ranks."""
+NOISE = 0.1
+"""Rough part of the start vector in units of the correction: it has a part in every direction."""
+
+
+def start_vector(subject: Subject, correction: Array) -> Any:
+    """Return a vector of unknowns rich in what the Jacobian damps least, the same on any number of ranks.
+
+    The correction of the discretisation error has been through the inverse once, noise has a part in every
+    direction: one is near the singular vector wanted, the other misses none.
+    """
     blocks, system = subject.system.blocks, subject.system
     block, shape = blocks.block, subject.lattice.shape
     levels, rows, columns = (
@@ -220,8 +235,12 @@ def start_vector(subject: Subject) -> Any:
     number = number[..., None] * blocks.components + np.arange(blocks.components)
     # Fractional parts of multiples of an irrational number are spread evenly (Weyl), and rough.
     noise = np.modf(number * (0.5 * (math.sqrt(5.0) - 1.0)))[0] - 0.5
+    square = subject.comm.allreduce(float((correction**2).sum())) / blocks.size
+    size = math.sqrt(square) if 0.0 < square < math.inf else 1.0
+    smooth = correction if 0.0 < square < math.inf else 0.0 * noise
     x = system.vector()
-    system.store(x, noise.reshape(-1), np.full(len(system.unknowns), 0.25))
+    values = smooth + NOISE * size * noise
+    system.store(x, values.reshape(-1), np.full(len(system.unknowns), NOISE * size))
     return x
 
 

@@ -94,7 +94,8 @@ def _others(found: Findings) -> Iterator[str]:
         s = found.sensitivity
         settled = "" if s.settled and s.exact else ", an upper bound: the iteration was stopped early"
         yield from _row("sensitivity", f"sigma_min {s.smallest[0]:.3e}{settled};")
-        yield from _row("", f"|du| <= |R|/sigma_min = {s.error_bound:.1e} rms, a linear estimate")
+        factor = "" if s.settled and s.exact else "3 "
+        yield from _row("", f"|du| <= {factor}|R|/sigma_min = {s.error_bound:.1e} rms, a linear estimate")
     if math.isfinite(found.correction):
         text = f"error about {found.correction:.1e} of the fluctuation, to first order"
         yield from _row("discretisation", text)
