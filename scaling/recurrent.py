@@ -34,12 +34,12 @@ def write_recurrences(options: argparse.Namespace) -> list[dict[str, Any]]:
     from lattice.cli.composing import job_text
     from lattice.geometry.lattice import Lattice
     from lattice.laws.catalogue import load_law
-    from lattice.starts.compose import COMPOSED, Composition
+    from lattice.starts.compose import Composition
     from lattice.starts.folding import shares
     from lattice.starts.options import ExcerptOptions, RecurrenceOptions
     from lattice.starts.recurrence import Returner
     from lattice.store.statefile import write_state
-    from lattice.store.statemeta import StateMeta
+    from lattice.store.statemeta import COMPOSED, StateMeta
 
     law, nx = load_law("kuramoto-sivashinsky"), 2 * round(0.5 * LENGTH / DX)
     values = {**law.defaults, "period": 40.0, "length_x": LENGTH, "drift_x": 0.0, "source_u": 0.0}

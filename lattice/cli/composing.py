@@ -101,8 +101,8 @@ def _printer(comm: MPI.Intracomm) -> Callable[[str], None]:
 
 def _check_out(out: Path, replace: bool) -> None:
     from lattice.cli.paths import writable_path
-    from lattice.starts.compose import COMPOSED
     from lattice.store.statefile import read_meta
+    from lattice.store.statemeta import COMPOSED
 
     if out.suffix != ".h5":
         raise InputError(f"must end in .h5, got '{out.name}'", key="--out")

@@ -14,7 +14,7 @@ from lattice.show.colours import diverging
 from lattice.show.planes import Plane, extent
 from lattice.show.spectra import TOLERATED_ERROR, Spectrum
 from lattice.show.verdict import is_solution, residual_text
-from lattice.store.statemeta import StateMeta
+from lattice.store.statemeta import COMPOSED, StateMeta
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
@@ -252,7 +252,7 @@ def header(figure: Figure, meta: StateMeta, subject: str = "") -> None:
         *((line, {"fontweight": "bold"}) for line in ([subject] if subject else [])),
         *((line, {}) for line in wrapped(scalar_texts(meta), "    ", width * 15)),
         *((line, faint) for line in wrapped(lattice_texts(meta), ";  ", width * 14)),
-        *((line, verdict) for line in wrapped(f"residual {residual_text(meta)}".split(" "), " ", width * 12)),
+        *((line, verdict) for line in wrapped(_verdict(meta).split(" "), " ", width * 12)),
     ]
     y = 0.28
     for text, look in rows:
@@ -264,6 +264,11 @@ def header(figure: Figure, meta: StateMeta, subject: str = "") -> None:
     engine.set(
         rect=(0.0, 0.0, 1.0, 1.0 - (y - 0.06) / height), w_pad=0.06, h_pad=0.05, wspace=0.03, hspace=0.04
     )
+
+
+def _verdict(meta: StateMeta) -> str:
+    composed = f"{COMPOSED}; " if meta.outcome == COMPOSED else ""
+    return f"{composed}residual {residual_text(meta)}"
 
 
 def wrapped(parts: Sequence[str], separator: str, letters: float) -> list[str]:

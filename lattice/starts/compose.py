@@ -27,18 +27,15 @@ from lattice.starts.options import ExcerptOptions, MemberOptions, MosaicOptions,
 from lattice.starts.sources import Source, describe_source, stored_law
 from lattice.starts.stepper import Values
 from lattice.starts.streaming import on_root
+from lattice.store.statemeta import COMPOSED, StateMeta
 
 if TYPE_CHECKING:
     from mpi4py import MPI
-
-    from lattice.store.statemeta import StateMeta
 
 Real = NDArray[np.float64]
 Path = str | os.PathLike[str]
 Nodes = Mapping[str, int]
 
-COMPOSED = "composed, not solved"
-"""Outcome of a composed field's file."""
 FEWEST = 16
 """Fewest nodes of an axis that is cut or composed: enough for any order."""
 
@@ -194,7 +191,6 @@ def write_composition(
     from mpi4py import MPI
 
     from lattice.store.statefile import write_state
-    from lattice.store.statemeta import StateMeta
     from lattice.store.versions import versions
     from lattice.system.operator import FieldOperator
 

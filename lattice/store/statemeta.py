@@ -17,6 +17,10 @@ if TYPE_CHECKING:
     from lattice.laws.law import Law
 
 
+COMPOSED = "composed, not solved"
+"""Outcome of a field that was put together and is no solution."""
+
+
 @dataclass(frozen=True)
 class StateMeta:
     """Everything a state file holds besides the field and its coordinates.
