@@ -66,6 +66,9 @@ def test_proved_periodic_states_lie_inside_their_bands(tmp_path, length, period,
     # The correction to first order, without any solve, comes near, too: within a fifth of the true error.
     quick = check(tmp_path / "odd.h5", refinements=0).findings.bands["period"]
     assert quick.best == pytest.approx(period, abs=0.2 * abs(quick.value - period))
+    # Marched, slices miss each other by no more than the error of both ends, the first one grown.
+    march = found.findings.march
+    assert march.largest <= (1.0 + march.largest_growth) * found.findings.correction
     # Independent recomputation, to 1e-15: half a period later the state is half a length further on.
     assert "u(t + T/2, x + Lx/2) = u(t, x)" in found.findings.periodicity.symmetries
 

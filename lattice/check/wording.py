@@ -112,6 +112,9 @@ def _marches(found: Findings) -> Iterator[str]:
         segments = f"over a time of {m.time:.3g}"
     growth = f"errors grow {m.largest_growth:.2f}-fold (local rate {m.rate:.2g})"
     error = f"the marcher's own error is {m.marcher_error:.1e}"
+    if math.isfinite(found.correction):
+        explained = (1.0 + m.largest_growth) * found.correction
+        error += f", the discretisation error explains up to {explained:.1e}"
     yield from _row("march", f"{segments}: mismatch {m.largest:.1e}, {growth}; {error}")
     if math.isfinite(found.single_march):
         yield from _row("single march", f"one march over the period misses by {found.single_march:.1e}")
