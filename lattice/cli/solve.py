@@ -9,7 +9,7 @@ import time
 from pathlib import Path
 from typing import TYPE_CHECKING, NoReturn
 
-from lattice.batch.codes import REFUSED
+from lattice.batch.codes import CONVERGED, REFUSED
 from lattice.environment import Launch, find_launch
 from lattice.errors import InputError
 
@@ -46,6 +46,11 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
         help="a value that replaces the job file's; may be repeated",
     )
     parser.add_argument("--force", action="store_true", help="replace the run that the folder holds")
+    parser.add_argument(
+        "--check",
+        action="store_true",
+        help="certify the state at the end, as `lattice check` does; the verdict leaves the exit code alone",
+    )
     parser.add_argument(
         "--resume",
         action="store_true",
@@ -190,7 +195,20 @@ def _solve(options: argparse.Namespace, job: Job, comm: MPI.Intracomm) -> int:
 
     folder, text = Path(job.output.folder or ""), job_to_toml(job)
     report = _report(comm)
-    return run_job(job, folder, comm, options.petsc_options, report, text, options.resume).exit_code
+    code = run_job(job, folder, comm, options.petsc_options, report, text, options.resume).exit_code
+    if options.check and code == CONVERGED:
+        _check(job, folder, comm, report)
+    return code
+
+
+def _check(job: Job, folder: Path, comm: MPI.Intracomm, report: Callable[[str], None]) -> None:
+    """Check the state that was solved, and print its certificate."""
+    from lattice.check.run import CheckOptions, check_state
+    from lattice.check.wording import to_text
+
+    options = CheckOptions(preconditioner=job.solve.preconditioner)
+    certificate = check_state(folder / "state.h5", comm, options, report)
+    report(f"\n{to_text(certificate)}\n{certificate.note}")
 
 
 def _report(comm: MPI.Intracomm) -> Callable[[str], None]:
