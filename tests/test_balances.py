@@ -15,7 +15,7 @@ from lattice.check.subject import open_subject
 from lattice.check.variational import vanishes
 from lattice.errors import InputError
 from lattice.geometry.lattice import Lattice
-from lattice.laws.catalogue import load_law, read_law
+from lattice.laws.catalogue import load_law, read_law, read_law_file
 from lattice.laws.law import Deriv, symbol
 from tests.checking import FILM, store
 from tests.solving import TURN, Solved, nodes, scalars, solve
@@ -170,3 +170,37 @@ def test_a_state_off_its_lattice_solution_is_not_in_balance(tmp_path):
         assert least <= energy.error <= most
         fourier.destroy()
         subject.destroy()
+
+
+GOOD = """
+name = "decay"
+title = "A law for tests"
+source = "made up for tests"
+dimensions = 1
+components = ["u"]
+equations = ["u_t - u_xx + u = 0"]
+
+[balances.loss]
+gain = "u_x**2"
+loss = "u**2"
+
+[observables.slope]
+formula = "u_x**2"
+meaning = "mean square slope"
+"""
+
+
+def test_a_law_file_may_give_balances_and_observables(tmp_path):
+    path = tmp_path / "decay.toml"
+    path.write_text(GOOD)
+    law = read_law_file(path)
+    assert law.balances == (("loss", "u_x**2", "u**2"),)
+    assert law.observables == (("slope", "u_x**2", "mean square slope"),)
+    for old, new in (
+        ('gain = "u_x', 'gain = "w_x'),
+        ('loss = "u**2"', 'lost = "u"'),
+        ('u_x**2"\nmeaning', 'u_x**"\nmeaning'),
+    ):
+        path.write_text(GOOD.replace(old, new))
+        with pytest.raises(InputError):
+            read_law_file(path)
