@@ -224,3 +224,14 @@ def test_the_benchmark_of_the_bands_measures_a_state(tmp_path):
     assert found["one refinement: twice refined"]["count"] >= 6
     assert found["first order: finest"]["observables"] == 1.0
     assert 1.0 < found["two refinements: finest"]["sharpness"] < 10.0
+
+
+def test_a_preconditioner_that_refuses_a_lattice_does_not_refuse_the_state(odd, monkeypatch):
+    from lattice.solve import registry
+
+    path, _, _ = odd
+    monkeypatch.setattr(registry, "DIRECT_UNKNOWNS", {1: 100, 2: 100})
+    found = check(path, store=False, refinements=1)
+    assert failed(found) == set()
+    assert found.findings.sensitivity is not None
+    assert found.findings.refinement.survived

@@ -15,13 +15,14 @@ import numpy as np
 from numpy.typing import NDArray
 
 from lattice.check.convergence import Band, Series, band_of
+from lattice.check.failures import own_failure
 from lattice.check.observables import Named, measure
 from lattice.check.statistics import CORRELATION
-from lattice.errors import LatticeError
+from lattice.errors import InputError
 from lattice.geometry.lattice import Lattice
 from lattice.laws.calculus import order_of
 from lattice.laws.law import Law
-from lattice.solve.newton import Newton, Step
+from lattice.solve.newton import Newton, NewtonResult, Step
 from lattice.solve.refine import carry, refined_lattice
 from lattice.solve.registry import make_preconditioner
 from lattice.solve.stop import StopFlag
@@ -184,19 +185,14 @@ def _solve(
     floor = rounding_floor(subject.law, lattice, values, math.sqrt(_square(system, start)))
     options = options.model_copy(update={"residual_rms": max(WANTED * unit, floor)})
     try:
-        system.set_reference(x)
-        newton = Newton(
-            system, make_preconditioner(options.preconditioner, system, options), options, stop, lines.after
-        )
-        result = newton.solve(x)
-        newton.destroy()
+        result = _newton(system, x, start, values, options, stop, lines)
         converged, reason, steps = result.converged, result.reason, len(result.steps) - 1
         residual = result.steps[-1].residual_rms if result.steps else math.nan
         interrupted = result.interrupted
         # Where rounding stops Newton's method just short of what is wanted, the state is solved all the same.
         converged = converged or (residual <= ACCEPTED * unit and not interrupted)
-    except LatticeError as error:
-        converged, reason, steps, residual = False, str(error), 0, math.nan
+    except Exception as error:  # noqa: BLE001 - PETSc wraps the failures of a callback
+        converged, reason, steps, residual = False, str(own_failure(error)), 0, math.nan
     solved, found = system.field_of(x), dict(system.values_of(x))
     x.destroy()
     observables = measure(system, solved, found, named) if converged else {}
@@ -213,6 +209,36 @@ def _solve(
         interrupted,
     )
     return level, (system, solved, found)
+
+
+def _newton(
+    system: System,
+    x: Any,
+    start: Array,
+    values: Mapping[str, float],
+    options: Any,
+    stop: StopFlag,
+    lines: Steps,
+) -> NewtonResult:
+    """Solve from the start; by LU where the preconditioner of choice refuses the lattice."""
+    system.set_reference(x)
+    try:
+        return _solved(system, x, options, stop, lines)
+    except Exception as error:
+        failure = own_failure(error)
+        if not isinstance(failure, InputError) or options.preconditioner != "auto":
+            raise
+        lines.report(f"by LU instead: {failure}")
+    system.pack(start, values, x)
+    return _solved(system, x, options.model_copy(update={"preconditioner": "direct"}), stop, lines)
+
+
+def _solved(system: System, x: Any, options: Any, stop: StopFlag, lines: Steps) -> NewtonResult:
+    made = make_preconditioner(options.preconditioner, system, options)
+    newton = Newton(system, made, options, stop, lines.after)
+    result = newton.solve(x)
+    newton.destroy()
+    return result
 
 
 class Steps:

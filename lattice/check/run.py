@@ -15,6 +15,7 @@ import numpy as np
 from lattice.check.balances import measure_balances
 from lattice.check.certificate import Certificate, make_certificate
 from lattice.check.convergence import Band, band_of_correction
+from lattice.check.failures import own_failure
 from lattice.check.findings import Findings
 from lattice.check.fourier import Fourier
 from lattice.check.marching import MarchCheck, march_check, single_march
@@ -215,16 +216,27 @@ class _Check:
         sensitivity = correction = None
         failure = ""
         try:
-            inverse = Inverse(self.subject, self._solve_options(), self.report)
+            inverse = self._inverse()
             correction = discretisation_error(self.subject, inverse, exact)
             start = start_vector(self.subject, correction.owned)
             sensitivity = smallest_singular_values(inverse, residuals.rms, start)
             start.destroy()
-        except LatticeError as error:
-            failure = f"the Jacobian at the state cannot be solved with: {error}"
+        except Exception as error:  # noqa: BLE001 - PETSc wraps the failures of a callback
+            failure = f"the Jacobian at the state cannot be solved with: {own_failure(error)}"
         if inverse is not None:
             inverse.destroy()
         return sensitivity, correction, failure
+
+    def _inverse(self) -> Inverse:
+        """Return solves with the Jacobian; by LU where the preconditioner of choice refuses the lattice."""
+        options = self._solve_options()
+        try:
+            return Inverse(self.subject, options, self.report)
+        except InputError as error:
+            if options.preconditioner != "auto":
+                raise
+            self.report(f"by LU instead: {error}")
+        return Inverse(self.subject, options.model_copy(update={"preconditioner": "direct"}), self.report)
 
     def _march(self) -> tuple[MarchCheck | None, str, str]:
         """Return the march, or why there is none and what that means."""
