@@ -213,6 +213,7 @@ def test_a_state_of_the_coarse_lattice_only_is_refused_for_refinement(tmp_path):
     assert {"march", "refinement"} <= failed(found) <= {"correction", "march", "refinement", "bands"}
 
 
+@pytest.mark.long
 def test_the_benchmark_of_the_bands_measures_a_state(tmp_path):
     from scaling.band_cases import patterns
     from scaling.bands import measure, shares
@@ -226,6 +227,7 @@ def test_the_benchmark_of_the_bands_measures_a_state(tmp_path):
     assert 1.0 < found["two refinements: finest"]["sharpness"] < 10.0
 
 
+@pytest.mark.long
 def test_a_preconditioner_that_refuses_a_lattice_does_not_refuse_the_state(odd, monkeypatch):
     from lattice.solve import registry
 
