@@ -29,7 +29,10 @@ LAYERS = (
     ("solve",),
     ("check",),
     ("batch",),
+    ("sizing",),
     ("campaign",),
+    ("report",),
+    ("study",),
     ("cli",),
     ("__init__", "__main__"),
 )

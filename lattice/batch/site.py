@@ -57,6 +57,16 @@ class Queue(Section):
     max_ranks: Count | None = Field(None, description="most ranks of one job there")
 
 
+class MachineNumbers(Section):
+    """What predictions of a scaling study need to know of a machine; what is left out is as measured here."""
+
+    latency_us: Positive | None = Field(None, description="time of an empty message between nodes, us")
+    link_gb_s: Positive | None = Field(None, description="bandwidth between two ranks on two nodes, GB/s")
+    rank_memory_gb_s: Positive | None = Field(
+        None, description="memory bandwidth of a node over its ranks, GB/s (STREAM triad)"
+    )
+
+
 class Site(Section):
     """A cluster, or this machine."""
 
@@ -85,6 +95,7 @@ class Site(Section):
     activate: Line | None = Field(None, description="file to source, such as a virtual environment's")
     environment: dict[Variable, Line] = Field({}, description="variables to set")
     directives: tuple[Directive, ...] = Field((), description="further options for the scheduler, as typed")
+    machine: MachineNumbers | None = Field(None, description="numbers for the predictions of `lattice study`")
 
     @model_validator(mode="after")
     def _judge(self) -> Site:

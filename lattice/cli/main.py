@@ -17,6 +17,8 @@ from lattice.errors import InputError
 COMMANDS = {
     "solve": "solve a job for a steady, travelling or time-periodic state",
     "campaign": "run many starts from one file, and put their outcomes together",
+    "study": "measure how solves scale with ranks, and report it",
+    "size": "tell what memory, time and core hours a job needs, before it runs",
     "submit": "hand jobs to a scheduler, or run them in the background",
     "runs": "show how runs stand, or follow one",
     "cancel": "stop a submitted run",

@@ -1,0 +1,1 @@
+"""Reports as one HTML page or as Markdown, from the same parts."""

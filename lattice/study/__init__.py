@@ -1,0 +1,1 @@
+"""Scaling studies: points measured under the launcher, metrics, cost model, report."""
