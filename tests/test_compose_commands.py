@@ -75,6 +75,7 @@ def test_excerpts_of_excerpts_replace_each_other_but_nothing_else(folder, capsys
         (["--x", "9:3", "--out", "a.h5"], "--x: must be FROM:TO with FROM < TO, got '9:3'"),
         (["--y", "0:1", "--out", "a.h5"], "start.y must be left out"),
         (["--blend", "1", "--out", "a.h5"], "--blend: must be from 0 to below 1, got '1'"),
+        (["--coarsen", "no", "--out", "a.h5"], "--coarsen: must be a number from 0.1 to 10, got 'no'"),
         (["--out", "a.nc"], "--out: must end in .h5, got 'a.nc'"),
         (["--out", "none/a.h5"], "must lie in an existing folder"),
     ],
@@ -85,6 +86,11 @@ def test_unusable_excerpts_are_refused(folder, capsys, arguments, says):
 
 
 def test_a_mosaic_from_the_shell_and_from_a_job_file_are_one(folder, capsys):
+    assert (
+        main(["mosaic", "a=runs/film", "--row", "a a", "--out", "b.h5", "--coarsen", "1.6", "--nt", "18"])
+        == 0
+    )
+    assert read_whole("b.h5").shape == (18, 1, 40, 1)
     members = ["a=runs/film", "b=runs/film,shift_x=3,shift_t=2.5"]
     assert main(["mosaic", *members, "--row", "a b", "--row", "b a", "--out", "four.h5"]) == 0
     said = capsys.readouterr().out

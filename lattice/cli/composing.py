@@ -35,12 +35,35 @@ def add_output_arguments(parser: argparse.ArgumentParser) -> None:
         parser.add_argument(
             f"--{name}", metavar="N", type=_count, help=f"{what}; default: as close as those of the source"
         )
+    parser.add_argument(
+        "--coarsen",
+        metavar="FACTOR",
+        default="1",
+        help="widen the spacings by this factor, where no number is given; a solve refines twice by 1.4",
+    )
     parser.add_argument("--force", action="store_true", help="replace FILE even if it holds a solved state")
 
 
 def chosen_nodes(options: argparse.Namespace) -> dict[str, int]:
     """Return the numbers of nodes given."""
     return {n: getattr(options, n) for n in ("nt", "nx", "ny") if getattr(options, n) is not None}
+
+
+def chosen_coarsening(options: argparse.Namespace) -> float:
+    """Return the factor by which the spacings are to become wider.
+
+    Raises
+    ------
+    InputError
+        For text that is no factor.
+    """
+    try:
+        factor = float(options.coarsen)
+    except ValueError:
+        factor = 0.0
+    if not 0.1 <= factor <= 10.0:
+        raise InputError(f"must be a number from 0.1 to 10, got '{options.coarsen}'", key="--coarsen")
+    return factor
 
 
 def _count(text: str) -> int:

@@ -38,12 +38,13 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
 
 def run(options: argparse.Namespace) -> int:
     """Run the command and return the exit code."""
-    from lattice.cli.composing import chosen_nodes, compose
+    from lattice.cli.composing import chosen_coarsening, chosen_nodes, compose
     from lattice.cli.paths import state_path
 
     windows = {axis: read_window(axis, getattr(options, axis)) for axis in "txy"}
     blend = read_fraction("--blend", options.blend)
     blend_space = read_fraction("--blend-space", options.blend_space)
+    coarsen = chosen_coarsening(options)
     state = state_path(options.state)
     from lattice.starts.compose import Composition, plan_excerpt
     from lattice.starts.options import ExcerptOptions
@@ -53,7 +54,7 @@ def run(options: argparse.Namespace) -> int:
     )
 
     def plan() -> Composition:
-        return plan_excerpt(asked, chosen_nodes(options))
+        return plan_excerpt(asked, chosen_nodes(options), coarsen)
 
     given = ", ".join(f"{axis} {getattr(options, axis)}" for axis in "txy" if windows[axis] is not None)
     return compose(options, plan, f"{options.state}: {given or 'the whole state'}")

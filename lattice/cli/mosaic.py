@@ -53,7 +53,7 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
 
 def run(options: argparse.Namespace) -> int:
     """Run the command and return the exit code."""
-    from lattice.cli.composing import chosen_nodes, compose
+    from lattice.cli.composing import chosen_coarsening, chosen_nodes, compose
 
     if len(options.members) == 1 and "=" not in options.members[0]:
         job = options.members[0]
@@ -61,7 +61,7 @@ def run(options: argparse.Namespace) -> int:
     members = dict(read_member(text) for text in options.members)
     if not options.row:
         raise InputError('is needed: the names of members along x, such as --row "a b"', key="--row")
-    blend = read_fraction("--blend", options.blend)
+    blend, coarsen = read_fraction("--blend", options.blend), chosen_coarsening(options)
     from lattice.starts.compose import plan_composed_mosaic
     from lattice.starts.options import MosaicOptions
 
@@ -69,7 +69,7 @@ def run(options: argparse.Namespace) -> int:
     told = "; ".join(options.row)
     return compose(
         options,
-        lambda: plan_composed_mosaic(asked, chosen_nodes(options)),
+        lambda: plan_composed_mosaic(asked, chosen_nodes(options), coarsen),
         f"the mosaic {told} (earliest first)",
     )
 

@@ -61,6 +61,7 @@ def excerpt_state(
     blend: float = 0.3,
     blend_space: float = 0.5,
     nodes: Nodes | None = None,
+    coarsen: float = 1.0,
     comm: MPI.Intracomm | None = None,
     report: Report = silent,
 ) -> StateMeta:
@@ -80,6 +81,8 @@ def excerpt_state(
         Fraction of the window that is blended with what follows it, in time and in space.
     nodes : dict of str to int, optional
         Any of `nt`, `nx`, `ny`; for the others the state's spacings are kept.
+    coarsen : float
+        Factor by which those spacings become wider: damped steps need no fine lattice, and a solve refines.
     comm : MPI.Intracomm, optional
         The ranks; this process alone unless given.
     report : callable
@@ -97,7 +100,7 @@ def excerpt_state(
     """
     comm = _ranks(comm)
     options = ExcerptOptions(os.fspath(source), None, t, x, y, blend, blend_space)
-    planned = on_root(comm, lambda: plan_excerpt(options, nodes or {}))
+    planned = on_root(comm, lambda: plan_excerpt(options, nodes or {}, coarsen))
     return write_composition(planned, out, comm, report)
 
 
@@ -108,6 +111,7 @@ def mosaic_states(
     *,
     blend: float = 0.5,
     nodes: Nodes | None = None,
+    coarsen: float = 1.0,
     comm: MPI.Intracomm | None = None,
     report: Report = silent,
 ) -> StateMeta:
@@ -130,6 +134,8 @@ def mosaic_states(
         Width of the zone that neighbours share, as a fraction of the shorter one.
     nodes : dict of str to int, optional
         Any of `nt`, `nx`, `ny`; for the others the finest of the members' spacings is kept.
+    coarsen : float
+        Factor by which that spacing becomes wider: damped steps need no fine lattice, and a solve refines.
     comm : MPI.Intracomm, optional
         The ranks; this process alone unless given.
     report : callable
@@ -147,11 +153,11 @@ def mosaic_states(
     """
     comm = _ranks(comm)
     options = MosaicOptions(tuple(rows), {name: _member(given) for name, given in members.items()}, blend)
-    planned = on_root(comm, lambda: plan_composed_mosaic(options, nodes or {}))
+    planned = on_root(comm, lambda: plan_composed_mosaic(options, nodes or {}, coarsen))
     return write_composition(planned, out, comm, report)
 
 
-def plan_excerpt(options: ExcerptOptions, nodes: Nodes) -> Composition:
+def plan_excerpt(options: ExcerptOptions, nodes: Nodes, coarsen: float = 1.0) -> Composition:
     """Return what an excerpt of a state will be. Not collective."""
     law, lattice = _law_and_lattice(options.file)
     source = describe_source(options, law)
@@ -159,7 +165,7 @@ def plan_excerpt(options: ExcerptOptions, nodes: Nodes) -> Composition:
     found = {}
     for axis, name in zip("tyx", ("nt", "ny", "nx"), strict=True):
         cut = cuts[axis]
-        kept = cut.nodes * cut.length / cut.covered
+        kept = cut.nodes * cut.length / cut.covered / coarsen
         found[name] = _count(name, kept, nodes, fewest=min(cut.nodes, FEWEST))
     values = {**law.defaults, **excerpt_values(options, source, law)}
     if source.nodes[0] == 1:
@@ -167,7 +173,7 @@ def plan_excerpt(options: ExcerptOptions, nodes: Nodes) -> Composition:
     return Composition("excerpt", options, law, _lattice(lattice, found), values)
 
 
-def plan_composed_mosaic(options: MosaicOptions, nodes: Nodes) -> Composition:
+def plan_composed_mosaic(options: MosaicOptions, nodes: Nodes, coarsen: float = 1.0) -> Composition:
     """Return what a mosaic of states will be. Not collective."""
     if not options.members:
         raise InputError("a mosaic needs members; give each name of its rows a state file")
@@ -178,7 +184,7 @@ def plan_composed_mosaic(options: MosaicOptions, nodes: Nodes) -> Composition:
     found = {}
     for place, name in enumerate(("nt", "ny", "nx")):
         fewest = 1 if place == 0 and not timed else FEWEST
-        found[name] = _count(name, _finest(layout, place), nodes, fewest)
+        found[name] = _count(name, _finest(layout, place) / coarsen, nodes, fewest)
     if law.dimensions == 1:
         found["ny"] = 1
     return Composition("mosaic", options, law, _lattice(lattice, found), {**law.defaults, **layout.values})
