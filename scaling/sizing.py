@@ -16,7 +16,7 @@ import subprocess
 import sys
 import tempfile
 import time
-from dataclasses import dataclass
+from dataclasses import asdict, dataclass
 from pathlib import Path
 from typing import Any
 
@@ -116,18 +116,15 @@ def _write(case: Case, folder: Path) -> Path:
     return path
 
 
-def compare(name: str, case: Case, calibration: Any, folder: Path) -> dict[str, Any]:
-    """Size a job, run it, and return both."""
+def find_out(name: str, case: Case, folder: Path) -> dict[str, Any]:
+    """Return what probes tell about a job."""
     from lattice.job.reader import load_job
     from lattice.sizing.gather import gather
 
     job = load_job(_write(case, folder))
     began = time.perf_counter()
     knowledge = gather(job, case.ranks)
-    gathering = time.perf_counter() - began
-    summary = _solve(case, folder)
-    row = {"knowledge": knowledge.record(), "summary": summary, "sizing_seconds": gathering}
-    return row | predict(name, case, row, calibration, folder)
+    return {"case": name, "knowledge": knowledge.record(), "sizing_seconds": time.perf_counter() - began}
 
 
 def predict(name: str, case: Case, row: dict[str, Any], calibration: Any, folder: Path) -> dict[str, Any]:
@@ -172,6 +169,17 @@ def passes(row: dict[str, Any]) -> bool:
     )
 
 
+def _keep(path: Path, rows: dict[str, Any], calibration: Any) -> None:
+    """Write all rows, with the machine and its calibration."""
+    from scaling.record import describe
+
+    path.parent.mkdir(parents=True, exist_ok=True)
+    content = {"machine": describe(), "calibration": None, "rows": list(rows.values())}
+    if calibration is not None:
+        content["calibration"] = asdict(calibration)
+    path.write_text(json.dumps(content, indent=1) + "\n")
+
+
 HEADER = (
     f"{'case':18} {'ranks':>5} {'coarse':>12} {'steps':>5} {'its':>4}  {'MB':>6} {'pred.':>6} {'ratio':>6}"
     f"  {'s':>6} {'pred.':>6} {'ratio':>6} {'beforehand':>10}"
@@ -197,12 +205,16 @@ def main() -> int:
         description=__doc__, formatter_class=argparse.RawDescriptionHelpFormatter
     )
     parser.add_argument("--cases", default=",".join(CASES))
-    parser.add_argument("--again", action="store_true", help="predict kept runs anew, run nothing")
+    modes = parser.add_mutually_exclusive_group()
+    modes.add_argument(
+        "--find-out", action="store_true", help="only compile and probe, for a call with --kept"
+    )
+    modes.add_argument("--kept", action="store_true", help="run with what an earlier call has found out")
+    modes.add_argument("--again", action="store_true", help="predict kept runs anew, run nothing")
     parser.add_argument("--calibration", help="a calibration's file; default: this machine's")
     parser.add_argument("--out", default="scaling/results/sizing.json")
     options = parser.parse_args()
     from lattice.sizing.calibration import calibration_path, load_calibration
-    from scaling.record import describe
 
     calibration = load_calibration(Path(options.calibration) if options.calibration else calibration_path())
     path = Path(options.out)
@@ -210,17 +222,20 @@ def main() -> int:
     print(HEADER)
     with tempfile.TemporaryDirectory(prefix="lattice-sizing-") as folder:
         names = list(rows) if options.again else options.cases.split(",")
-        if not options.again:
+        if not options.again and not options.kept:
             compile_loops(Path(folder))
         for name in names:
-            place = Path(folder) / name
-            if options.again:
-                rows[name] |= predict(name, CASES[name], rows[name], calibration, place)
-            else:
-                rows[name] = compare(name, CASES[name], calibration, place)
-            print(line(rows[name]), flush=True)
-    path.parent.mkdir(parents=True, exist_ok=True)
-    path.write_text(json.dumps({"machine": describe(), "rows": list(rows.values())}, indent=1) + "\n")
+            place, case = Path(folder) / name, CASES[name]
+            if not options.again and not options.kept:
+                rows[name] = find_out(name, case, place)
+            if not options.again and not options.find_out:
+                rows[name]["summary"] = _solve(case, place)
+            if not options.find_out:
+                rows[name] |= predict(name, case, rows[name], calibration, place)
+                print(line(rows[name]), flush=True)
+            _keep(path, rows, calibration)
+    if options.find_out:
+        return 0
     inside = sum(passes(row) for row in rows.values())
     print(
         f"{inside} of {len(rows)} within {MEMORY:.0%} of memory and {TIME:.0%} of time,"

@@ -120,7 +120,7 @@ def test_lines_are_found_again_from_samples() -> None:
         else s
         for s in samples
     ]
-    speeds, error = fit_speeds(1, 2.0, samples)
+    speeds, error = fit_speeds(1, (2.0, 3.0), samples)
     assert error < 1e-6
     assert speeds.flop == pytest.approx(1e-10, rel=1e-4)
     found = [getattr(speeds, name) for name in LINES]
@@ -130,7 +130,7 @@ def test_lines_are_found_again_from_samples() -> None:
 def calibration(*counts: int) -> Calibration:
     """Return a made-up machine on which twice the ranks factorise 1.5 times as fast."""
     speeds = [
-        Speeds(ranks=n, start_up=2.0, flop=1e-10 / n**0.585, **{name: Line(1e-4, 1e-8) for name in LINES})
+        Speeds(n, 2.0, 3.0, flop=1e-10 / n**0.585, **{name: Line(1e-4, 1e-8) for name in LINES})
         for n in counts
     ]
     return Calibration(

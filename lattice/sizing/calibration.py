@@ -8,7 +8,7 @@ import os
 import re
 import socket
 from collections.abc import Mapping
-from dataclasses import asdict, dataclass, field
+from dataclasses import asdict, dataclass, field, replace
 from pathlib import Path
 from typing import Any
 
@@ -43,8 +43,9 @@ class Speeds:
     Parameters
     ----------
     ranks : int
-    start_up : float
-        Seconds of a run that are not the solve's: from the command to the solve, and after it.
+    start_up, two_level_start_up : float
+        Seconds of a run on a lattice so small that its solve takes next to none: the program's start, its
+        loops loaded, the picture; with two levels there are more loops.
     tangent : Line
         Per operation of a product with the Jacobian, halo included.
     vector : Line
@@ -61,6 +62,8 @@ class Speeds:
         Per entry of the factors, all ranks together.
     transform : Line
         Per number: a Fourier transform and its inverse, redistribution included.
+    plan : Line
+        Per number: planning a transform, once on a lattice.
     symbol : Line
         Per number: means of the tangent's coefficients, symbols and their inverses.
     write : Line
@@ -69,6 +72,7 @@ class Speeds:
 
     ranks: int
     start_up: float
+    two_level_start_up: float
     tangent: Line
     vector: Line
     assembly: Line
@@ -77,11 +81,15 @@ class Speeds:
     flop: float
     solve: Line
     transform: Line
+    plan: Line
     symbol: Line
     write: Line
 
 
-LINES = ("tangent", "vector", "assembly", "analysis", "factor", "solve", "transform", "symbol", "write")
+LINES = (
+    *("tangent", "vector", "assembly", "analysis", "factor", "solve"),
+    *("transform", "plan", "symbol", "write"),
+)
 
 
 @dataclass(frozen=True)
@@ -104,7 +112,7 @@ class Calibration:
     picture_mb : float
         What drawing adds on the first rank.
     error : float
-        Largest relative error of the fits on the measurements themselves.
+        Root mean square relative error of the fits on the measurements themselves, the worst of the counts.
     seconds : float
         The calibration took.
     """
@@ -151,12 +159,12 @@ def _scaled(speeds: Speeds, ranks: int, power: float) -> Speeds:
     faster = (ranks / speeds.ranks) ** power
     # Messages are added up in a tree: their constant part grows with the logarithm of the ranks.
     slower = math.log2(2 * ranks) / math.log2(2 * speeds.ranks)
-    changed: dict[str, Line] = {}
+    changed: dict[str, Any] = {}
     for name in LINES:
         line: Line = getattr(speeds, name)
         shared = name in ("factor", "solve", "analysis")
         changed[name] = Line(line.constant * slower, line.each / faster if shared else line.each)
-    return Speeds(ranks=ranks, start_up=speeds.start_up, flop=speeds.flop / faster, **changed)
+    return replace(speeds, ranks=ranks, flop=speeds.flop / faster, **changed)
 
 
 def calibration_folder(environ: Mapping[str, str] | None = None) -> Path:
@@ -206,6 +214,6 @@ def load_calibration(path: Path) -> Calibration | None:
 
 
 def _speeds(record: Mapping[str, Any]) -> Speeds:
-    lines = {name: Line(**record[name]) for name in LINES}
-    start_up, flop = float(record["start_up"]), float(record["flop"])
-    return Speeds(ranks=int(record["ranks"]), start_up=start_up, flop=flop, **lines)
+    lines: dict[str, Any] = {name: Line(**record[name]) for name in LINES}
+    rest: dict[str, Any] = {name: float(record[name]) for name in ("start_up", "two_level_start_up", "flop")}
+    return Speeds(ranks=int(record["ranks"]), **rest, **lines)

@@ -296,8 +296,10 @@ class _Sizing:
             mean["LU"] -= uneven
         step = self._step(problem, iterations, tasks, small, spectral, damped)
         once = 0.0
-        if self.calibration and not damped:
-            once = seconds.analysis_seconds(tasks, self.calibration.on(self.ranks))
+        if self.calibration:
+            speeds = self.calibration.on(self.ranks)
+            once = 0.0 if damped else seconds.analysis_seconds(tasks, speeds)
+            once += seconds.plan_seconds(problem, speeds, small) if small or damped else 0.0
         total = sum(step.values()) * steps + once if step else None
         return LegEstimate(
             leg.stage,
@@ -416,7 +418,9 @@ class _Sizing:
         calibration = self.calibration
         if calibration is None:
             return None, None, None
-        start_up = calibration.on(self.ranks).start_up
+        speeds = calibration.on(self.ranks)
+        two_level = any(leg.coarse for leg in legs)
+        start_up = speeds.two_level_start_up if two_level else speeds.start_up
         start = self._start(calibration)
         return start_up, start, start_up + start + sum(leg.seconds or 0.0 for leg in legs)
 

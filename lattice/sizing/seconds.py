@@ -101,6 +101,12 @@ def analysis_seconds(tasks: Sequence[LuTask], speeds: Speeds) -> float:
     return sum(task.copies * speeds.analysis.seconds(task.problem.nonzeros) for task in tasks)
 
 
+def plan_seconds(problem: Problem, speeds: Speeds, coarse: Problem | None) -> float:
+    """Return the seconds of planning transforms, done once on a lattice."""
+    small = 0.0 if coarse is None else speeds.plan.seconds(coarse.owned(speeds.ranks))
+    return speeds.plan.seconds(problem.owned(speeds.ranks)) + small
+
+
 def march_seconds(steps: float, numbers: int, calibration: Calibration) -> float:
     """Return the seconds of a march of so many steps of slices of so many numbers; one rank marches."""
     return steps * calibration.march.seconds(numbers)
