@@ -27,7 +27,7 @@ def outcome_table(rows: Sequence[Row], tally: Tally) -> str:
         *scalars,
         "kind",
         "repeats",
-        "newton",
+        "steps",
         "seconds",
         "MB",
     ]
