@@ -208,8 +208,9 @@ def load_calibration(path: Path) -> Calibration | None:
     except OSError as error:
         raise InputError(f"cannot be read: {error.strerror}", file=str(path)) from None
     except (ValueError, TypeError, KeyError) as error:
+        what = f"{error} is missing" if isinstance(error, KeyError) else str(error)
         raise InputError(
-            f"is no calibration: {error}; make it anew with `lattice size --calibrate`", file=str(path)
+            f"is no calibration of this program: {what}; make it anew with `lattice size --calibrate`", file=str(path)
         ) from None
 
 
