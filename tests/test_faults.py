@@ -112,6 +112,7 @@ def survive_kills(project: Path, kills: int, seed: int, pace: tuple[str, ...]) -
     assert json.loads((project / "run" / "summary.json").read_text())["outcome"] == "converged"
 
 
+@pytest.mark.long
 def test_a_run_survives_the_kill_of_a_rank_at_any_instant(project: Path) -> None:
     survive_kills(project, kills=2, seed=5, pace=HALVED)
 

@@ -74,6 +74,7 @@ def test_a_job_runs_on_two_ranks_to_its_state_and_is_watched(project: Path, clus
     assert f"JobId={job}" in told and "ExitCode=0:0" in told
 
 
+@pytest.mark.long
 def test_a_run_is_cancelled_while_it_waits_and_while_it_runs(project: Path, cluster: Cluster) -> None:
     slow = ("--", "-snes_linesearch_type", "basic", "-snes_linesearch_damping", "0.02")
     submit(project, cluster, "film.toml", "--ranks", "2", "--out", "first", *slow)

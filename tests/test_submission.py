@@ -234,6 +234,7 @@ echo '{"Jobs": {"1.server": {"job_state": "R", "resources_used": {"walltime": "0
 """
 
 
+@pytest.mark.long
 def test_pbs_scripts_run_a_job_over_several_legs_under_a_stub_of_qsub(project: Path) -> None:
     commands = project / "bin"
     commands.mkdir()
