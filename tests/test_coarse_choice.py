@@ -60,6 +60,11 @@ def test_film_gets_the_lattice_of_its_active_waves_and_the_spectral_smoother():
         assert along[number >= nodes // 2].sum() <= TAIL * along.sum()
 
 
+def test_slabs_of_too_few_levels_are_refused_where_they_are_asked_for():
+    with pytest.raises(InputError, match=r"solve.coarse.smoother: must be 'auto' or 'spectral' below 8"):
+        choice(FILM, Lattice(6, 1, 50), keys={"smoother": "slabs"}, **BOX)
+
+
 def test_reason_names_lattice_smoother_and_why():
     found = choice(FILM, FINE, **BOX)
     text = f"coarse lattice {found.lattice.nt} x {found.lattice.nx} of order 8 for 72 x 50: "

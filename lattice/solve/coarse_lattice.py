@@ -29,6 +29,8 @@ gives a spacing of 1.0 in x, on which prototypes of the scheme needed the fewest
 RULED = 0.35
 """Largest ratio of fluctuating coefficients to the constant part beyond the coarse lattice; gives 0.7 in
 t on the same fields."""
+FEWEST_LEVELS = 8
+"""Fewest levels that slabs of time levels can share."""
 LEAST_GAIN = 1.5
 """Fewest fine unknowns per coarse one for which two levels are worth their set-up."""
 
@@ -65,7 +67,13 @@ def choose(system: System, transform: Transform, constant: ConstantPart, options
     fine = system.lattice
     ratio_x, ruled = _ruling_wavenumber(system, constant)
     smoother = options.smoother if options.smoother != "auto" else ("spectral" if ruled else "slabs")
-    if smoother == "slabs" and fine.nt < 8:
+    if smoother == "slabs" and fine.nt < FEWEST_LEVELS:
+        if options.smoother == "slabs":
+            raise InputError(
+                f"must be 'auto' or 'spectral' below {FEWEST_LEVELS} levels, which slabs cannot share,"
+                f" got 'slabs' and lattice.nt = {fine.nt}; raise lattice.nt or change it",
+                key="solve.coarse.smoother",
+            )
         smoother = "spectral"
     order = options.order or (8 if system.law.dimensions == 1 or smoother == "slabs" else 6)
     tails = _axis_tails(system, transform)
