@@ -315,7 +315,7 @@ class Returner(Marcher):
         if not count:
             raise LatticeError(
                 f"no near recurrence in {self._slices * self.every:g} units of time: raise start.march_time, "
-                "or widen start.shortest and start.longest"
+                "or widen start.shortest and start.longest; a flow that rests or only travels has none"
             )
         if self.start.near_time is not None:
             away = [abs(r.time - self.start.near_time) for r in found.recurrences]
