@@ -105,8 +105,7 @@ class _Marcher:
     def choose_step(self, slices: Real) -> None:
         """Set the step that serves all given slices, shape (n, ny, nx, C)."""
         spectra = self.stepper.to_spectrum(slices)
-        dt = min(suggest_dt(self.stepper, spectrum, STEP_TOLERANCE) for spectrum in spectra)
-        self.stepper = self.stepper.with_step(dt)
+        self.stepper = self.stepper.with_step(suggest_dt(self.stepper, spectra, STEP_TOLERANCE))
 
     def march(self, slices: Real, time: float) -> Complex:
         """Return the spectra of slices after a time, seen in the state's frame."""
@@ -170,7 +169,8 @@ def march_check(subject: Subject) -> MarchCheck:
     try:
         marcher = _Marcher(subject, scale)
         marcher.stepper, marcher.typical = marcher.stepper.with_step(dt), typical
-        found = _march_own(subject, marcher, own, rate)
+        with StateFile(subject.path) as file:
+            found = _march_own(file, marcher, own, rate)
     except (LatticeError, OSError) as caught:
         error = caught
     raise_together(subject.comm, error)
@@ -203,7 +203,8 @@ def _probe(subject: Subject, scale: Real) -> tuple[float, float, float]:
     """
     marcher, nt = _Marcher(subject, scale), subject.lattice.nt
     levels = sorted({k * nt // PROBES for k in range(PROBES)})
-    slices = np.concatenate([_read(subject, level, level + 1) for level in levels])
+    with StateFile(subject.path) as file:
+        slices = _read(file, levels)
     marcher.choose_step(slices)
     time = min(marcher.values["period"], 8.0 * marcher.stepper.dt) if nt > 1 else 8.0 * marcher.stepper.dt
     spectra = marcher.stepper.to_spectrum(slices)
@@ -236,26 +237,26 @@ def _segments(subject: Subject, rate: float) -> list[tuple[int, int]]:
 
 
 def _march_own(
-    subject: Subject, marcher: _Marcher, segments: list[tuple[int, int]], rate: float
+    file: StateFile, marcher: _Marcher, segments: list[tuple[int, int]], rate: float
 ) -> list[tuple[int, float, float, float]]:
     """Return first level, mismatch, growth and the marcher's error of this rank's segments."""
-    size = subject.lattice.ny * subject.lattice.nx * len(subject.law.components)
+    lattice = marcher.lattice
+    size = lattice.ny * lattice.nx * len(marcher.law.components)
     batch = max(1, BATCH_VALUES // size)
     found = []
     for length in sorted({stop - start for start, stop in segments}):
-        time = length * marcher.spacing if subject.lattice.nt > 1 else steady_time(rate)
+        time = length * marcher.spacing if lattice.nt > 1 else steady_time(rate)
         alike = [start for start, stop in segments if stop - start == length]
         for first in range(0, len(alike), batch):
-            found += _march_batch(subject, marcher, alike[first : first + batch], length, time)
+            found += _march_batch(file, marcher, alike[first : first + batch], length, time)
     return found
 
 
 def _march_batch(
-    subject: Subject, marcher: _Marcher, starts: list[int], length: int, time: float
+    file: StateFile, marcher: _Marcher, starts: list[int], length: int, time: float
 ) -> list[tuple[int, float, float, float]]:
-    nt, stepper = subject.lattice.nt, marcher.stepper
-    slices = np.concatenate([_read(subject, start, start + 1) for start in starts])
-    targets = np.concatenate([_read(subject, (s + length) % nt, (s + length) % nt + 1) for s in starts])
+    nt, stepper = marcher.lattice.nt, marcher.stepper
+    slices, targets = _read(file, starts), _read(file, [(start + length) % nt for start in starts])
     spectra = stepper.to_spectrum(slices)
     disturbed = marcher.disturbed(spectra, starts)
     dt = time / max(1, steps_within(time, stepper.dt))
@@ -268,10 +269,10 @@ def _march_batch(
     return list(zip(starts, mismatches.tolist(), growths.tolist(), errors.tolist(), strict=True))
 
 
-def _read(subject: Subject, first: int, last: int) -> Real:
-    lattice = subject.lattice
-    with StateFile(subject.path) as file:
-        return file.block(Block(first, last, 0, lattice.ny, 0, lattice.nx))
+def _read(file: StateFile, levels: list[int]) -> Real:
+    """Return the slices at levels, shape (n, ny, nx, C)."""
+    lattice = file.meta.lattice
+    return np.concatenate([file.block(Block(n, n + 1, 0, lattice.ny, 0, lattice.nx)) for n in levels])
 
 
 def single_march(subject: Subject) -> float:
@@ -284,7 +285,8 @@ def single_march(subject: Subject) -> float:
 
     def whole() -> float:
         marcher = _Marcher(subject, scale)
-        slices = _read(subject, 0, 1)
+        with StateFile(subject.path) as file:
+            slices = _read(file, [0])
         marcher.choose_step(slices)
         end = marcher.march(slices, subject.values["period"])
         return float(marcher.distance(end, marcher.stepper.to_spectrum(slices))[0])

@@ -40,7 +40,9 @@ SETTLED = 0.03
 """Relative change of the smallest singular value from one step to the next at which it counts as found."""
 UNSETTLED_MARGIN = 3.0
 """Factor on the error bound where the smallest singular value is only known from above."""
-LOOSE_RTOL, LOOSE_ITERATIONS = 1e-2, 60
+CORRECTION_RTOL, ESTIMATE_RTOL, ITERATIONS = 0.03, 0.1, 100
+"""Relative tolerances of iterative solves: the correction's band is three times as wide as its error, and a
+singular value need only be known to its size. Together they cost about two solves of a Newton step."""
 
 
 @dataclass(frozen=True)
@@ -144,12 +146,12 @@ class Inverse:
         ksp = PETSc.KSP().create(self.system.comm)
         ksp.setOperators(matrix)
         ksp.setType("fgmres")
-        ksp.setTolerances(rtol=LOOSE_RTOL, max_it=LOOSE_ITERATIONS)
+        ksp.setTolerances(max_it=ITERATIONS)
         ksp.getPC().setType("python")
         ksp.getPC().setPythonContext(_Solves(self.made))
         return ksp
 
-    def solve(self, r: Any, y: Any, transpose: bool = False) -> None:
+    def solve(self, r: Any, y: Any, transpose: bool = False, rtol: float = ESTIMATE_RTOL) -> None:
         """Set the vector of unknowns `y` to the inverse, or the transposed one, times `r`.
 
         Raises
@@ -160,11 +162,12 @@ class Inverse:
         if self._ksp is None:
             (self.made.apply_transpose if transpose else self.made.apply)(r, y)
             return
+        self._ksp.setTolerances(rtol=rtol)
         (self._ksp.solveTranspose if transpose else self._ksp.solve)(r, y)
         if self._ksp.getConvergedReason() < 0:
             raise LatticeError(
-                f"a linear solve with the Jacobian at the state did not reach {LOOSE_RTOL:g} in "
-                f"{LOOSE_ITERATIONS} iterations; choose another preconditioner"
+                f"a linear solve with the Jacobian at the state did not reach {rtol:g} in "
+                f"{ITERATIONS} iterations; choose another preconditioner"
             )
 
     def destroy(self) -> None:
@@ -259,7 +262,7 @@ def discretisation_error(subject: Subject, inverse: Inverse, exact: Array) -> Co
     system = subject.system
     right, step = system.vector(), system.vector()
     system.store(right, -exact.reshape(-1), np.zeros(len(system.unknowns)))
-    inverse.solve(right, step)
+    inverse.solve(right, step, rtol=CORRECTION_RTOL)
     moved = subject.x.copy()
     moved.axpy(1.0, step)
     owned, values = system.field_of(step), system.values_of(moved)
