@@ -7,7 +7,7 @@ from dataclasses import asdict, dataclass, replace
 from typing import Any
 
 LONGEST = 200
-SPECTRAL_FROM = 1e-2
+SPECTRAL_FROM = 1e-3
 """Damping, as a share of the size of J^T J, from which on the spectral preconditioner serves."""
 
 
