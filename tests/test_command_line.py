@@ -343,7 +343,7 @@ def test_petsc_options_are_split_off_at_the_first_dashes() -> None:
 def test_the_command_line_has_the_documented_options() -> None:
     text = lattice("solve", "--help").stdout
     options = set(re.findall(r"--[a-z]+", text)) - {"--help"}
-    assert options == {"--ranks", "--out", "--set", "--force", "--launcher", "--debug"}
+    assert options == {"--ranks", "--out", "--set", "--force", "--resume", "--check", "--launcher", "--debug"}
     assert make_parser().prog == "lattice"
 
 
