@@ -237,3 +237,22 @@ def test_a_preconditioner_that_refuses_a_lattice_does_not_refuse_the_state(odd, 
     assert failed(found) == set()
     assert found.findings.sensitivity is not None
     assert found.findings.refinement.survived
+
+
+@pytest.mark.long
+def test_a_sum_of_two_steady_states_lies_inside_its_bands_in_two_dimensions(tmp_path):
+    # phi = f(x) + g(y) solves the two-dimensional integral form where f and g solve the one-dimensional one
+    # (derived). On 8 x 8: <phi_x^2> = <phi_y^2> = 3.0325327935 (independent recomputation).
+    length, nodes_each = 8.0, 24
+    x = nodes(nodes_each, TURN)
+    line = -(length / TURN) * (2.4 * np.cos(x) - 0.2 * np.cos(2 * x))
+    lattice = Lattice(1, nodes_each, nodes_each, dimensions=2)
+    law, free = "kuramoto-sivashinsky-2d", ("drift_x", "drift_y")
+    start = (line[None, :] + line[:, None])[None, :, :, None]
+    state = solve(law, lattice, start, free, length_x=length, length_y=length)
+    found = check(
+        store(tmp_path / "sum.h5", law, lattice, state, free), observables=("px=phi_x**2", "py=phi_y**2")
+    )
+    assert found.verdict == "certified", found.reasons
+    inside(found, "px", 3.0325327935)
+    inside(found, "py", 3.0325327935)
