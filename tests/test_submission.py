@@ -15,6 +15,7 @@ import pytest
 from lattice.batch.legs import LegLog
 from lattice.batch.local import SCHEDULER as LOCAL
 from lattice.batch.local import job_of
+from lattice.batch.scheduler import QueuedJob
 from lattice.batch.site import Site
 from lattice.batch.ticket import write_ticket
 from lattice.batch.watch import find_runs, view_run, view_runs
@@ -299,3 +300,19 @@ def test_a_run_waits_for_all_legs_of_the_one_before_it(project: Path) -> None:
     assert legs >= 2 and view_run(first).outcome == view_run(second).outcome == "converged"
     assert events(second, "began")[0]["time"] >= events(first, "ended")[-1]["time"]
     assert len(events(second, "began")) == 1
+
+
+def test_a_run_that_ends_while_its_scheduler_is_asked_is_not_called_lost(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    write_ticket(tmp_path, ticket(Site(scheduler="local")))
+    log = LegLog(tmp_path)
+    log.append("began", leg=1, job="999999999.1")
+
+    def jobs(self: object, ids: list[str]) -> dict[str, QueuedJob]:
+        (tmp_path / "summary.json").write_text('{"outcome": "converged", "reason": "done"}')
+        log.append("ended", leg=1, code=0)
+        return {job: QueuedJob("ended", "ended") for job in ids}
+
+    monkeypatch.setattr(type(LOCAL), "jobs", jobs)
+    assert view_run(tmp_path).outcome == "converged"

@@ -129,7 +129,13 @@ def view_runs(folders: Sequence[Path]) -> list[RunView]:
     """Return how runs stand; each scheduler is asked once for all."""
     files = [_read(folder) for folder in folders]
     answers = {system: _ask(system, files) for system in {one.system for one in files} - {""}}
-    return [_view(one, answers.get(one.system)) for one in files]
+    return [_judge(one, answers.get(one.system)) for one in files]
+
+
+def _judge(files: _Files, jobs: Jobs) -> RunView:
+    """Return how a run stands; what seems lost may have ended between its files and the answer."""
+    view = _view(files, jobs)
+    return _view(_read(files.folder), jobs) if view.outcome == "lost" else view
 
 
 def view_run(folder: Path) -> RunView:
