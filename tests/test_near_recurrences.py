@@ -135,6 +135,19 @@ def test_period_of_the_attracting_state_is_found():
     assert np.abs(np.roll(u, 18, axis=0) - np.roll(u, 14, axis=1)).max() < 0.01
 
 
+def test_recurrences_are_found_in_two_dimensions():
+    # On a narrow film waves along y decay, and what is left is the state in x alone.
+    options = RecurrenceOptions(
+        seed=0, spin_up=200.0, dt=0.2, march_time=40.0, match_drift=("x", "y"), shortest=7.0, longest=11.0
+    )
+    values = film(period=9.0, length_y=5.0, drift_y=0.0)
+    field, found, _ = begin("recurrence", options, Lattice(24, 8, 28, 2), values, load_law("film-2d"))
+    # What is left of the transient after 200 units costs 0.009 (0.002 after 300).
+    assert found["period"] == pytest.approx(PERIOD / 2, abs=0.02)
+    assert abs(found["drift_x"]) * found["period"] == pytest.approx(LENGTH / 2, abs=0.05)
+    assert np.abs(field - field[:, :1]).max() < 1e-6
+
+
 def test_shift_between_the_ends_becomes_the_drift():
     options = RecurrenceOptions(
         seed=1,
@@ -159,7 +172,14 @@ def test_shift_between_the_ends_becomes_the_drift():
 
 
 def test_a_recurrence_is_picked_by_rank_or_by_time():
-    options = {"seed": 3, "spin_up": 60.0, "march_time": 120.0, "match_drift": ("x",), "longest": 30.0, "dt": 0.15}
+    options = {
+        "seed": 3,
+        "spin_up": 60.0,
+        "march_time": 120.0,
+        "match_drift": ("x",),
+        "longest": 30.0,
+        "dt": 0.15,
+    }
     grid, values = Lattice(20, 1, 32), film(period=20.0, length_x=22.0)
     found = find_recurrences(RecurrenceOptions(**options), grid, values, FILM).recurrences
     assert [r.distance for r in found] == sorted(r.distance for r in found)

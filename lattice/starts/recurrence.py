@@ -38,8 +38,9 @@ Complex = NDArray[np.complex128]
 SLICES_PER_PERIOD = 50
 SLICES_BETWEEN_STEPS = 16
 """Slices after which the march's step is judged again."""
-FINER = 16
-"""Parts of the time between slices in which the lag of a recurrence picked is found."""
+FINER, FINER_SHIFTS = 16, 4
+"""Parts of the time between slices, and of the distance between nodes, in which the lag of a recurrence that
+is picked is found."""
 
 
 @dataclass(frozen=True)
@@ -329,7 +330,7 @@ class Returner(Marcher):
 
     def _refined(self, best: Recurrence) -> tuple[float, Complex]:
         """Return the lag at which the distance is smallest, and the spectrum then."""
-        comparison = self._scan.comparisons[best.image]
+        comparison = self._scan.comparisons[best.image].on_finer_shifts(FINER_SHIFTS)
         first = comparison.prepared(self._image_of(self.spectrum)[None])
         step, begin = self.every / FINER, max(best.lag - self.every, 0.5 * self.every)
         spectrum, squares = self._after(begin, best), []

@@ -84,6 +84,8 @@ class Comparison:
         Rows of the components whose common angle is free.
     mean_free : sequence of int
         Rows whose mean does not count.
+    finer : int, optional
+        Shifts tried for each distance between nodes, the best between them by a parabola.
     """
 
     def __init__(
@@ -93,12 +95,17 @@ class Comparison:
         axes: Sequence[str],
         pair: tuple[int, int] | None,
         mean_free: Sequence[int] = (),
+        finer: int | None = None,
     ) -> None:
         self.modes, self.weights, self.axes, self.pair = modes, weights, tuple(axes), pair
         self.mean_free = list(mean_free)
         rows, columns = modes.shape
-        finer = 2 if modes.my == 0 else 1
+        finer = finer or (2 if modes.my == 0 else 1)
         self._grid = (finer * rows if modes.my else 1, finer * columns)
+
+    def on_finer_shifts(self, finer: int) -> Comparison:
+        """Return the same comparison with that many shifts for each distance between nodes."""
+        return Comparison(self.modes, self.weights, self.axes, self.pair, self.mean_free, finer)
 
     def prepared(self, spectra: Complex) -> Complex:
         """Return spectra as they are compared: scaled, means that do not count left out."""
