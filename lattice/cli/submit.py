@@ -25,7 +25,8 @@ runs in the background of this machine. jobs/README.md leads from a login node t
 
 A run that its wall clock stops goes on by itself in a further job ("leg"), until it has converged, stands
 still, has used up its legs or core hours, or two legs in a row have made no step. Several jobs, or a
-campaign file, become one job array. `lattice size JOB --site SITE` tells beforehand what a job needs. Watch with `lattice runs`, end with `lattice cancel`.
+campaign file, become one job array. `lattice size JOB --site SITE` tells beforehand what a job needs.
+Watch with `lattice runs`, end with `lattice cancel`.
 
 The site's own rules on queues, files and core hours come before anything this program does. Try a job in
 the short queue first.
