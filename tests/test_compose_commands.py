@@ -33,6 +33,13 @@ def folder(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> Path:
     return tmp_path
 
 
+@pytest.fixture
+def undrawn(monkeypatch: pytest.MonkeyPatch) -> None:
+    """Leave out the pictures, which take seconds and have a test of their own."""
+    monkeypatch.setattr("lattice.show.pictures.plot_state", lambda state, out: out)
+    monkeypatch.setattr("lattice.show.returns.plot_returns", lambda *given: given[-1])
+
+
 def test_an_excerpt_is_written_drawn_and_ready_to_be_solved(folder, capsys):
     assert main(["excerpt", "runs/film", "--t", "0:8", "--x", "4:16", "--out", "piece.h5"]) == 0
     said = capsys.readouterr().out
@@ -51,7 +58,7 @@ def test_an_excerpt_is_written_drawn_and_ready_to_be_solved(folder, capsys):
     assert job.make_lattice() == state.meta.lattice
 
 
-def test_excerpts_of_excerpts_replace_each_other_but_nothing_else(folder, capsys):
+def test_excerpts_of_excerpts_replace_each_other_but_nothing_else(folder, undrawn, capsys):
     def cut(*more: str) -> int:
         return main(["excerpt", "runs/film", "--x", "0:8", *more])
 
@@ -85,7 +92,7 @@ def test_unusable_excerpts_are_refused(folder, capsys, arguments, says):
     assert says in capsys.readouterr().err
 
 
-def test_a_mosaic_from_the_shell_and_from_a_job_file_are_one(folder, capsys):
+def test_a_mosaic_from_the_shell_and_from_a_job_file_are_one(folder, undrawn, capsys):
     assert (
         main(["mosaic", "a=runs/film", "--row", "a a", "--out", "b.h5", "--coarsen", "1.6", "--nt", "18"])
         == 0
@@ -136,7 +143,7 @@ def test_unusable_mosaics_are_refused(folder, capsys, arguments, says):
     assert says in capsys.readouterr().err
 
 
-def test_an_own_law_goes_into_the_job_file(folder, capsys):
+def test_an_own_law_goes_into_the_job_file(folder, undrawn, capsys):
     law, grid = read_law("own", ("u_t = a*u + u_xx",), ("u",), {"a": 0.25}, 1), Lattice(20, 1, 32)
     meta = StateMeta.of_law(law, grid, {**STATE, "a": 0.25}, outcome="converged")
     write_state("own.h5", waves((20, 1, 32)), Block.whole(grid), meta, MPI.COMM_SELF)
@@ -150,11 +157,11 @@ RECURRENCES = """
 law.name = "kuramoto-sivashinsky"
 box = { period = 9.0, length_x = 17.63 }
 lattice = { nt = 24, nx = 24 }
-start = { kind = "recurrence", spin_up = 100.0, march_time = 60.0, dt = 0.2 }
+start = { kind = "recurrence", spin_up = 100.0, march_time = 40.0, dt = 0.2 }
 """
 
 
-def test_recurrences_are_listed_drawn_and_given_to_scripts(folder, capsys):
+def test_recurrences_are_listed_drawn_and_given_to_scripts(folder, request, capsys):
     Path("film.toml").write_text(RECURRENCES)
     assert main(["recurrences", "film.toml", "--count", "2"]) == 0
     first = capsys.readouterr()
@@ -164,6 +171,7 @@ def test_recurrences_are_listed_drawn_and_given_to_scripts(folder, capsys):
     assert lines[-1] == "next: lattice solve film.toml --set start.pick=1"
     assert "picture: film-recurrences.png" in first.err
     assert Path("film-recurrences.png").stat().st_size > 1000
+    request.getfixturevalue("undrawn")
     assert main(["recurrences", "film.toml", "--json", "--out", "map.png"]) == 0
     listed = json.loads(capsys.readouterr().out)
     assert listed[0]["pick"] == 1
