@@ -94,3 +94,10 @@ def far_start() -> Array:
     """Return a start from which full Newton steps make the residual grow."""
     noise = np.random.default_rng(3).uniform(-1.5, 1.5, film_start().shape)
     return film_start() + noise
+
+
+def alike(seed: int) -> Array:
+    """Return a field with the state's spectrum and random phases: noise as large as the state, as smooth."""
+    spectrum = np.fft.fft2(film_state()[0], axes=(0, 2))
+    white = np.fft.fft2(np.random.default_rng(seed).standard_normal(spectrum.shape), axes=(0, 2))
+    return np.asarray(np.fft.ifft2(np.abs(spectrum) * white / np.abs(white), axes=(0, 2)).real)

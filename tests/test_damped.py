@@ -20,7 +20,7 @@ from lattice.solve.normal_spectral import SpectralNormal
 from lattice.solve.petsc import start_petsc
 from lattice.solve.registry import make_preconditioner
 from lattice.system.system import System
-from tests.film import NODES, VALUES, film_state
+from tests.film import NODES, VALUES, alike, film_state
 from tests.problems import Array, free_of, law_of, random_field, values_of
 
 # One component; two with a free angle; an evolving one and a constraint with a free constant, in the plane;
@@ -171,10 +171,8 @@ def damp(system: System, x: Any, seen: list[DampedStep], **options: Any) -> Damp
 
 
 def noisy(seed: int, share: float) -> Array:
-    """Return the film state with white noise of a share of its amplitude, and shifted in time and space."""
-    field, _ = film_state()
-    noise = np.random.default_rng(seed).standard_normal(field.shape)
-    return np.asarray(np.roll(field, (5, 9), axis=(0, 2)) + share * field.std() * noise)
+    """Return the film state, shifted in time and space, with noise of a share of its amplitude."""
+    return np.asarray(np.roll(film_state()[0], (5, 9), axis=(0, 2)) + share * alike(seed))
 
 
 def recovered(seed: int, share: float) -> bool:

@@ -21,7 +21,7 @@ from lattice.solve.recorder import Recorder
 from lattice.solve.run import Outcome, run_job
 from lattice.store.runfolder import read_steps
 from lattice.store.statefile import read_meta, read_whole
-from tests.film import film_state
+from tests.film import alike, film_state
 from tests.mpi import run_module
 
 JOB = """
@@ -42,9 +42,7 @@ def numpy_kernels(monkeypatch: pytest.MonkeyPatch) -> None:
 
 @pytest.fixture
 def folder(tmp_path: Path) -> Path:
-    field, _ = film_state()
-    noise = np.random.default_rng(1).standard_normal(field.shape)
-    np.save(tmp_path / "rough.npy", field + 0.3 * field.std() * noise)
+    np.save(tmp_path / "rough.npy", film_state()[0] + 0.3 * alike(1))
     (tmp_path / "rough.toml").write_text(JOB, encoding="utf-8")
     return tmp_path
 
