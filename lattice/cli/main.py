@@ -27,6 +27,7 @@ COMMANDS = {
     "observe": "show observables of a state, or means over many beside a march",
     "info": "tell what a state file holds",
     "plot": "draw a state",
+    "report": "write one page about a run: state, history, certificate, cost",
     "recurrences": "list times at which a march nearly repeats itself, to solve from one",
     "excerpt": "cut a window of a state and make it periodic, to solve it",
     "mosaic": "arrange states in time and space, their seams blended, to solve that",

@@ -204,9 +204,10 @@ def _measure_together(study: Study, point: Point, comm: MPI.Intracomm, cores: in
     from lattice.study.rows import append_rows, describe_host, describe_point
 
     start_petsc([])
-    rows = measure(point, study.section, comm)
+    crowded = point.ranks > cores
+    rows = measure(point, study.section, comm, 1 if crowded else study.section.repeats)
     if comm.Get_rank() == 0:
-        told = describe_point(study, point, cores, point.ranks > cores) | describe_host()
+        told = describe_point(study, point, cores, crowded) | describe_host()
         told["command"] = f"lattice study {study.file.name}"
         append_rows(study.folder, [{**told, **row} for row in rows])
     comm.Barrier()

@@ -33,7 +33,7 @@ PETSC_EVENTS = (
 )
 
 
-def measure(point: Point, section: StudySection, comm: MPI.Intracomm) -> list[dict[str, Any]]:
+def measure(point: Point, section: StudySection, comm: MPI.Intracomm, repeats: int) -> list[dict[str, Any]]:
     """Return the rows of a point, one for each repeat; the same on every rank.
 
     Collective. PETSc must have been started.
@@ -56,7 +56,7 @@ def measure(point: Point, section: StudySection, comm: MPI.Intracomm) -> list[di
     started = _memory_mb()
     with StopFlag(comm) as stop:
         work = make_work(section, system, x, job, stop)
-        rows = list(_repeats(work, section, comm, read))
+        rows = list(_repeats(work, section.warm_ups, repeats, comm, read))
     machine = probe.probe_machine(comm)
     memory = {
         "before": _spread(comm, before),
@@ -80,9 +80,9 @@ def measure(point: Point, section: StudySection, comm: MPI.Intracomm) -> list[di
 
 
 def _repeats(
-    work: Work, section: StudySection, comm: MPI.Intracomm, read: Callable[[], Any]
+    work: Work, warm_ups: int, repeats: int, comm: MPI.Intracomm, read: Callable[[], Any]
 ) -> Iterator[dict[str, Any]]:
-    for number in range(section.warm_ups + section.repeats):
+    for number in range(warm_ups + repeats):
         work.prepare()
         before = _petsc_numbers()
         comm.Barrier()
@@ -94,14 +94,14 @@ def _repeats(
         lu = _lu_numbers(comm, work.lu_numbers())
         work.finish()
         row = {
-            "repeat": number - section.warm_ups,
+            "repeat": number - warm_ups,
             "calls": dict(ledger.calls),
             **_phases(comm, local),
             "petsc": _petsc_spread(comm, before, after),
             "lu": lu,
             **facts,
         }
-        if number >= section.warm_ups:
+        if number >= warm_ups:
             yield row
 
 

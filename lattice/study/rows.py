@@ -37,8 +37,10 @@ def rows_of(point: Point, rows: Sequence[dict[str, Any]]) -> list[dict[str, Any]
 
 
 def is_measured(study: Study, point: Point, rows: Sequence[dict[str, Any]]) -> bool:
-    """Tell whether a point has all its repeats."""
-    return len(rows_of(point, rows)) >= study.section.repeats
+    """Tell whether a point has all its repeats; where ranks share cores one tells all the counts."""
+    found = rows_of(point, rows)
+    wanted = 1 if any(row["oversubscribed"] for row in found) else study.section.repeats
+    return len(found) >= wanted
 
 
 def current_rows(study: Study, rows: Sequence[dict[str, Any]]) -> list[dict[str, Any]]:

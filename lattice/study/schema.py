@@ -37,7 +37,9 @@ class StudySection(Section):
         "steps",
     )
     newton_steps: Count = _key("Newton steps of one repeat, for `steps`", 1)
-    repeats: Count = _key("measured repeats of every point", 3)
+    repeats: Count = _key(
+        "measured repeats of every point; one where ranks share cores, which tells all counts", 3
+    )
     warm_ups: int = _key("repeats before those, not measured", 1, ge=0)
     budget: Positive | None = _key(
         "wall time in seconds of one call of the command; the next call goes on", None, shown="none"
