@@ -42,7 +42,7 @@ def numpy_kernels(monkeypatch: pytest.MonkeyPatch) -> None:
 
 @pytest.fixture
 def folder(tmp_path: Path) -> Path:
-    np.save(tmp_path / "rough.npy", film_state()[0] + 0.3 * alike(1))
+    np.save(tmp_path / "rough.npy", film_state()[0] + 0.2 * alike(1))
     (tmp_path / "rough.toml").write_text(JOB, encoding="utf-8")
     return tmp_path
 

@@ -29,7 +29,7 @@ if TYPE_CHECKING:
     from lattice.system.system import System
 
 FACTOR = 3.0
-"""By which mu rises after a refused step and falls after a kept one."""
+"""By which mu rises after a refused step, and falls after one that is kept at once."""
 LEAST, MOST = 1e-12, 1e3
 """Bounds of mu, as shares of the size of J^T J."""
 PROBE = 0.1
@@ -129,7 +129,8 @@ class Damped:
         rms = self._at(x)
         if not memory.residuals:
             memory = memory.begun(rms)
-            self.after_step(DampedStep(0, rms), memory, x, self._residual)
+            if memory.step == 0:
+                self.after_step(DampedStep(0, rms), memory, x, self._residual)
         while True:
             found = self._ending(x, memory)
             if found is None:
@@ -171,6 +172,7 @@ class Damped:
         memory = memory.scaled(scale)
         self.equations.gradient(self._residual, self._right)
         damping, iterations = memory.damping, 0
+        first = damping
         while damping <= MOST * scale:
             name, helping = self.preconditioners.serving(damping, memory.spectral_from)
             solved = self._solve(damping, helping, LOOSE_RTOL if rms > TIGHT_BELOW else TIGHT_RTOL)
@@ -184,7 +186,9 @@ class Damped:
             if reached < rms:
                 self._trial.copy(x)
                 self._trial_residual.copy(self._residual)
-                memory = memory.after(reached, max(damping / FACTOR, LEAST * scale))
+                # After a refusal the same mu is tried again: a lower one has just failed.
+                lower = damping / FACTOR if damping == first else damping
+                memory = memory.after(reached, max(lower, LEAST * scale))
                 step = DampedStep(memory.step, reached, damping, iterations, solved.iterations, name)
                 self.after_step(step, memory, x, self._residual)
                 return memory

@@ -19,7 +19,7 @@ def damped_leg(course: Course) -> Ending:
     """Make damped steps from where the leg stands. Collective."""
     options = _options(course)
     course.report(f"{course.leg.stage}: damped steps on {shape_text(course.lattice)} nodes")
-    if not course.progress.memory.residuals:
+    if course.progress.memory.step == 0:
         course.recorder.begin_leg([*(u.name for u in course.system.unknowns), "damping"])
     while True:
         result = _damped_here(course, options)
@@ -33,6 +33,7 @@ def damped_leg(course: Course) -> Ending:
         lattice = fitted_lattice(course.lattice, values, course.progress.spacings)
         course.report(f"period or lengths have moved: {shape_text(lattice)} nodes keep the spacings")
         course.move_to(lattice, course.loose)
+        course.update(memory=result.memory.on_new_lattice())
 
 
 def _options(course: Course) -> Any:

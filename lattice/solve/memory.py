@@ -36,8 +36,12 @@ class Memory:
     refused: bool = False
 
     def begun(self, residual_rms: float) -> Memory:
-        """Return the memory at the start."""
+        """Return the memory at the start, or on a new lattice, with the residual there."""
         return replace(self, residuals=(residual_rms,))
+
+    def on_new_lattice(self) -> Memory:
+        """Return the memory without residuals: those of another lattice cannot be compared."""
+        return replace(self, residuals=())
 
     def scaled(self, scale: float) -> Memory:
         """Return the memory with what is still unknown set by the size of J^T J."""
