@@ -31,13 +31,14 @@ MEMORY, LEAST, TIME = 0.20, 0.9, 0.35
 
 @dataclass(frozen=True)
 class Case:
-    """One job: law, box, lattice (nt, ny, nx), preconditioner, ranks."""
+    """One job: law, box, lattice (nt, ny, nx), preconditioner, ranks, the one stage."""
 
     law: str
     box: dict[str, float]
     shape: tuple[int, int, int]
     preconditioner: str
     ranks: int
+    stage: str = "newton"
 
 
 def _film(
@@ -64,6 +65,7 @@ BOXES = {
     "2d-67k-coarse": (*_sheet(20.0, 15.0, 42, 40), "coarse"),
 }
 CASES = {f"{name}-{ranks}": Case(*box, ranks) for name, box in BOXES.items() for ranks in (1, 2)}
+CASES["1d-15k-damped-1"] = Case(*_film(44.0, 40.0, 144, 104), "direct", 1, "damped")
 
 
 def job_tables(case: Case) -> dict[str, Any]:
@@ -76,8 +78,9 @@ def job_tables(case: Case) -> dict[str, Any]:
         "lattice": lattice,
         "start": {"kind": "march", "seed": 1, "spin_up": 60.0, "dt": 0.1, "amplitude": 0.5},
         "solve": {
-            "stages": ["newton"],
+            "stages": [case.stage],
             "newton_steps": STEPS,
+            "damped": {"steps": STEPS},
             "residual_rms": 1e-14,
             "preconditioner": case.preconditioner,
         },
@@ -138,7 +141,8 @@ def predict(name: str, case: Case, row: dict[str, Any], calibration: Any, folder
     before = estimate(job, case.ranks, calibration, knowledge)
     steps = max(1, int(summary["newton_steps"]))
     iterations = max(1, round(summary["linear_iterations"] / steps))
-    after = estimate(job, case.ranks, calibration, knowledge, Assumptions(steps=steps, iterations=iterations))
+    counts = Assumptions(steps, iterations, steps, iterations)
+    after = estimate(job, case.ranks, calibration, knowledge, counts)
     measured = {key: summary[key] for key in ("command_seconds", "peak_memory_mb", "seconds")}
     found: dict[str, Any] = {
         "case": name,
