@@ -26,7 +26,7 @@ def row(ranks: int, seconds: dict[str, float], **more: Any) -> dict[str, Any]:
         "calls": {"tangent": 11, "halo": 12, "FFT": 60, "coarse solve": 10, "rest": 1},
         "seconds": {**{n: spread(s) for n, s in seconds.items()}, "whole": spread(whole)},
         "petsc": {}, "lu": {}, "counts_mpi": True,
-        "memory_mb": {"before": spread(100.0), "started": spread(120.0), "peak": spread(100.0 + 800.0 / ranks)},
+        "memory_mb": {"left": spread(100.0), "started": spread(120.0), "peak": spread(100.0 + 800.0 / ranks)},
         "machine": {"triad_gb_s": 10.0, "latency_us": 1e6 * LATENCY, "link_gb_s": LINK / 1e9},
         "host": "nowhere", "processor": "invented", "memory_gb": 1.0, "load_average": 0.5, "binding": [0],
         "system": "none", "versions": {"lattice": "0"}, "commit": "0000000", "measured": "2026-01-01T00:00:00Z",

@@ -71,9 +71,9 @@ def _table(table: Table) -> str:
         for number, row in enumerate(table.rows)
     )
     return (
+        f'<figure class="table"><figcaption>{_marked_up(table.caption)}</figcaption>'
         f'<div class="wide" tabindex="0" role="region" aria-label="{escape(table.caption)}"><table>'
-        f"<caption>{_marked_up(table.caption)}</caption><thead><tr>{head}</tr></thead>"
-        f"<tbody>\n{rows}\n</tbody></table></div>"
+        f"<thead><tr>{head}</tr></thead><tbody>\n{rows}\n</tbody></table></div></figure>"
     )
 
 
@@ -89,7 +89,8 @@ def _picture(figure: Figure) -> str:
     if figure.svg:
         drawing = figure.svg[figure.svg.index("<svg") :]
         name = escape(figure.alternative, quote=True)
-        return drawing.replace("<svg", f'<svg role="img" aria-label="{name}"', 1)
+        named = drawing.replace("<svg", f'<svg role="img" aria-label="{name}"', 1)
+        return f'<div class="wide" tabindex="0">{named}</div>'
     data = base64.b64encode(figure.png).decode()
     return f'<img src="data:image/png;base64,{data}" alt="{escape(figure.alternative, quote=True)}">'
 

@@ -237,16 +237,17 @@ def memory_table(points: Sequence[Standing]) -> Table:
         "ratio",
     ]
     first = points[0]
-    base = first.row["memory_mb"]["peak"]["max"] - first.row["memory_mb"]["before"]["max"]
+    base = figures.own_memory(first.row)
     rows = []
     for p in points:
         memory = p.row["memory_mb"]
-        own = memory["peak"]["max"] - memory["before"]["max"]
+        own = figures.own_memory(p.row)
         share = base * (p.row["unknowns"] / first.row["unknowns"]) * first.ranks / p.ranks
-        numbers = (memory["before"]["max"], memory["peak"]["max"], own, share)
+        numbers = (memory["left"]["max"], memory["peak"]["max"], own, share)
         rows.append([str(p.ranks), *(f"{n:.0f}" for n in numbers), f"{own / share:.2f}"])
     caption = (
-        "Largest resident memory per rank; `program` is what a rank takes before it makes its first field"
+        "Largest resident memory per rank; `program` is what a rank still holds once every field and factor"
+        " is freed: libraries and compiled loops"
     )
     return Table(caption, header, rows, _crowded(points))
 

@@ -8,7 +8,7 @@ from typing import Any
 from lattice.report.document import Figure
 from lattice.report.drawing import COLOURS, MARKERS, draw_chart, ranks_axis
 from lattice.study.extrapolate import Prediction
-from lattice.study.metrics import LINE, Standing
+from lattice.study.metrics import LINE, Row, Standing
 from lattice.study.model import phase_seconds
 
 WORDS = {True: "oversubscribed", False: "measured"}
@@ -27,7 +27,7 @@ def efficiency_figure(
         counts = sorted({p.ranks for p in sound} | {p.ranks for p in predicted})
         axes.axhline(1.0, color="#808080", linewidth=1.0)
         axes.axhline(LINE, color=COLOURS[6], linewidth=1.0, linestyle="--")
-        axes.text(counts[-1], LINE, "0.8 ", ha="right", va="bottom", color=COLOURS[6])
+        axes.text(counts[-1], LINE, "0.8 ", ha="right", va="bottom")
         if predicted:
             ranks = [p.ranks for p in predicted]
             ends = [[_efficiency(predicted, p.ranks, t, weak) for p, t in zip(predicted, times, strict=True)]
@@ -129,11 +129,17 @@ def counts_figure(name: str, points: Sequence[Standing]) -> Figure | None:
     )
 
 
+def own_memory(row: Row) -> float:
+    """Return the peak memory of the fullest rank beyond the program, in MB."""
+    memory = row["memory_mb"]
+    return float(memory["peak"]["max"] - memory["left"]["max"])
+
+
 def memory_figure(name: str, points: Sequence[Standing]) -> Figure | None:
     """Return peak memory per rank against ranks, without the program itself."""
     if len({p.ranks for p in points}) < 2:
         return None
-    own = [p.row["memory_mb"]["peak"]["max"] - p.row["memory_mb"]["before"]["max"] for p in points]
+    own = [own_memory(p.row) for p in points]
     ranks = [p.ranks for p in points]
     weak = points[0].row["kind"].startswith("weak")
 

@@ -2,8 +2,12 @@
 
 from __future__ import annotations
 
+import ctypes
+import gc
 import resource
 from collections.abc import Callable, Iterator
+from contextlib import suppress
+from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -58,11 +62,7 @@ def measure(point: Point, section: StudySection, comm: MPI.Intracomm, repeats: i
         work = make_work(section, system, x, job, stop)
         rows = list(_repeats(work, section.warm_ups, repeats, comm, read))
     machine = probe.probe_machine(comm)
-    memory = {
-        "before": _spread(comm, before),
-        "started": _spread(comm, started),
-        "peak": _spread(comm, _memory_mb()),
-    }
+    peak = _memory_mb()
     shared = {
         "unknowns": x.getSize(),
         "grid": list(system.blocks.grid),
@@ -70,12 +70,17 @@ def measure(point: Point, section: StudySection, comm: MPI.Intracomm, repeats: i
         "block": list(system.blocks.block.shape),
         "components": system.blocks.components,
         "counts_mpi": counts,
-        "memory_mb": memory,
         "machine": machine,
     }
-    work.destroy()
-    x.destroy()
-    system.destroy()
+    for item in (work, x, system):
+        item.destroy()
+    del work, x, system, item
+    shared["memory_mb"] = {
+        "before": _spread(comm, before),
+        "started": _spread(comm, started),
+        "peak": _spread(comm, peak),
+        "left": _spread(comm, _left_mb(comm)),
+    }
     return [{**row, **shared} for row in rows]
 
 
@@ -168,6 +173,20 @@ def _lu_numbers(comm: MPI.Intracomm, own: dict[str, float]) -> dict[str, Any]:
         "own_entries": _statistics([part["own_entries"] for part in every]),
         "own_flops": _statistics([part["own_flops"] for part in every]),
     }
+
+
+def _left_mb(comm: MPI.Intracomm) -> float:
+    """Return what this process holds once all fields are freed: libraries and compiled loops, in MB."""
+    from petsc4py import PETSc
+
+    gc.collect()
+    PETSc.garbage_cleanup(comm)
+    with suppress(OSError, AttributeError):
+        ctypes.CDLL(None).malloc_trim(0)
+    with suppress(OSError):
+        pages = int(Path("/proc/self/statm").read_text(encoding="ascii").split()[1])
+        return pages * resource.getpagesize() / 1e6
+    return _memory_mb()
 
 
 def _memory_mb() -> float:
