@@ -122,7 +122,3 @@ def _judge_method(job: Job, findings: Findings) -> None:
         )
     if solve.nested:
         findings.refuse("solve.nested", f"must be 0 in a solve.subspace, got {solve.nested}; remove it")
-    if solve.stages not in (None, ("newton",)):
-        findings.refuse(
-            "solve.stages", f"must be ['newton'] in a solve.subspace, got {list(solve.stages)}; remove it"
-        )
