@@ -86,7 +86,7 @@ def results_table(points: Sequence[Standing]) -> Table:
     """Return times, speed-up, efficiency, serial fraction."""
     weak = points[0].row["kind"].startswith("weak")
     header = ["ranks", "nodes t, (y,) x", "unknowns", "s, shortest", "s, median", "iterations", "speed-up",
-              "efficiency", "per iteration", "Karp-Flatt"]  # fmt: skip
+              "efficiency", "per iteration", "Karp-Flatt", "load"]  # fmt: skip
     rows = []
     for p in points:
         lattice = p.row["lattice"]
@@ -94,10 +94,12 @@ def results_table(points: Sequence[Standing]) -> Table:
         rows.append(
             [str(p.ranks), shape, str(p.row["unknowns"]), f"{p.best:.3f}", f"{p.middle:.3f}",
              str(p.row.get("iterations", NONE)), number(p.speed_up), number(p.efficiency),
-             number(p.per_iteration), number(p.karp_flatt, 2)]
+             number(p.per_iteration), number(p.karp_flatt, 2),
+             f"{p.row['load_average']:.1f}"]
         )  # fmt: skip
     kind = "Weak scaling" if weak else "Scaling"
-    return Table(f"{kind}: times and metrics", header, rows, _crowded(points))
+    caption = f"{kind}: times and metrics; `load` is the machine's one-minute average when the point ended"
+    return Table(caption, header, rows, _crowded(points))
 
 
 def _crowded(points: Sequence[Standing]) -> frozenset[int]:
@@ -258,6 +260,7 @@ def caution_of(rows: Sequence[Row]) -> Caution:
     busiest = max(float(row["load_average"]) for row in rows)
     return Caution(
         f"{cores} cores were available. Times on more ranks than that are of ranks that share cores; no"
-        f" efficiency is claimed from them. The load of the machine was up to {busiest:.1f} when points began"
-        " (this study's own warm-ups included), so that single times scatter."
+        f" efficiency is claimed from them. The load of the machine was up to {busiest:.1f} when points ended,"
+        " these ranks included: where it is above the ranks of a point, other work shared its cores and its times"
+        " are too long."
     )

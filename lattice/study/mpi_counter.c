@@ -56,13 +56,13 @@ int MPI_Allreduce(const void *b, void *o, int n, MPI_Datatype t, MPI_Op op, MPI_
 int MPI_Reduce_scatter(const void *b, void *o, const int n[], MPI_Datatype t, MPI_Op op, MPI_Comm c) TIMED(REDUCED, PMPI_Reduce_scatter(b, o, n, t, op, c))
 int MPI_Exscan(const void *b, void *o, int n, MPI_Datatype t, MPI_Op op, MPI_Comm c) TIMED(REDUCED, PMPI_Exscan(b, o, n, t, op, c))
 int MPI_Scan(const void *b, void *o, int n, MPI_Datatype t, MPI_Op op, MPI_Comm c) TIMED(REDUCED, PMPI_Scan(b, o, n, t, op, c))
-int MPI_Gather(const void *b, int n, MPI_Datatype t, void *o, int on, MPI_Datatype ot, int root, MPI_Comm c) TIMED(COLLECTIVE, PMPI_Gather(b, n, t, o, on, ot, root, c))
-int MPI_Gatherv(const void *b, int n, MPI_Datatype t, void *o, const int on[], const int d[], MPI_Datatype ot, int root, MPI_Comm c) TIMED(COLLECTIVE, PMPI_Gatherv(b, n, t, o, on, d, ot, root, c))
-int MPI_Scatterv(const void *b, const int n[], const int d[], MPI_Datatype t, void *o, int on, MPI_Datatype ot, int root, MPI_Comm c) TIMED(COLLECTIVE, PMPI_Scatterv(b, n, d, t, o, on, ot, root, c))
-int MPI_Allgather(const void *b, int n, MPI_Datatype t, void *o, int on, MPI_Datatype ot, MPI_Comm c) TIMED(COLLECTIVE, PMPI_Allgather(b, n, t, o, on, ot, c))
-int MPI_Allgatherv(const void *b, int n, MPI_Datatype t, void *o, const int on[], const int d[], MPI_Datatype ot, MPI_Comm c) TIMED(COLLECTIVE, PMPI_Allgatherv(b, n, t, o, on, d, ot, c))
-int MPI_Alltoall(const void *b, int n, MPI_Datatype t, void *o, int on, MPI_Datatype ot, MPI_Comm c) TIMED(COLLECTIVE, PMPI_Alltoall(b, n, t, o, on, ot, c))
-int MPI_Alltoallv(const void *b, const int n[], const int d[], MPI_Datatype t, void *o, const int on[], const int od[], MPI_Datatype ot, MPI_Comm c) TIMED(COLLECTIVE, PMPI_Alltoallv(b, n, d, t, o, on, od, ot, c))
+int MPI_Gather(const void *b, int n, MPI_Datatype t, void *o, int rn, MPI_Datatype rt, int root, MPI_Comm c) TIMED(COLLECTIVE, PMPI_Gather(b, n, t, o, rn, rt, root, c))
+int MPI_Gatherv(const void *b, int n, MPI_Datatype t, void *o, const int rn[], const int d[], MPI_Datatype rt, int root, MPI_Comm c) TIMED(COLLECTIVE, PMPI_Gatherv(b, n, t, o, rn, d, rt, root, c))
+int MPI_Scatterv(const void *b, const int n[], const int d[], MPI_Datatype t, void *o, int rn, MPI_Datatype rt, int root, MPI_Comm c) TIMED(COLLECTIVE, PMPI_Scatterv(b, n, d, t, o, rn, rt, root, c))
+int MPI_Allgather(const void *b, int n, MPI_Datatype t, void *o, int rn, MPI_Datatype rt, MPI_Comm c) TIMED(COLLECTIVE, PMPI_Allgather(b, n, t, o, rn, rt, c))
+int MPI_Allgatherv(const void *b, int n, MPI_Datatype t, void *o, const int rn[], const int d[], MPI_Datatype rt, MPI_Comm c) TIMED(COLLECTIVE, PMPI_Allgatherv(b, n, t, o, rn, d, rt, c))
+int MPI_Alltoall(const void *b, int n, MPI_Datatype t, void *o, int rn, MPI_Datatype rt, MPI_Comm c) TIMED(COLLECTIVE, PMPI_Alltoall(b, n, t, o, rn, rt, c))
+int MPI_Alltoallv(const void *b, const int n[], const int d[], MPI_Datatype t, void *o, const int rn[], const int od[], MPI_Datatype rt, MPI_Comm c) TIMED(COLLECTIVE, PMPI_Alltoallv(b, n, d, t, o, rn, od, rt, c))
 
 static void exchanged(const int *n, const MPI_Datatype *t, MPI_Comm c) {
   int ranks, own, to;
@@ -73,7 +73,7 @@ static void exchanged(const int *n, const MPI_Datatype *t, MPI_Comm c) {
     if (to != own && n[to] > 0) sent(n[to], t[to], to);
 }
 
-int MPI_Alltoallw(const void *b, const int n[], const int d[], const MPI_Datatype t[], void *o, const int on[], const int od[], const MPI_Datatype ot[], MPI_Comm c) TIMED(exchanged(n, t, c), PMPI_Alltoallw(b, n, d, t, o, on, od, ot, c))
+int MPI_Alltoallw(const void *b, const int n[], const int d[], const MPI_Datatype t[], void *o, const int rn[], const int od[], const MPI_Datatype rt[], MPI_Comm c) TIMED(exchanged(n, t, c), PMPI_Alltoallw(b, n, d, t, o, rn, od, rt, c))
 
 /* Persistent sends: what each will send is remembered under its request. */
 #define MOST_REQUESTS 4096
