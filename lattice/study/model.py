@@ -16,8 +16,8 @@ References (from memory)
 .. [2] R. W. Hockney, "The communication challenge for MPP", Parallel Computing 20 (1994) 389-398.
 .. [3] R. Thakur, R. Rabenseifner, W. Gropp, "Optimization of collective communication operations in MPICH",
    Int. J. High Perform. Comput. Appl. 19 (2005) 49-66.
-.. [4] A. George, "Nested dissection of a regular finite element mesh", SIAM J. on Numerical Analysis 10 (1973)
-   345-363.
+.. [4] A. George, "Nested dissection of a regular finite element mesh", SIAM J. on Numerical
+   Analysis 10 (1973) 345-363.
 """
 
 from __future__ import annotations
