@@ -115,9 +115,14 @@ def _history(steps: Sequence[Mapping[str, Any]]) -> list[Chapter]:
     ]  # fmt: skip
     caption = "History of the nonlinear steps" + (", the middle left out" if len(told) > 40 else "")
     parts: list[Part] = [_residual_figure(told)]
-    moving = [n for n in names if len({s["scalars"].get(n) for s in told if "scalars" in s}) > 1]
+    moving = [n for n in names if _moves([s["scalars"].get(n) for s in told if "scalars" in s])]
     parts += [_scalar_figure(told, moving)] if moving else []
     return [Chapter("History", (*parts, Table(caption, header, rows)))]
+
+
+def _moves(series: Sequence[float | None]) -> bool:
+    """Tell whether a scalar changed, and ended elsewhere than at rounding, as sources do."""
+    return len(set(series)) > 1 and abs(series[-1] or 0.0) > 1e-12
 
 
 def _residual_figure(steps: Sequence[Mapping[str, Any]]) -> Figure:
@@ -127,6 +132,7 @@ def _residual_figure(steps: Sequence[Mapping[str, Any]]) -> Figure:
         axes.semilogy(range(len(numbers)), numbers, color=COLOURS[0], marker="o", markersize=3)
         axes.set_xlabel("step")
         axes.set_ylabel("residual, root mean square")
+        axes.xaxis.get_major_locator().set_params(integer=True)
 
     told = f"from {numbers[0]:.2e} to {numbers[-1]:.2e} in {len(numbers) - 1} steps"
     return Figure(
@@ -139,15 +145,14 @@ def _scalar_figure(steps: Sequence[Mapping[str, Any]], names: Sequence[str]) -> 
     def draw(axes: Any) -> None:
         for k, name in enumerate(names):
             series = [s["scalars"].get(name, float("nan")) for s in steps]
-            last = next((v for v in reversed(series) if v == v), 1.0)
-            scale = abs(last) or 1.0
-            axes.plot(
-                range(len(series)), [(v - last) / scale for v in series], label=name,
+            last = series[-1]
+            axes.semilogy(
+                range(len(series) - 1), [abs(v / last - 1.0) for v in series[:-1]], label=name,
                 color=COLOURS[k % len(COLOURS)], marker=MARKERS[k % len(MARKERS)], markersize=3,
             )  # fmt: skip
-        axes.set_yscale("symlog", linthresh=1e-6)
         axes.set_xlabel("step")
-        axes.set_ylabel("(value - last)/|last|")
+        axes.set_ylabel("|value/last - 1|")
+        axes.xaxis.get_major_locator().set_params(integer=True)
         axes.legend(fontsize=8)
 
     told = "; ".join(
@@ -155,7 +160,7 @@ def _scalar_figure(steps: Sequence[Mapping[str, Any]], names: Sequence[str]) -> 
         for n in names
     )
     return Figure(
-        "scalars", f"Free scalars, relative to where they ended: {told}.",
+        "scalars", f"Free scalars, their distance from where they ended: {told}.",
         f"Line chart of the free scalars by step: {told}.", draw_chart("scalars", draw),
     )  # fmt: skip
 
