@@ -260,7 +260,7 @@ def caution_of(rows: Sequence[Row]) -> Caution:
     busiest = max(float(row["load_average"]) for row in rows)
     return Caution(
         f"{cores} cores were available. Times on more ranks than that are of ranks that share cores; no"
-        f" efficiency is claimed from them. The load of the machine was up to {busiest:.1f} when points ended,"
+        f" efficiency is claimed from them. Its load was up to {busiest:.1f} when points ended,"
         " these ranks included: where it is above the ranks of a point, other work shared its cores, and its"
         " times are too long."
     )
