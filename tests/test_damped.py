@@ -24,12 +24,12 @@ from tests.film import NODES, VALUES, alike, film_state
 from tests.problems import Array, free_of, law_of, random_field, values_of
 
 # One component; two with a free angle; an evolving one and a constraint with a free constant, in the plane;
-# a formula with functions under nested derivatives.
+# a formula with functions.
 LAWS = {
     "kuramoto-sivashinsky": Lattice(8, 1, 15),
     "ginzburg-landau": Lattice(7, 1, 12),
-    "kolmogorov": Lattice(5, 8, 9, 2, order_t=2, order_x=2, order_y=2),
-    "nested": Lattice(8, 1, 17),
+    "kolmogorov": Lattice(4, 7, 7, 2, order_t=2, order_x=2, order_y=2),
+    "functions": Lattice(7, 1, 12, order_x=2),
 }
 LOOSE = ("length_x",)
 
