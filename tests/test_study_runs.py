@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import time
 from pathlib import Path
 
 import pytest
@@ -112,3 +113,17 @@ def test_a_report_of_a_run_shares_the_parts(tmp_path: Path, capsys: pytest.Captu
 def test_a_report_of_nothing_is_refused(tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:
     assert main(["report", str(tmp_path)]) == 2
     assert "holds neither summary.json nor state.h5" in capsys.readouterr().err
+
+
+@pytest.mark.long
+def test_points_run_as_jobs_of_this_machine_one_after_another(folder: Path) -> None:
+    arguments = ["study", str(folder / "two.toml"), "--site", "local", "--out", str(folder / "jobs"), "--yes"]
+    assert main([*arguments, "--ranks", "1,2"]) == 0
+    deadline = time.monotonic() + 240.0
+    while len(read_rows(folder / "jobs")) < 2 and time.monotonic() < deadline:
+        time.sleep(1.0)
+    assert [row["ranks"] for row in read_rows(folder / "jobs")] == [1, 2]
+    assert (
+        main(["study", str(folder / "two.toml"), "--ranks", "1,2", "--out", str(folder / "jobs"), "--report"])
+        == 0
+    )

@@ -35,7 +35,8 @@ With --site every point becomes a job of its own there, the largest last; once t
 Points with more ranks than cores are marked; their counts are exact, their times prove nothing. Ask the
 site before you fill its queue; its rules come before anything this program does.
 
-exit codes: 0 all points measured, 1 a point failed, 2 refused input, 4 stopped with points left.
+exit codes: 0 all points measured; 2 refused input; 4 stopped with points left, the same command goes on;
+70 a point failed.
 """
 
 
