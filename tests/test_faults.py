@@ -177,7 +177,7 @@ def test_a_termination_within_a_long_step_ends_with_code_4_and_says_so(project: 
         cwd=project, env=environment(), stdout=subprocess.PIPE, stderr=subprocess.PIPE, text=True,
     )  # fmt: skip
     wait_for(lambda: (folder / "state.h5").exists(), 150, "no state")
-    time.sleep(0.5)
+    time.sleep(2.0)  # the factorisation after the first state has begun, and takes several seconds
     process.send_signal(signal.SIGTERM)
     _, told = process.communicate(timeout=60)
     assert process.returncode == 4, told
