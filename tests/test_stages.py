@@ -157,6 +157,25 @@ def test_a_stall_is_reported_with_its_state(folder: Path) -> None:
     assert read_meta(folder / "run" / "state.h5").outcome == "stalled"
 
 
+def test_a_stalled_stage_may_go_once_more_with_lengths_held(folder: Path) -> None:
+    options = [
+        "solve.stages=['damped', 'newton']",
+        "solve.damped.stall_steps=1",
+        "solve.damped.stall_fall=0.99",
+    ]
+    outcome, said = run(folder, "run", [*options, "solve.damped.attempts=2"])
+    assert outcome.summary.outcome == "stalled"
+    assert sum("again from the start, length_x held" in line for line in said) == 1
+    first, second = outcome.summary.stages
+    assert first["stage"] == second["stage"] == "damped"
+    starts = [entry for entry in steps_of(folder, "run") if entry["preconditioner"] == ""]
+    assert [entry["residual_rms"] for entry in starts] == pytest.approx(
+        [starts[0]["residual_rms"]] * 2, rel=1e-12
+    )
+    assert "length_x" in starts[0]["scalars"]
+    assert "length_x" not in starts[1]["scalars"]
+
+
 def test_a_state_of_the_coarse_lattice_only_is_reported_so(
     folder: Path, monkeypatch: pytest.MonkeyPatch
 ) -> None:

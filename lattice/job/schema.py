@@ -191,6 +191,12 @@ class DampedSection(Section):
     )
     stall_steps: Count = _key("steps over which the residual must fall by `stall_fall`", 12)
     stall_fall: float = _key("least relative fall of the residual over `stall_steps`", 0.1, gt=0, lt=1)
+    attempts: int = _key(
+        "2: where the stage stalls it goes once more from the start, without `solve.damped.free`",
+        1,
+        ge=1,
+        le=2,
+    )
 
 
 class RefineSection(Section):

@@ -86,6 +86,11 @@ class Course:
         """The present leg."""
         return self.progress.legs[self.progress.leg]
 
+    @property
+    def loose_now(self) -> tuple[str, ...]:
+        """Scalars without a condition in the present leg."""
+        return self._loose_of(self.leg)
+
     def update(self, **changes: Any) -> None:
         """Change where the run stands."""
         self.progress = replace(self.progress, **changes)
@@ -138,12 +143,8 @@ class Course:
         spacings = {axis: values[EXTENTS[axis]] / getattr(lattice, axis) for axis in axes}
         self.update(first=len(self.recorder.history), spacings=spacings, memory=Memory())
         if leg.method == "newton":
-            self._keep_reference()
-
-    def _keep_reference(self) -> None:
-        """Remember where Newton's method begins, in a file too: the phase conditions come from there."""
-        self._forget_reference()
-        self.reference = self.x.copy()
+            self._forget_reference()
+            self.reference = self.x.copy()
         path = self.recorder.files.reference
         self.recorder.write(self.system, self.x, "reference", self.progress, path=path)
 
@@ -164,6 +165,15 @@ class Course:
         """Go back to where Newton's method began."""
         self.reference.copy(self.x)
 
+    def back_to_start(self) -> None:
+        """Go back to where the present leg began, on its lattice there, from the file that holds it."""
+        path = self.recorder.files.reference
+        meta = self.comm.bcast(read_meta(path) if self.comm.rank == 0 else None)
+        self.x.destroy()
+        self.system.destroy()
+        self._make_system(meta.lattice, meta.values, ())
+        self._pack(read_block(path, self.system.whole_blocks.block), meta.values)
+
     def inverse(self, report: Callable[[str], None]) -> Preconditioner:
         """Make the job's preconditioner, on the coarse lattice chosen before if the run goes on."""
         options = self.options
@@ -181,7 +191,7 @@ class Course:
             self.update(coarse=chosen)
 
     def _loose_of(self, leg: Leg) -> tuple[str, ...]:
-        return self.loose if leg.method == "damped" else ()
+        return self.loose if leg.method == "damped" and not leg.held else ()
 
     def _make_system(self, lattice: Lattice, values: Values, loose: tuple[str, ...]) -> None:
         """Make the present system, in place of the one before."""

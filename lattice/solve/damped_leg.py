@@ -32,7 +32,7 @@ def damped_leg(course: Course) -> Ending:
         values = course.system.values_of(course.x)
         lattice = fitted_lattice(course.lattice, values, course.progress.spacings)
         course.report(f"period or lengths have moved: {shape_text(lattice)} nodes keep the spacings")
-        course.move_to(lattice, course.loose)
+        course.move_to(lattice, course.loose_now)
         course.update(memory=result.memory.on_new_lattice())
 
 

@@ -31,6 +31,8 @@ class Leg:
         Factor of the residual at which damped steps end.
     again : bool
         Newton's method has failed here before.
+    held : bool
+        Damped steps have stalled here before with lengths that moved; now they are held.
     """
 
     stage: str
@@ -39,6 +41,7 @@ class Leg:
     halvings: int = -1
     tighter: float = 1.0
     again: bool = False
+    held: bool = False
 
     def record(self) -> dict[str, Any]:
         """Return it as plain data, for JSON."""
@@ -82,6 +85,11 @@ def retry(legs: tuple[Leg, ...], failed: int) -> tuple[Leg, ...] | None:
         return None
     damped = Leg(leg.stage, "damped", tighter=TIGHTER if leg.stage == "newton" else 1.0)
     return (*legs[:failed], damped, replace(leg, factor=1.0, again=True), *legs[failed + 1 :])
+
+
+def retry_held(legs: tuple[Leg, ...], stalled: int) -> tuple[Leg, ...]:
+    """Return the legs with a stalled damped one once more, its lengths held."""
+    return (*legs[:stalled], replace(legs[stalled], held=True), *legs[stalled + 1 :])
 
 
 def halved(lattice: Lattice, times: int) -> Lattice:

@@ -21,7 +21,7 @@ if TYPE_CHECKING:
 
 LIMITS = {
     "solve": ("residual_rms", "newton_steps", "linear_iterations"),
-    "damped": ("steps", "residual_rms", "linear_iterations", "stall_steps", "stall_fall"),
+    "damped": ("steps", "residual_rms", "linear_iterations", "stall_steps", "stall_fall", "attempts"),
 }
 """Keys that may differ between a run and the one that goes on with it."""
 

@@ -11,7 +11,7 @@ from lattice.errors import LatticeError
 from lattice.solve.conclusion import conclude
 from lattice.solve.course import Course, Ending
 from lattice.solve.damped_leg import damped_leg
-from lattice.solve.legs import retry
+from lattice.solve.legs import retry, retry_held
 from lattice.solve.newton_leg import newton_leg
 from lattice.solve.petsc import start_petsc
 from lattice.solve.progress import kept_state
@@ -106,20 +106,38 @@ def _legs(course: Course, entered: bool) -> Ending:
         ending = _leg(course, entered)
         _note(course, ending, began)
         entered = False
-        legs = retry(course.progress.legs, course.progress.leg) if ending.word == "failed" else None
-        if legs is not None:
+        if _tries_again(course, ending):
+            continue
+        if ending.word != "done":
+            return _lost(course, ending)
+        if course.progress.leg + 1 == len(course.progress.legs):
+            return Ending("converged", ending.reason)
+        course.update(leg=course.progress.leg + 1)
+
+
+def _lost(course: Course, ending: Ending) -> Ending:
+    """Return the run's ending for a leg that has not come to its own."""
+    if ending.word in ("failed", "stalled") and course.leg.stage == "refine":
+        return Ending("not surviving refinement", ending.reason)
+    return Ending("not converged", ending.reason) if ending.word == "failed" else ending
+
+
+def _tries_again(course: Course, ending: Ending) -> bool:
+    """Go back to the start of a leg that may be tried in another way; tell whether there is one."""
+    legs, present = course.progress.legs, course.progress.leg
+    if ending.word == "failed":
+        others = retry(legs, present)
+        if others is not None:
             course.report(f"{ending.reason}; damped steps on this lattice first")
             course.back_to_reference()
-            course.update(legs=legs)
-        elif ending.word == "failed":
-            lost = course.leg.stage == "refine"
-            return Ending("not surviving refinement" if lost else "not converged", ending.reason)
-        elif ending.word != "done":
-            return ending
-        elif course.progress.leg + 1 == len(course.progress.legs):
-            return Ending("converged", ending.reason)
-        else:
-            course.update(leg=course.progress.leg + 1)
+            course.update(legs=others)
+            return True
+    if ending.word == "stalled" and course.options.damped.attempts > 1 and course.loose_now:
+        course.report(f"{ending.reason}; again from the start, {' and '.join(course.loose_now)} held")
+        course.back_to_start()
+        course.update(legs=retry_held(legs, present))
+        return True
+    return False
 
 
 def _leg(course: Course, entered: bool) -> Ending:
