@@ -26,6 +26,7 @@ TABLE = """\
 exit codes:
    0  converged, or done              2  refused input
    3  not converged (state kept)      4  interrupted with a usable state
+   5  certified with wide bands      6  not certified
   70  internal failure              130  interrupted before there was a state
 """
 
