@@ -205,8 +205,8 @@ def counts_table(points: Sequence[Standing]) -> Table | None:
     """Return what the busiest rank says to others."""
     if not any("messages" in p.row for p in points):
         return None
-    header = ["ranks", "messages halo", "FFT", "coarse", "all", "MB sent", "reductions", "LU entries",
-              "share of the fullest rank"]  # fmt: skip
+    header = ["ranks", "messages halo", "each exchange", "FFT", "each transform", "coarse", "all", "MB sent",
+              "reductions", "LU entries", "share of the fullest rank"]  # fmt: skip
     rows = []
     for p in points:
         row = p.row
@@ -217,8 +217,9 @@ def counts_table(points: Sequence[Standing]) -> Table | None:
         lu: dict[str, Any] = row.get("lu") or {}
         share = lu["own_entries"]["max"] / lu["entries"] if lu else None
         rows.append(
-            [str(p.ranks), f"{each.get('halo', 0.0):.0f}", f"{each.get('FFT', 0.0):.0f}", f"{coarse:.0f}",
-             f"{each['whole']:.0f}", f"{row['bytes']['whole']['max'] / 1e6:.1f}",
+            [str(p.ranks), f"{each.get('halo', 0.0):.0f}", _per_call(row, "halo"),
+             f"{each.get('FFT', 0.0):.0f}", _per_call(row, "FFT"), f"{coarse:.0f}", f"{each['whole']:.0f}",
+             f"{row['bytes']['whole']['max'] / 1e6:.1f}",
              f"{row['reductions']['whole']['max']:.0f}", number(lu.get("entries")), number(share)]
         )  # fmt: skip
     caption = (
@@ -226,6 +227,12 @@ def counts_table(points: Sequence[Standing]) -> Table | None:
         " constant in the rank count once every axis is shared; those of transforms and LU are not"
     )
     return Table(caption, header, rows, _crowded(points))
+
+
+def _per_call(row: Row, phase: str) -> str:
+    """Return the messages of one call of a phase on the busiest rank."""
+    sent = row["messages"].get(phase, {"max": 0.0})["max"]
+    return f"{sent / max(1, row['calls'].get(phase, 0)):.1f}"
 
 
 def memory_table(points: Sequence[Standing]) -> Table:
