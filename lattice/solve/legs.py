@@ -10,7 +10,9 @@ from lattice.geometry.lattice import Lattice
 
 STAGES = ("damped", "newton", "refine")
 TIGHTER = 1e-3
-"""Residual at which damped steps end after Newton's method has failed from where they ended before."""
+"""Factor of the residual at which damped steps end where Newton's method has failed.
+
+Near the end of a family of states Newton's method needs the length that they find."""
 
 
 @dataclass(frozen=True)
@@ -83,7 +85,7 @@ def retry(legs: tuple[Leg, ...], failed: int) -> tuple[Leg, ...] | None:
     leg = legs[failed]
     if leg.again or not any(known.method == "damped" for known in legs[:failed]):
         return None
-    damped = Leg(leg.stage, "damped", tighter=TIGHTER if leg.stage == "newton" else 1.0)
+    damped = Leg(leg.stage, "damped", tighter=TIGHTER)
     return (*legs[:failed], damped, replace(leg, factor=1.0, again=True), *legs[failed + 1 :])
 
 
