@@ -18,6 +18,10 @@ if TYPE_CHECKING:
     from lattice.system.system import System
 
 
+INSIDE = 1e-10
+"""Share of a field's size by which it may miss a symmetry that it has."""
+
+
 def centred(law: Law, subspace: Subspace, owned: Real, blocks: Blocks) -> tuple[Real, float]:
     """Return this rank's part of a whole field shifted to the mirrors, and what is not symmetric of it.
 
@@ -82,13 +86,24 @@ def _shifted(spectra: Spectra, coefficients: Complex, shift: dict[str, float]) -
 def into_subspace(system: System, owned: Real, report: Callable[[str], None]) -> Real:
     """Return this rank's part of the unknown field for a whole start: the start itself without a subspace.
 
-    Collective. In a subspace the start is shifted to the mirrors and made symmetric.
+    Collective. In a subspace the start is shifted to the mirrors and made symmetric, unless it is so already.
     """
-    if system.subspace is None:
-        return owned
+    if system.subspace is None or _is_inside(system, owned):
+        return system.project(owned)
     moved, distance = centred(system.law, system.subspace, owned, system.whole_blocks)
     report(
         f"subspace: {system.blocks.size} of {system.whole_blocks.size} numbers carry the field; the start is "
         f"symmetric to {distance:.1e} of its size"
     )
     return system.project(moved)
+
+
+def _is_inside(system: System, owned: Real) -> bool:
+    """Tell whether a whole field has the subspace's symmetries, to rounding. Collective."""
+    x = system.vector()
+    system.pack(system.project(owned), {}, x)
+    change = system.whole_field(x) - owned
+    x.destroy()
+    squares = np.array([float((change**2).sum()), float((owned**2).sum())])
+    off, size = system.comm.allreduce(squares)
+    return bool(off <= INSIDE**2 * size)

@@ -7,6 +7,7 @@ from collections.abc import Callable
 from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING, Any
 
+from lattice.classify.centring import into_subspace
 from lattice.geometry.lattice import Lattice
 from lattice.solve.legs import Leg, halved, plan_legs
 from lattice.solve.memory import Memory
@@ -205,7 +206,7 @@ class Course:
 
     def _pack(self, owned: Any, values: Values) -> None:
         self.x = self.system.vector()
-        self.system.pack(self.system.project(owned), values, self.x)
+        self.system.pack(into_subspace(self.system, owned, self.report), values, self.x)
 
     def _tell_system(self) -> None:
         system = self.system
