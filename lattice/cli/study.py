@@ -209,7 +209,7 @@ def _measure_together(study: Study, point: Point, comm: MPI.Intracomm, cores: in
     rows = measure(point, study.section, comm, 1 if crowded else study.section.repeats)
     if comm.Get_rank() == 0:
         told = describe_point(study, point, cores, crowded) | describe_host()
-        told["command"] = f"lattice study {study.file.name}"
+        told["command"] = f"lattice study {os.path.relpath(study.file)}"
         append_rows(study.folder, [{**told, **row} for row in rows])
     comm.Barrier()
     return CONVERGED

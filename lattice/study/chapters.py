@@ -47,7 +47,7 @@ def study_chapters(study: Study, rows: Sequence[Row], predicted: Sequence[Predic
         Chapter("Where the time goes", tuple(parts), 3),
         *([Chapter("Iterations and messages", tuple(counts), 3)] if counts else []),
         Chapter("Memory", tuple(memory), 3),
-        Chapter("Commands", (Commands((f"lattice study {study.file.name}",)),), 3),
+        Chapter("Commands", (Commands((str(rows[-1]["command"]),)),), 3),
     ]
 
 

@@ -68,7 +68,8 @@ def _point(number: int, ranks: int, growth: float, factor: float, study: StudySe
     growth = growth if _GROWING[study.kind] else 1.0
     job = grown_job(base, _GROWING[study.kind], growth, factor)
     told = {
-        "job": job.model_dump(mode="json", exclude={"output"}),
+        # Without defaults: a key that a later version adds does not make rows another job's.
+        "job": job.model_dump(mode="json", exclude={"output"}, exclude_defaults=True),
         "ranks": ranks,
         "measure": [study.measure, study.newton_steps, study.warm_ups],
     }
