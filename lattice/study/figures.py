@@ -183,9 +183,11 @@ def iterations_figure(name: str, points: Sequence[Standing]) -> Figure | None:
         axes.set_ylim(0.0, 1.25 * max(numbers))
 
     text = ", ".join(f"{n:.3g} at {x:.3g}" for n, x in zip(numbers, across, strict=True))
+    growth = numbers[-1] / numbers[0]
     return Figure(
         f"{name}-iterations",
-        f"Linear iterations per Newton step: {text}. Counts, exact also where ranks share cores.",
+        f"Linear iterations per Newton step: {text}; they grow by a factor of {growth:.2f} over the series."
+        " Counts, exact also where ranks share cores.",
         f"Line chart of linear iterations per Newton step: {text}.",
         draw_chart(f"{name}-iterations", draw),
     )

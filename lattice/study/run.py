@@ -107,6 +107,8 @@ def _measure(study: Study, point: Point, launcher: str | None, options: Sequence
     if process.returncode != 0:
         lines = said.strip().splitlines() or [f"exit code {process.returncode}"]
         return f"failed: {lines[-1]}"
+    if not rows_of(point, read_rows(study.folder)):
+        return "failed: it left no rows; was the study's file changed meanwhile?"
     return ""
 
 
