@@ -11,7 +11,21 @@ from lattice.study.extrapolate import Prediction
 from lattice.study.metrics import LINE, Row, Standing
 from lattice.study.model import phase_seconds
 
-WORDS = {True: "oversubscribed", False: "measured"}
+PHASES = (
+    "loops",
+    "halo",
+    "FFT",
+    "coarse set-up",
+    "transfer",
+    "coarse solve",
+    "orthogonalisation",
+    "smoother",
+)
+
+
+def colour_of(phase: str) -> str:
+    """Return a phase's colour, the same in every chart."""
+    return COLOURS[PHASES.index(phase) % len(COLOURS)] if phase in PHASES else COLOURS[-1]
 
 
 def efficiency_figure(
@@ -66,9 +80,9 @@ def phases_figure(name: str, points: Sequence[Standing]) -> Figure:
 
     def draw(axes: Any) -> None:
         bottom = [0.0] * len(rows)
-        for k, phase in enumerate(names):
+        for phase in names:
             shares = [t.get(phase, 0.0) / sum(t.values()) for t in tables]
-            axes.bar(labels, shares, bottom=bottom, label=phase, color=COLOURS[k % len(COLOURS)], width=0.7,
+            axes.bar(labels, shares, bottom=bottom, label=phase, color=colour_of(phase), width=0.7,
                      hatch=["//" if p.oversubscribed else "" for p in points])  # fmt: skip
             bottom = [b + s for b, s in zip(bottom, shares, strict=True)]
         axes.set_ylabel("share of the time")
@@ -112,7 +126,9 @@ def counts_figure(name: str, points: Sequence[Standing]) -> Figure | None:
 
     def draw(axes: Any) -> None:
         for k, (phase, numbers) in enumerate(series.items()):
-            axes.plot([p.ranks for p in shared], numbers, color=COLOURS[k], marker=MARKERS[k], label=phase)
+            axes.plot(
+                [p.ranks for p in shared], numbers, color=colour_of(phase), marker=MARKERS[k], label=phase
+            )
         ranks_axis(axes, [p.ranks for p in shared])
         axes.set_yscale("log", base=10)
         axes.set_ylabel("messages per iteration")

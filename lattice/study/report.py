@@ -42,9 +42,9 @@ def write_report(studies: Sequence[Study], folder: Path | None = None, site: Any
     document = make_document(measured, site)
     folder = folder or measured[0][0].folder
     page, text = folder / "report.html", folder / "report.md"
+    (folder / "figures").mkdir(parents=True, exist_ok=True)
     write_text_whole(page, to_html(document))
     write_text_whole(text, to_markdown(document))
-    (folder / "figures").mkdir(exist_ok=True)
     for figure in document.figures:
         write_text_whole(folder / "figures" / figure_file(figure), figure.svg)
     return [page, text]
