@@ -147,7 +147,8 @@ def main() -> int:
     from scaling.record import describe
 
     out = options.out or options.folder / "mosaics.json"
-    record = {"machine": describe(), "command": " ".join(["python -m scaling.mosaics", *sys.argv[1:]]), "states": [str(run) for run in runs]}
+    command = " ".join(["python -m scaling.mosaics", *sys.argv[1:]])
+    record = {"machine": describe(), "command": command, "states": [str(run) for run in runs]}
     out.write_text(json.dumps({**record, "rows": rows}, indent=1))
     return 0
 
