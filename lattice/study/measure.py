@@ -61,6 +61,8 @@ def measure(point: Point, section: StudySection, comm: MPI.Intracomm, repeats: i
     with StopFlag(comm) as stop:
         work = make_work(section, system, x, job, stop)
         rows = list(_repeats(work, section.warm_ups, repeats, comm, read))
+        if stop.agreed or stop.poll():
+            raise KeyboardInterrupt  # what was cut short is no measurement
     machine = probe.probe_machine(comm)
     peak = _memory_mb()
     shared = {
