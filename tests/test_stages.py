@@ -122,6 +122,7 @@ def test_a_finished_run_goes_on_to_the_same_end(folder: Path) -> None:
     before = steps_of(folder, "run")
     outcome, _ = run(folder, "run", options, resume=True)
     assert outcome.exit_code == 0
+    assert [report["stage"] for report in outcome.summary.stages] == ["damped", "newton"]
     assert [e["residual_rms"] for e in steps_of(folder, "run")] == [e["residual_rms"] for e in before]
 
 

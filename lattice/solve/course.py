@@ -117,6 +117,9 @@ class Course:
     def go_on(self, kept: StateMeta) -> None:
         """Take up a kept state and the history behind it."""
         progress = Progress.of_record(kept.progress)
+        if kept.outcome != "running":
+            # The present leg has reported its end, and will do so again.
+            progress = replace(progress, reports=progress.reports[:-1])
         self.progress = progress
         self._make_system(kept.lattice, progress.made_with, self._loose_of(self.leg))
         self.progress = progress
