@@ -56,7 +56,6 @@ def _sheet(
 BOXES = {
     "1d-5k-direct": (*_film(22.0, 32.5, 84, 64), "direct"),
     "1d-15k-direct": (*_film(44.0, 40.0, 144, 104), "direct"),
-    "1d-34k-direct": (*_film(70.0, 60.0, 216, 156), "direct"),
     "1d-14k-coarse": (*_film(50.0, 50.0, 144, 100), "coarse"),
     "1d-58k-coarse": (*_film(100.0, 100.0, 288, 200), "coarse"),
     "2d-3k-direct": (*_sheet(9.0, 6.0, 16, 14), "direct"),
