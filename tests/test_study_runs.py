@@ -7,10 +7,15 @@ import time
 from pathlib import Path
 
 import pytest
+from mpi4py import MPI
 
 from lattice.cli.main import main
+from lattice.solve.petsc import start_petsc
 from lattice.study.counters import counter_library
-from lattice.study.rows import read_rows
+from lattice.study.measure import measure as run_measure
+from lattice.study.reader import read_study
+from lattice.study.report import write_report
+from lattice.study.rows import append_rows, describe_host, describe_point, read_rows
 from tests.test_study_files import JOB
 
 STUDY = """
@@ -127,3 +132,28 @@ def test_points_run_as_jobs_of_this_machine_one_after_another(folder: Path) -> N
         main(["study", str(folder / "two.toml"), "--ranks", "1,2", "--out", str(folder / "jobs"), "--report"])
         == 0
     )
+
+
+@pytest.mark.parametrize(
+    ("measure", "phases"),
+    [
+        ("kernels", {"halo", "FFT", "residual", "tangent"}),
+        ("files", {"write", "read"}),
+        ("solve", {"coarse solve"}),
+    ],
+)
+def test_every_measure_has_its_phases(folder: Path, tmp_path: Path, measure: str, phases: set[str]) -> None:
+    file = tmp_path / "one.toml"
+    text = (folder / "two.toml").read_text().replace("ranks = [2]", f'ranks = [1]\nmeasure = "{measure}"')
+    file.write_text(text.replace("linear_rtol = 1e-4", "linear_rtol = 1e-2\nnewton_steps = 1"))
+    study = read_study(file, str(tmp_path))
+    start_petsc([])
+    (row,) = run_measure(study.points[0], study.section, MPI.COMM_SELF, 1)
+    assert phases <= set(row["seconds"])
+    assert ("iterations" in row) == (measure == "solve")
+    described = (
+        describe_point(study, study.points[0], 1, False) | describe_host() | {"command": "lattice study"}
+    )
+    append_rows(study.folder, [described | row])
+    assert [path.name for path in write_report([study])] == ["report.html", "report.md"]
+    assert list(tmp_path.glob("**/state.h5")) == []
