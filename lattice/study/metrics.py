@@ -103,13 +103,9 @@ def standings(rows: Sequence[Row]) -> list[Standing]:
     sound = [row for row in bests if not row["oversubscribed"]]
     reference = min(sound, key=lambda row: row["ranks"], default=None)
     return [
-        _standing(row, taken, reference if reference and _comparable(row, reference) else None)
+        _standing(row, taken, reference if row["kind"] != "refinement" else None)
         for row, taken in zip(bests, times, strict=True)
     ]
-
-
-def _comparable(row: Row, reference: Row) -> bool:
-    return bool(row["kind"] != "refinement" or row["factor"] == reference["factor"])
 
 
 def _standing(row: Row, taken: Sequence[float], reference: Row | None) -> Standing:
