@@ -4,7 +4,8 @@ from __future__ import annotations
 
 import pytest
 
-from lattice.study.extrapolate import predict, turning_points
+from lattice.batch.sites import make_site
+from lattice.study.extrapolate import predict, site_machine, turning_points
 from lattice.study.model import back_test, calibrate, machine_of, phase_seconds
 from tests.study_rows import COEFFICIENTS, modelled_row
 
@@ -55,3 +56,12 @@ def test_counts_of_oversubscribed_points_are_used_but_not_their_times() -> None:
     found = predict(model, [*rows, crowded], machine_of(rows[-1]))
     true = predict(model, [*rows, modelled_row(8)], machine_of(rows[-1]))
     assert [p.whole for p in found] == pytest.approx([p.whole for p in true])
+
+
+def test_a_sites_numbers_replace_the_measured_ones() -> None:
+    measured = machine_of(modelled_row(2))
+    tables = {"scheduler": "local", "machine": {"latency_us": 1.5, "link_gb_s": 12.5}}
+    found = site_machine(make_site(tables, "site").machine, measured)
+    assert (found.latency, found.link, found.triad) == (1.5e-6, 12.5e9, measured.triad)
+    assert found.source == "stated in the site file"
+    assert "no network" in site_machine(None, measured).source
