@@ -4,13 +4,14 @@
 
 PYTHON = .venv/bin/python
 PYTEST_OPTIONS =
+WORKERS = 2
 JOB = jobs/film-first.toml
 RANKS = 2
 
 help:
 	@echo 'make setup      install what is missing (Debian 12), make .venv; seconds when all is there'
 	@echo 'make demo       solve $(JOB) on $(RANKS) ranks and show the result'
-	@echo 'make test       run the tests (PYTEST_OPTIONS="-k name" chooses)'
+	@echo 'make test       run the tests (PYTEST_OPTIONS="-k name" chooses, WORKERS=1: one by one)'
 	@echo 'make test-long  run the tests marked long, too'
 	@echo 'make lint       check style, types, docstrings, spelling'
 	@echo 'make format     let ruff format the code'
@@ -29,10 +30,10 @@ demo: setup-run
 	@$(PYTHON) .ci/show_summary.py runs/demo
 
 test: setup
-	$(PYTHON) -m pytest $(PYTEST_OPTIONS)
+	$(PYTHON) -m pytest -n $(WORKERS) --dist loadfile $(PYTEST_OPTIONS)
 
 test-long: setup
-	$(PYTHON) -m pytest -m 'long or not long' $(PYTEST_OPTIONS)
+	$(PYTHON) -m pytest -n $(WORKERS) --dist loadfile -m 'long or not long' $(PYTEST_OPTIONS)
 
 lint: setup
 	.venv/bin/ruff check

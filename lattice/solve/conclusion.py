@@ -10,6 +10,7 @@ from lattice.errors import LatticeError
 from lattice.store.runfolder import Summary, peak_memory_mb
 
 if TYPE_CHECKING:
+    from lattice.job.starts import MosaicStart
     from lattice.solve.course import Course, Ending
     from lattice.solve.recorder import Recorder
     from lattice.system.system import System
@@ -52,6 +53,9 @@ def conclude(course: Course, ending: Ending) -> tuple[int, Summary]:
     recorder.files.write_summary(summary)
     if ending.word == "converged":
         recorder.files.drop_reference()
+    start = course.job.start
+    if ending.word == "converged" and start.kind == "mosaic":
+        _compare_with_mosaic(course, start)
     if summary.mean_square < TRIVIAL:
         course.report("caution: the state is zero everywhere; start from a field nearer to a wanted one")
     if course.job.output.picture:
@@ -68,6 +72,23 @@ def _classification(recorder: Recorder, system: System, x: Any) -> dict[str, Any
     for label, text in lines(found, system.law.components, values, system.law.dimensions):
         recorder.report(f"{label or '':<12}{text}")
     return found.record()
+
+
+def _compare_with_mosaic(course: Course, start: MosaicStart) -> None:
+    """Tell what has become of every member of the mosaic the run began from."""
+    from lattice.starts.mosaic import report_settled
+
+    system, x = course.system, course.x
+    report_settled(
+        start,
+        system.whole_lattice,
+        system.values_of(x),
+        system.law,
+        system.whole_field(x),
+        system.whole_blocks.block,
+        course.comm,
+        course.report,
+    )
 
 
 def _draw(recorder: Recorder) -> None:

@@ -24,7 +24,7 @@ if TYPE_CHECKING:
     from lattice.system.system import System
 
 Report = Callable[[str], None]
-WRITING_SHARE = 0.2
+WRITING_SHARE = 0.025
 """Largest share of the time that goes into state files where steps are quick."""
 
 
