@@ -10,7 +10,6 @@ from lattice.errors import LatticeError
 from lattice.store.runfolder import Summary, peak_memory_mb
 
 if TYPE_CHECKING:
-    from lattice.job.starts import MosaicStart
     from lattice.solve.course import Course, Ending
     from lattice.solve.recorder import Recorder
     from lattice.system.system import System
@@ -74,7 +73,7 @@ def _classification(recorder: Recorder, system: System, x: Any) -> dict[str, Any
     return found.record()
 
 
-def _compare_with_mosaic(course: Course, start: MosaicStart) -> None:
+def _compare_with_mosaic(course: Course, start: Any) -> None:
     """Tell what has become of every member of the mosaic the run began from."""
     from lattice.starts.mosaic import report_settled
 
