@@ -210,7 +210,8 @@ def load_calibration(path: Path) -> Calibration | None:
     except (ValueError, TypeError, KeyError) as error:
         what = f"{error} is missing" if isinstance(error, KeyError) else str(error)
         raise InputError(
-            f"is no calibration of this program: {what}; make it anew with `lattice size --calibrate`", file=str(path)
+            f"is no calibration of this program: {what}; make it anew with `lattice size --calibrate`",
+            file=str(path),
         ) from None
 
 
