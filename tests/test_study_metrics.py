@@ -80,6 +80,14 @@ def test_oversubscribed_points_have_no_efficiency() -> None:
     assert points[2].speed_up is points[2].karp_flatt is points[2].pop is None
 
 
+def test_a_point_whose_cores_other_work_shared_has_no_efficiency() -> None:
+    busy = row(2, {"rest": 2.0}, cores=2, load_average=5.2)
+    _, two = standings([row(1, {"rest": 4.0}, cores=2, load_average=1.2), busy])
+    assert two.efficiency is None
+    _, two = standings([row(1, {"rest": 4.0}, cores=2), row(2, {"rest": 2.0}, cores=2, load_average=2.4)])
+    assert two.efficiency == pytest.approx(1.0)
+
+
 def test_an_oversubscribed_point_is_no_reference() -> None:
     rows = [row(1, {"rest": 4.0}, oversubscribed=True), row(2, {"rest": 2.0})]
     assert [p.efficiency for p in standings(rows)] == [None, 1.0]

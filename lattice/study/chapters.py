@@ -10,7 +10,7 @@ from lattice.report.document import Caution, Chapter, Commands, Part, Table, Tex
 from lattice.study import figures
 from lattice.study.extrapolate import Prediction
 from lattice.study.fits import Fit, fit_amdahl, fit_gustafson
-from lattice.study.metrics import LINE, Row, Standing, groups, seconds_of, standings
+from lattice.study.metrics import LINE, Row, Standing, groups, is_sound, seconds_of, standings
 from lattice.study.model import phase_seconds
 from lattice.study.schema import KINDS
 
@@ -52,8 +52,9 @@ def study_chapters(study: Study, rows: Sequence[Row], predicted: Sequence[Predic
 
 
 OVERSUBSCRIBED = (
-    "Rows in italics have more ranks than cores. Their counts (iterations, messages, bytes, operations,"
-    " memory) are exact and used; their times are shown for completeness and enter no efficiency."
+    "Rows in italics shared cores: more ranks than cores, or other work at the same time (load). Their counts"
+    " (iterations, messages, bytes, operations, memory) are exact and used; their times are shown for"
+    " completeness and enter no efficiency."
 )
 
 
@@ -108,7 +109,7 @@ def _crowded(points: Sequence[Standing]) -> frozenset[int]:
 
 def fit_parts(rows: Sequence[Row], points: Sequence[Standing]) -> list[Part]:
     """Return what Amdahl's or Gustafson's law says of the points that are not oversubscribed."""
-    sound = [row for row in rows if not row["oversubscribed"]]
+    sound = [row for row in rows if is_sound(row)]
     if len({row["ranks"] for row in sound}) < 2 or sound[0]["kind"] == "refinement":
         return []
     counts = sorted({row["ranks"] for row in sound})

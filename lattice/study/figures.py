@@ -96,8 +96,8 @@ def phases_figure(name: str, points: Sequence[Standing]) -> Figure:
     )
     return Figure(
         f"{name}-phases",
-        "Shares of the phases, each of its slowest rank. Hatched: more ranks than cores, whose times say"
-        " nothing of a machine with as many cores.",
+        "Shares of the phases, each of its slowest rank. Hatched: cores were shared; those times say nothing"
+        " of a machine with a free core for every rank.",
         f"Stacked bars of the shares of the phases. {told}.",
         draw_chart(f"{name}-phases", draw),
     )

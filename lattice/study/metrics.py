@@ -35,6 +35,8 @@ if TYPE_CHECKING:
     from lattice.study.reader import Study
 
 Row = dict[str, Any]
+SPARE_LOAD = 1.0
+"""Load beyond the cores that a study's own launcher and start may cause."""
 LINE = 0.8
 """The efficiency that allocation committees usually ask for (common practice)."""
 
@@ -58,7 +60,7 @@ class Standing:
     ----------
     ranks : int
     oversubscribed : bool
-        More ranks than cores: its times are shown, and enter no efficiency.
+        Cores were shared, by these ranks or with other work: times are shown, and enter no efficiency.
     best, middle : float
         Shortest and median over repeats of the slowest rank's wall time, s.
     repeats : int
@@ -88,6 +90,17 @@ def seconds_of(row: Row) -> float:
     return float(row["seconds"]["whole"]["max"])
 
 
+def is_disturbed(row: Row) -> bool:
+    """Tell whether other work shared the cores while a row was measured, by the machine's load."""
+    load = float(row["load_average"])
+    return bool(load > row["cores"] + SPARE_LOAD and load > row["ranks"] + SPARE_LOAD)
+
+
+def is_sound(row: Row) -> bool:
+    """Tell whether a row's times may enter an efficiency: a core for every rank, and no other work."""
+    return not row["oversubscribed"] and not is_disturbed(row)
+
+
 def groups(rows: Sequence[Row]) -> list[list[Row]]:
     """Return rows by point, in the order they first appear."""
     found: dict[str, list[Row]] = {}
@@ -100,7 +113,7 @@ def standings(rows: Sequence[Row]) -> list[Standing]:
     """Return the points of one study with their metrics; `rows` are of that study alone."""
     bests = [min(group, key=seconds_of) for group in groups(rows)]
     times = [[seconds_of(row) for row in group] for group in groups(rows)]
-    sound = [row for row in bests if not row["oversubscribed"]]
+    sound = [row for row in bests if is_sound(row)]
     reference = min(sound, key=lambda row: row["ranks"], default=None)
     return [
         _standing(row, taken, reference if row["kind"] != "refinement" else None)
@@ -109,7 +122,7 @@ def standings(rows: Sequence[Row]) -> list[Standing]:
 
 
 def _standing(row: Row, taken: Sequence[float], reference: Row | None) -> Standing:
-    crowded = bool(row["oversubscribed"])
+    crowded = not is_sound(row)
     plain = Standing(row["ranks"], crowded, min(taken), median(taken), len(taken), row)
     if crowded or reference is None:
         return plain

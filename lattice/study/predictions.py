@@ -9,7 +9,7 @@ from typing import TYPE_CHECKING, Any
 
 from lattice.report.document import Caution, Chapter, Part, Table, Text
 from lattice.study.extrapolate import Prediction, predict, site_machine, turning_points
-from lattice.study.metrics import Row, groups, seconds_of
+from lattice.study.metrics import Row, groups, is_sound, seconds_of
 from lattice.study.model import MAIN, Machine, Model, Trial, back_test, calibrate, machine_of
 
 if TYPE_CHECKING:
@@ -38,7 +38,8 @@ def alike(row: Row, other: Row) -> bool:
 
 def calibration_rows(rows: Sequence[Row], every: Sequence[Row]) -> list[Row]:
     """Return the points, one row each, that a study's model is calibrated on."""
-    return [r for r in best_of_points(every) if alike(r, rows[0]) and not r["oversubscribed"]]
+    found = [r for r in best_of_points(every) if alike(r, rows[0]) and not r["oversubscribed"]]
+    return [r for r in found if is_sound(r)] or found
 
 
 def predictions_of(rows: Sequence[Row], every: Sequence[Row], site: Any) -> Outlook | None:
@@ -62,6 +63,8 @@ def prediction_chapter(
     if not told:
         return []
     parts: list[Part] = [Caution(WARNING), Text(METHOD)]
+    if not all(is_sound(row) for _, rows, _ in told for row in calibration_rows(rows, every)):
+        parts.append(Caution(DISTURBED))
     parts += _back_test_parts([rows for _, rows, _ in told], every)
     for study, _, outlook in told:
         parts += [_table(study, outlook), Text(_turns(study, outlook))]
@@ -71,6 +74,10 @@ def prediction_chapter(
 WARNING = (
     "Everything in this chapter is a prediction, not a measurement. Before you ask for core hours on its"
     " strength, measure a few points on the machine you ask for: `lattice study FILE --site SITE`."
+)
+DISTURBED = (
+    "No undisturbed point was there to calibrate on: the coefficients come from times that other work on the"
+    " same cores lengthened. What follows shows the method; its seconds are no estimate."
 )
 METHOD = (
     "Per phase: coefficient x work of the busiest rank / share of the memory bandwidth + latency x"
