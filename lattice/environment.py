@@ -73,6 +73,26 @@ def prepare() -> None:
     set_defaults(os.environ)
 
 
+LAUNCHER_VARIABLES = (
+    "OMPI_COMM_WORLD_",
+    "OMPI_MCA_orte_",
+    "OMPI_MCA_ess",
+    "PMIX_",
+    "PMI_",
+    "HYDI_",
+    "MPI_LOCAL",
+)
+"""Beginnings of variables by which a launcher tells a process that it is a rank."""
+
+
+def without_launcher(environ: Mapping[str, str]) -> dict[str, str]:
+    """Return the environment of a process that is not a rank of whatever started this one.
+
+    A process in which MPI has been started has such variables too, and a launcher run by it would fail.
+    """
+    return {name: value for name, value in environ.items() if not name.startswith(LAUNCHER_VARIABLES)}
+
+
 def set_defaults(environ: MutableMapping[str, str]) -> None:
     """Set thread counts, HDF5 driver and kernel cache where they are absent.
 

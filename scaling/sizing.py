@@ -132,7 +132,8 @@ def find_out(name: str, case: Case, folder: Path) -> dict[str, Any]:
 def predict(name: str, case: Case, row: dict[str, Any], calibration: Any, folder: Path) -> dict[str, Any]:
     """Return what is predicted for a run, from what was found out about it, beside what was measured."""
     from lattice.job.reader import load_job
-    from lattice.sizing.estimate import Assumptions, estimate
+    from lattice.sizing.estimate import estimate
+    from lattice.sizing.figures import Assumptions
     from lattice.sizing.knowledge import Knowledge
 
     job, summary = load_job(_write(case, folder)), row["summary"]

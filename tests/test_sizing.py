@@ -26,8 +26,9 @@ from lattice.sizing.calibration import (
     load_calibration,
     save_calibration,
 )
-from lattice.sizing.estimate import Assumptions, Estimate, estimate
+from lattice.sizing.estimate import estimate
 from lattice.sizing.factors import growth
+from lattice.sizing.figures import Assumptions, Estimate
 from lattice.sizing.fit import fit_speeds
 from lattice.sizing.layouts import candidates, cheapest, compare, lay_out, warnings_of
 from lattice.sizing.measure import Sample

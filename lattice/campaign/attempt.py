@@ -20,6 +20,7 @@ from contextlib import suppress
 from pathlib import Path
 
 from lattice.campaign.folder import MemberFiles
+from lattice.environment import without_launcher
 from lattice.errors import LatticeError
 from lattice.store.lock import FolderLock, read_holder
 from lattice.store.replacement import discard, process_alive, write_text_whole
@@ -29,9 +30,6 @@ STOP_GRACE = 25.0
 KILL_GRACE = 5.0
 """Seconds between its termination and its end by force."""
 _NO_LOCKS = (errno.ENOLCK, errno.EOPNOTSUPP, errno.ENOSYS)
-_LAUNCHERS = ("OMPI_COMM_WORLD_", "OMPI_MCA_orte_", "OMPI_MCA_ess", "PMIX_", "PMI_", "HYDI_", "MPI_LOCAL")
-"""Beginnings of variables by which a launcher tells a process that it is a rank."""
-
 LOST = "lost"
 """How an attempt that nobody waited for has ended."""
 
@@ -180,8 +178,7 @@ def _first_process_ended(files: MemberFiles) -> bool:
 
 def own_environment(environ: Mapping[str, str]) -> dict[str, str]:
     """Return the environment of a member's process, which is not a rank of whatever started this one."""
-    kept = {name: value for name, value in environ.items() if not name.startswith(_LAUNCHERS)}
-    return {**kept, "PYTHONUNBUFFERED": "1"}
+    return {**without_launcher(environ), "PYTHONUNBUFFERED": "1"}
 
 
 def solve_command(files: MemberFiles, ranks: int, launcher: str | None, resume: bool) -> list[str]:

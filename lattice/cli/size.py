@@ -15,7 +15,7 @@ if TYPE_CHECKING:
     from lattice.batch.site import Site
     from lattice.job.schema import Job
     from lattice.sizing.calibration import Calibration
-    from lattice.sizing.estimate import Assumptions, Estimate
+    from lattice.sizing.figures import Assumptions, Estimate
     from lattice.sizing.knowledge import Knowledge
     from lattice.sizing.layouts import Layout
 
@@ -158,7 +158,7 @@ def _launch(options: argparse.Namespace) -> Any:
 def _size(options: argparse.Namespace) -> int:
     from lattice.batch.sites import load_site
     from lattice.job.reader import load_job_with_cautions
-    from lattice.sizing.estimate import Assumptions
+    from lattice.sizing.figures import Assumptions
 
     name, site = load_site(options.site)
     job, _ = load_job_with_cautions(options.job, options.overrides)

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import os
 import subprocess
 import sys
 import tempfile
@@ -10,8 +11,8 @@ from collections.abc import Callable, Sequence
 from pathlib import Path
 from typing import Any
 
+from lattice.environment import without_launcher
 from lattice.errors import LatticeError
-from lattice.sizing.probe import MARK
 
 Launch = Callable[[int, Sequence[str]], list[str]]
 """Makes the command line that runs a program on a number of ranks."""
@@ -20,6 +21,10 @@ Launch = Callable[[int, Sequence[str]], list[str]]
 def alone(ranks: int, program: Sequence[str]) -> list[str]:
     """Return the command line of a program on one rank, without a launcher."""
     return list(program)
+
+
+MARK = "lattice-size:"
+"""Begins the line of a probe's answer."""
 
 
 def ask(task: str, question: dict[str, Any], ranks: int, launch: Launch, timeout: float) -> dict[str, Any]:
@@ -33,7 +38,7 @@ def ask(task: str, question: dict[str, Any], ranks: int, launch: Launch, timeout
     with tempfile.TemporaryDirectory(prefix="lattice-size-") as folder:
         path = Path(folder) / "question.json"
         path.write_text(json.dumps(question), encoding="utf-8")
-        program = [sys.executable, "-m", "lattice.sizing.probe", task, *([str(path)] if question else [])]
+        program = [sys.executable, "-m", "lattice.cli.sizing_probe", task, *([str(path)] if question else [])]
         command = (launch if ranks > 1 else alone)(ranks, program)
         try:
             done = subprocess.run(
@@ -43,6 +48,7 @@ def ask(task: str, question: dict[str, Any], ranks: int, launch: Launch, timeout
                 timeout=timeout,
                 check=False,
                 stdin=subprocess.DEVNULL,
+                env=without_launcher(os.environ),
             )
         except subprocess.TimeoutExpired:
             raise LatticeError(f"no answer within {timeout:g} s on {ranks} rank(s)") from None

@@ -7,8 +7,9 @@ from typing import TYPE_CHECKING, Any
 
 from lattice.errors import LatticeError
 from lattice.sizing.asking import Launch, alone, ask
-from lattice.sizing.estimate import Assumptions, lattices_of, matrices_of
+from lattice.sizing.estimate import lattices_of, matrices_of
 from lattice.sizing.factors import Factors
+from lattice.sizing.figures import Assumptions
 from lattice.sizing.knowledge import Coarse, Counter, Knowledge, assumed_coarse, coarse_of_answer
 from lattice.solve.registry import DIRECT_UNKNOWNS
 

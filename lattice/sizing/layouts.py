@@ -10,7 +10,8 @@ from lattice.batch.duration import format_duration
 from lattice.batch.site import Queue, Site
 from lattice.errors import InputError
 from lattice.sizing.calibration import Calibration
-from lattice.sizing.estimate import LEAST_UNKNOWNS, Estimate
+from lattice.sizing.estimate import LEAST_UNKNOWNS
+from lattice.sizing.figures import Estimate
 
 MEMORY_ERROR = 0.2
 """Stated error of the memory, as a share."""

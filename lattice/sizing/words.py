@@ -7,7 +7,7 @@ from datetime import UTC, datetime
 
 from lattice.batch.duration import format_duration
 from lattice.sizing.calibration import Calibration
-from lattice.sizing.estimate import LegEstimate
+from lattice.sizing.figures import LegEstimate
 from lattice.sizing.layouts import MEMORY_ERROR, TIME_ERROR, Layout
 
 OLD_DAYS = 180

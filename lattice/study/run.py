@@ -2,12 +2,14 @@
 
 from __future__ import annotations
 
+import os
 import subprocess
 import sys
 import time
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 
+from lattice.environment import without_launcher
 from lattice.study.metrics import efficiency_of
 from lattice.study.points import Point
 from lattice.study.reader import Study
@@ -93,7 +95,12 @@ def _measure(study: Study, point: Point, launcher: str | None, options: Sequence
     if launcher is not None:
         command += ["--launcher", launcher]
     process = subprocess.Popen(
-        command, stdin=subprocess.DEVNULL, stdout=subprocess.DEVNULL, stderr=subprocess.PIPE, text=True
+        command,
+        stdin=subprocess.DEVNULL,
+        stdout=subprocess.DEVNULL,
+        stderr=subprocess.PIPE,
+        text=True,
+        env=without_launcher(os.environ),
     )
     try:
         _, said = process.communicate(timeout=study.section.point_seconds)

@@ -1,6 +1,6 @@
 """A process of its own, on one rank or several, that measures or analyses and answers with JSON.
 
-    python -m lattice.sizing.probe TASK [FILE]
+    python -m lattice.cli.sizing_probe TASK [FILE]
 
 Started by `lattice.sizing.asking`; a failure of PETSc or MPI there is a message here.
 """
@@ -21,14 +21,13 @@ if TYPE_CHECKING:
 
     from lattice.job.schema import Job
 
-MARK = "lattice-size:"
-
 
 def main() -> int:
     """Do the task named on the command line."""
     environment.prepare()
     from mpi4py import MPI
 
+    from lattice.sizing.asking import MARK
     from lattice.solve.petsc import start_petsc
 
     start_petsc([])
