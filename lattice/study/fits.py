@@ -4,8 +4,10 @@ Ordinary least squares on all repeats of all points that are not oversubscribed;
 linear model with normal errors, at 95 %. Repeats of one machine in one hour know nothing of another day:
 the bands are of this scatter only.
 
-References (from memory)
-------------------------
+References
+----------
+All from memory.
+
 .. [1] G. M. Amdahl, AFIPS Conf. Proc. 30 (1967) 483-485: T(p) = T(1) (f + (1 - f)/p).
 .. [2] J. L. Gustafson, Comm. ACM 31 (1988) 532-533: S(p) = p + (1 - p) s.
 .. [3] N. R. Draper, H. Smith, "Applied Regression Analysis", 3rd ed., Wiley 1998, chapters 5 and 8.

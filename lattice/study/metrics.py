@@ -12,8 +12,10 @@ fewest ranks measured.
   computation scaling = useful time of all ranks at `p0` over that at `p` (for weak studies that per rank);
   global efficiency = parallel efficiency x computation scaling.
 
-References (from memory)
-------------------------
+References
+----------
+All from memory.
+
 .. [1] G. M. Amdahl, "Validity of the single processor approach to achieving large scale computing
    capabilities", AFIPS Conf. Proc. 30 (1967) 483-485.
 .. [2] J. L. Gustafson, "Reevaluating Amdahl's law", Comm. ACM 31 (1988) 532-533.

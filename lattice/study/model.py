@@ -10,8 +10,10 @@ of the orthogonalisation, as PETSc counts them), the share is what a core keeps 
 others use it too (triad), and `rounds` is `2*ceil(log2 p)` per reduction or other collective. Coefficients
 are fitted to measured points that are not oversubscribed; latency and bandwidth are measured or the site's.
 
-References (from memory)
-------------------------
+References
+----------
+All from memory.
+
 .. [1] S. Williams, A. Waterman, D. Patterson, "Roofline", Comm. ACM 52 (2009) 65-76.
 .. [2] R. W. Hockney, "The communication challenge for MPP", Parallel Computing 20 (1994) 389-398.
 .. [3] R. Thakur, R. Rabenseifner, W. Gropp, "Optimization of collective communication operations in MPICH",
