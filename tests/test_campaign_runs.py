@@ -156,6 +156,7 @@ def kill_when(process: subprocess.Popen[str], claim: Callable[[], bool], number:
     process.send_signal(number)
 
 
+@pytest.mark.long
 def test_after_a_kill_orphans_are_taken_in_and_nothing_runs_twice(
     uninterrupted: tuple[Path, str], tmp_path: Path
 ) -> None:
@@ -210,6 +211,7 @@ def test_a_stopped_campaign_goes_on(
     assert results(tmp_path) == results(uninterrupted[0])
 
 
+@pytest.mark.long
 def test_a_killed_member_harms_no_other_and_one_runs_alone(tmp_path: Path) -> None:
     path, files = written(tmp_path, ENDLESS), CampaignFolder(tmp_path / "runs")
     campaign = begin(path, "--at-once", "2")

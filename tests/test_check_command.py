@@ -78,6 +78,7 @@ def test_observe_shows_bands_and_compares_states_with_a_march(wave, tmp_path, ca
     )
 
 
+@pytest.mark.long
 def test_ranks_change_nothing(tmp_path):
     lattice, state = odd_film(17.631043132046, 36, 28)
     path = store(tmp_path / "state.h5", FILM, lattice, state, ("period", "drift_x"))

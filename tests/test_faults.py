@@ -210,6 +210,7 @@ def remount(folder: Path, options: str) -> None:
     subprocess.run(["mount", "-o", f"remount,{options}", str(folder)], check=True)
 
 
+@pytest.mark.long
 def test_a_full_disk_costs_no_state_and_is_told(small_disk: Path, project: Path) -> None:
     folder = small_disk / "run"
     options = ("solve", "film.toml", "--out", folder, "--ranks", "2", "--resume")

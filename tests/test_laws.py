@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import pickle
 from dataclasses import replace
 from itertools import product
 
@@ -17,6 +18,7 @@ from lattice.laws.forcing import find_aperiodic_axes
 from lattice.laws.law import Deriv, Parameter, Reflection, symbol
 from lattice.laws.symmetry import symmetries_at
 from lattice.laws.writing import write_equation
+from lattice.starts.stepper import Stepper
 from tests.periodic_fields import Box, right_hand_sides
 
 NAMES = [
@@ -616,3 +618,9 @@ def test_laws_can_be_compared_and_replaced_but_not_changed():
     assert replace(law, title="x").equations == law.equations
     with pytest.raises(AttributeError):
         law.title = "y"
+
+
+def test_a_law_that_has_been_used_can_be_sent_to_other_ranks() -> None:
+    law = load_law("kuramoto-sivashinsky")
+    Stepper(law, (1, 16), (1.0, 10.0), {**law.defaults, "length_x": 10.0}, 0.1)
+    assert pickle.loads(pickle.dumps(law)) == law

@@ -93,6 +93,7 @@ def test_a_run_is_cancelled_while_it_waits_and_while_it_runs(project: Path, clus
     assert view(second, cluster.environment)["outcome"] == "cancelled"
 
 
+@pytest.mark.long
 def test_runs_are_told_from_their_files_while_the_controller_is_down(project: Path, cluster: Cluster) -> None:
     folder = project / "run"
     submit(project, cluster, "film.toml", "--out", "run")

@@ -142,6 +142,10 @@ class Law:
     observables: tuple[tuple[str, str, str], ...] = ()
     _cache: dict[str, object] = field(default_factory=dict, repr=False, compare=False)
 
+    def __getstate__(self) -> dict[str, object]:
+        """Leave out what is derived when a law goes to other ranks: compiled functions cannot be sent."""
+        return {**self.__dict__, "_cache": {}}
+
     @property
     def defaults(self) -> dict[str, float]:
         """Default value of every parameter, by name."""

@@ -12,7 +12,7 @@ from numpy.typing import ArrayLike, NDArray
 
 Real = NDArray[np.float64]
 
-ON_NODE = 1e-9
+ON_NODE = 1e-11
 """Distance in nodes below which a place is the node: round-off of coordinates."""
 STENCIL = 8
 """Nodes of a local row: a polynomial of degree 7."""
