@@ -12,6 +12,7 @@ from __future__ import annotations
 
 import argparse
 import json
+import os
 import subprocess
 import sys
 import tempfile
@@ -20,7 +21,7 @@ from dataclasses import asdict, dataclass
 from pathlib import Path
 from typing import Any
 
-from lattice.environment import prepare
+from lattice.environment import prepare, without_launcher
 
 prepare()
 
@@ -100,7 +101,8 @@ def _solve(case: Case, folder: Path, steps: int = STEPS) -> dict[str, Any]:
     command = [sys.executable, "-m", "lattice", "solve", str(path), "--out", str(folder / "run"), "--force"]
     command += ["--ranks", str(case.ranks), "--set", f"solve.newton_steps={steps}"]
     began = time.perf_counter()
-    done = subprocess.run(command, capture_output=True, text=True, check=False)
+    alone = without_launcher(os.environ)  # this process may have started MPI
+    done = subprocess.run(command, capture_output=True, text=True, check=False, env=alone)
     seconds = time.perf_counter() - began
     try:
         summary: dict[str, Any] = json.loads((folder / "run" / "summary.json").read_text())
